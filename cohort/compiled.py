@@ -1,0 +1,245 @@
+"""The only import of numba and llvmlite: compiled loops, compiled programs, and where compiled code is kept.
+
+Two kinds of machine code exist. Loops over subjects and steps are ordinary Python functions under `jit`, and know
+no model. A `Program` (straight-line arithmetic derived from a model's equations) is compiled by `compile_program`
+for one or several lanes and reached through its address, so a new model costs its own few milliseconds of
+compilation and never a new loop. Both are kept in a private folder keyed by a digest of all sources, since a
+compiled loop does not notice that a function it calls has changed.
+"""
+
+from __future__ import annotations
+
+import ctypes
+import functools
+import hashlib
+import os
+import platform
+import stat
+import sys
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any, TypeVar
+
+import llvmlite
+import llvmlite.binding as llvm
+import numba
+from llvmlite import ir
+from numba.core import cgutils, types
+from numba.extending import intrinsic
+
+from cohort.program import Program
+
+F = TypeVar("F", bound=Callable[..., Any])
+
+LANES = 4
+"""How many subjects one vector holds. More than this runs out of registers on common processors."""
+
+_I64 = ir.IntType(64)
+_F64 = ir.DoubleType()
+_ROUNDER = 6755399441055744.0
+
+
+# ---- where compiled code is kept ---------------------------------------------------------------------------------
+
+
+@functools.cache
+def kernel_identity() -> str:
+    """A digest of every source in the package that numbers can depend on, and of the compilers' versions."""
+    digest = hashlib.blake2b(digest_size=16)
+    root = Path(__file__).parent
+    names = [root / "program.py", root / "compiled.py"]
+    for room in ("model", "simulate", "measure", "observe", "population"):
+        names += sorted((root / room).rglob("*.py"))
+    for path in names:
+        digest.update(path.relative_to(root).as_posix().encode() + b"\0" + path.read_bytes())
+    return digest.hexdigest()
+
+
+def _cache_parent() -> Path | None:
+    stated = os.environ.get("COHORT_CACHE_DIR") or os.environ.get("XDG_CACHE_HOME")
+    if stated:
+        return Path(stated)
+    home = os.environ.get("HOME")
+    return Path(home) / ".cache" if home else None
+
+
+def _is_private(folder: Path) -> bool:
+    found = folder.lstat()
+    return stat.S_ISDIR(found.st_mode) and found.st_uid == os.getuid() and not found.st_mode & 0o077
+
+
+@functools.cache
+def cache_folder() -> Path | None:
+    """Return the folder for compiled code, or None where no private, writable one can be had (then none is kept)."""
+    parent = _cache_parent()
+    if parent is None:
+        return None
+    versions = f"{sys.version_info[:2]}{numba.__version__}{llvmlite.__version__}{_cpu()}{platform.machine()}"
+    key = hashlib.blake2b((kernel_identity() + versions).encode(), digest_size=12).hexdigest()
+    folder = parent / "ultradian-cohort" / key
+    try:
+        folder.parent.mkdir(mode=0o700, parents=True, exist_ok=True)
+        folder.mkdir(mode=0o700, exist_ok=True)
+        if not (_is_private(folder.parent) and _is_private(folder)):
+            return None
+        with tempfile.TemporaryFile(dir=folder):
+            return folder
+    except OSError:
+        return None
+
+
+def jit(function: F) -> F:
+    """Compile a loop: no Python objects, the interpreter's lock released, no reordering of arithmetic."""
+    folder = cache_folder()
+    if folder is not None:
+        numba.config.CACHE_DIR = str(folder)
+    compiled: F = numba.njit(nogil=True, cache=folder is not None, error_model="numpy", boundscheck=False)(function)
+    return compiled
+
+
+# ---- programs to machine code ------------------------------------------------------------------------------------
+
+
+@functools.cache
+def _cpu() -> tuple[str, str]:
+    return llvm.get_host_cpu_name(), llvm.get_host_cpu_features().flatten()
+
+
+class _Emitter:
+    """Writes one program as LLVM instructions on vectors of `lanes` doubles."""
+
+    def __init__(self, module: ir.Module, builder: ir.IRBuilder, lanes: int) -> None:
+        self.module, self.builder, self.lanes = module, builder, lanes
+        self.real = ir.VectorType(_F64, lanes) if lanes > 1 else _F64
+        self.whole = ir.VectorType(_I64, lanes) if lanes > 1 else _I64
+
+    def constant(self, kind: ir.Type, value: float) -> ir.Constant:
+        return ir.Constant(kind, [value] * self.lanes if self.lanes > 1 else value)
+
+    def bits(self, value: ir.Value) -> ir.Value:
+        return self.builder.bitcast(value, self.whole)
+
+    def number(self, value: ir.Value) -> ir.Value:
+        return self.builder.bitcast(value, self.real)
+
+    def intrinsic(self, name: str, *operands: ir.Value) -> ir.Value:
+        suffix = f"v{self.lanes}f64" if self.lanes > 1 else "f64"
+        kind = ir.FunctionType(self.real, [self.real] * len(operands))
+        return self.builder.call(cgutils.get_or_insert_function(self.module, kind, f"llvm.{name}.{suffix}"), operands)
+
+    def scale2(self, a: ir.Value, k: ir.Value) -> ir.Value:
+        shifted = self.bits(self.builder.fadd(k, self.constant(self.real, _ROUNDER)))
+        power = self.builder.shl(shifted, self.constant(self.whole, 52))
+        return self.number(self.builder.add(self.bits(a), power))
+
+    def mantissa(self, x: ir.Value) -> ir.Value:
+        kept = self.builder.and_(self.bits(x), self.constant(self.whole, 0x000FFFFFFFFFFFFF))
+        return self.number(self.builder.or_(kept, self.constant(self.whole, 0x3FE0000000000000)))
+
+    def exponent(self, x: ir.Value) -> ir.Value:
+        shifted = self.builder.lshr(self.bits(x), self.constant(self.whole, 52))
+        masked = self.builder.and_(shifted, self.constant(self.whole, 0x7FF))
+        large = self.number(self.builder.or_(masked, self.constant(self.whole, 0x4330000000000000)))
+        return self.builder.fsub(large, self.constant(self.real, 4503599627370496.0 + 1022.0))
+
+    def emit(self, name: str, operands: list[ir.Value], value: float) -> ir.Value:
+        b = self.builder
+        if name == "const":
+            return self.constant(self.real, value)
+        if name == "if_less":
+            return b.select(b.fcmp_ordered("<", operands[0], operands[1]), operands[2], operands[3])
+        if name in ("scale2", "mantissa", "exponent"):
+            return getattr(self, name)(*operands)
+        if name in ("fma", "sqrt", "abs"):
+            return self.intrinsic("fabs" if name == "abs" else name, *operands)
+        plain = {"add": b.fadd, "sub": b.fsub, "mul": b.fmul, "div": b.fdiv, "neg": b.fneg}
+        return plain[name](*operands)
+
+
+def _module(program: Program, lanes: int) -> ir.Module:
+    module = ir.Module(name=program.name)
+    pointer = ir.PointerType(_F64)
+    function = ir.Function(module, ir.FunctionType(ir.VoidType(), [pointer, pointer]), "program")
+    for argument in function.args:
+        argument.add_attribute("noalias")
+    builder = ir.IRBuilder(function.append_basic_block())
+    emitter = _Emitter(module, builder, lanes)
+
+    def place(base: ir.Value, index: int) -> ir.Value:
+        at = builder.gep(base, [ir.Constant(_I64, index * lanes)])
+        return builder.bitcast(at, ir.PointerType(emitter.real))
+
+    values = [builder.load(place(function.args[0], i), align=8) for i in range(program.n_inputs)]
+    for name, operands, value in program.ops:
+        values.append(emitter.emit(name, [values[o] for o in operands], value))
+    for i, o in enumerate(program.outputs):
+        builder.store(values[o], place(function.args[1], i), align=8)
+    builder.ret_void()
+    return module
+
+
+@functools.cache
+def _start_llvm() -> None:
+    llvm.initialize_native_target()
+    llvm.initialize_native_asmprinter()
+
+
+def _machine_code(program: Program, lanes: int) -> bytes:
+    """Return the program's object file, from the private folder where it is kept or freshly compiled."""
+    folder = cache_folder()
+    kept = folder / f"{program.key}-{lanes}.o" if folder else None
+    if kept is not None and kept.exists():
+        return kept.read_bytes()
+    parsed = llvm.parse_assembly(str(_module(program, lanes)))
+    cpu, features = _cpu()
+    target = llvm.Target.from_triple(llvm.get_process_triple())
+    machine = target.create_target_machine(cpu=cpu, features=features, opt=2, reloc="pic", codemodel="default")
+    code: bytes = machine.emit_object(parsed)
+    if kept is not None:
+        with tempfile.NamedTemporaryFile(dir=kept.parent, delete=False) as file:
+            file.write(code)
+        os.replace(file.name, kept)
+    return code
+
+
+_LOADED: dict[tuple[str, int], tuple[int, Any]] = {}
+
+
+def compile_program(program: Program, lanes: int = 1) -> int:
+    """Return the address of `void f(const double *inputs, double *outputs)`, value i of lane l at [i * lanes + l]."""
+    _start_llvm()
+    key = (program.key, lanes)
+    if key not in _LOADED:
+        empty = llvm.parse_assembly("")
+        empty.triple = llvm.get_process_triple()
+        machine = llvm.Target.from_triple(empty.triple).create_target_machine()
+        engine = llvm.create_mcjit_compiler(empty, machine)
+        engine.add_object_file(llvm.ObjectFileRef.from_data(_machine_code(program, lanes)))
+        engine.finalize_object()
+        _LOADED[key] = (engine.get_function_address("program"), engine)
+    return _LOADED[key][0]
+
+
+@intrinsic
+def call_program(typing: Any, address: Any, inputs: Any, outputs: Any) -> Any:
+    """Inside `jit` code: run the compiled program at `address` on two C-contiguous arrays of doubles."""
+
+    def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        pointer = ir.PointerType(_F64)
+        kind = ir.FunctionType(ir.VoidType(), [pointer, pointer])
+        function = builder.inttoptr(arguments[0], kind.as_pointer())
+        data = [
+            context.make_array(array)(context, builder, value).data
+            for array, value in zip(signature.args[1:], arguments[1:], strict=True)
+        ]
+        builder.call(function, [builder.bitcast(place, pointer) for place in data])
+        return context.get_dummy_value()
+
+    return types.void(types.int64, inputs, outputs), generate
+
+
+def run_compiled(program: Program, inputs: Any, outputs: Any, lanes: int = 1) -> None:
+    """Run a program once from Python: contiguous float64 arrays of n_inputs x lanes and n_outputs x lanes."""
+    kind = ctypes.CFUNCTYPE(None, ctypes.c_void_p, ctypes.c_void_p)
+    kind(compile_program(program, lanes))(inputs.ctypes.data, outputs.ctypes.data)
