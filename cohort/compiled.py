@@ -151,6 +151,8 @@ class _Emitter:
             return b.select(b.fcmp_ordered("<", operands[0], operands[1]), operands[2], operands[3])
         if name in ("scale2", "mantissa", "exponent"):
             return getattr(self, name)(*operands)
+        if name == "fnma":
+            return self.intrinsic("fma", b.fneg(operands[0]), *operands[1:])
         if name in ("fma", "sqrt", "abs"):
             return self.intrinsic("fabs" if name == "abs" else name, *operands)
         plain = {"add": b.fadd, "sub": b.fsub, "mul": b.fmul, "div": b.fdiv, "neg": b.fneg}

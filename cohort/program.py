@@ -25,6 +25,7 @@ _LN2_REST = 2.3190468138462996e-17  # ln 2 - _LN2
 _EXP_LIMIT = 700.0
 _EXP_TERMS = 13
 _LOG_TERMS = 11
+_HALF_PI = (1.5707963267948966, 6.123233995736766e-17, -1.4973849048591833e-33)
 
 
 @dataclass(frozen=True)
@@ -118,6 +119,12 @@ class Builder:
             return self.add(known[1.0], c)
         return self._push("fma", *sorted((a, b)), c)
 
+    def fnma(self, a: int, b: int, c: int) -> int:
+        """c - a b with one rounding."""
+        if self.value_of(a) == 0.0 or self.value_of(b) == 0.0:
+            return c
+        return self._push("fnma", *sorted((a, b)), c)
+
     def sqrt(self, a: int) -> int:
         return self._push("sqrt", a)
 
@@ -147,9 +154,9 @@ class Builder:
         limit = self.constant(-_EXP_LIMIT)
         x = self.if_less(x, limit, limit, x)
         rounder = self.constant(_ROUNDER)
-        k = self.sub(self._push("fma", x, self.constant(_LOG2E), rounder), rounder)
-        r = self.fma(k, self.constant(-_LN2), x)
-        r = self.fma(k, self.constant(-_LN2_REST), r)
+        k = self.sub(self.fma(x, self.constant(_LOG2E), rounder), rounder)
+        r = self.fnma(k, self.constant(_LN2), x)
+        r = self.fnma(k, self.constant(_LN2_REST), r)
         total = self.constant(1.0 / math.factorial(_EXP_TERMS))
         for n in range(_EXP_TERMS - 1, -1, -1):
             total = self.fma(total, r, self.constant(1.0 / math.factorial(n)))
@@ -177,6 +184,32 @@ class Builder:
         """1/(1 + e^-v), never overflowing."""
         one = self.constant(1.0)
         return self.div(one, self.add(one, self.exp(self.neg(v))))
+
+    def sin_cos(self, x: int) -> tuple[int, int]:
+        """(sin x, cos x) to about 1 ulp of 1 for |x| < 1e6: x = k pi/2 + r and the Taylor polynomials of r."""
+        rounder = self.constant(_ROUNDER)
+        k = self.sub(self.fma(x, self.constant(2.0 / math.pi), rounder), rounder)
+        r = x
+        for part in _HALF_PI:
+            r = self.fnma(k, self.constant(part), r)
+        z = self.mul(r, r)
+        sine, cosine = (self._alternating(z, first) for first in (1, 0))
+        sine = self.mul(sine, r)
+        # k modulo 4, as -2..2
+        q = self.fnma(self.sub(self.fma(k, self.constant(0.25), rounder), rounder), self.constant(4.0), k)
+        odd, half = self.absolute(self.sub(self.absolute(q), self.constant(1.0))), self.constant(0.5)
+        a, b = self.if_less(odd, half, cosine, sine), self.if_less(odd, half, sine, cosine)
+        turned = self.if_less(self.constant(1.5), self.absolute(q), self.neg(a), a)
+        sine = self.if_less(q, self.constant(-0.5), self.if_less(self.constant(-1.5), q, self.neg(a), turned), turned)
+        cosine = self.if_less(self.constant(0.5), q, self.neg(b), b)
+        return sine, self.if_less(q, self.constant(-1.5), self.neg(b), cosine)
+
+    def _alternating(self, z: int, first: int) -> int:
+        """sum of (-z)^n / (2n + first)!: cos r, or sin r / r, for z = r^2 <= (pi/4)^2."""
+        total = self.constant(0.0)
+        for n in range(9, -1, -1):
+            total = self.fma(total, z, self.constant((-1.0) ** n / math.factorial(2 * n + first)))
+        return total
 
 
 def _without_dead(program: Program) -> Program:
@@ -225,6 +258,7 @@ _PLAIN: dict[str, Callable[..., float]] = {
     "div": _divide,
     "neg": lambda a: -a,
     "fma": _fma,
+    "fnma": lambda a, b, c: _fma(-a, b, c),
     "sqrt": lambda a: math.sqrt(a) if a >= 0 else math.nan,
     "abs": abs,
     "if_less": lambda a, b, yes, no: yes if a < b else no,

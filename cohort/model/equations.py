@@ -1,0 +1,114 @@
+"""The bodies: each model's equations once, as its paper prints them.
+
+Time in min; Ip, Ii, x1..x3 in mU; G in mg; Gin (mg/min) and Iin (mU/min) enter the plasma; `secretion` multiplies
+the pancreas's own secretion. Each function returns the rates of change and what a reader sees of the body. They are
+called with symbols (`cohort.model.trace`), so they may use + - * / ** exp log only.
+"""
+
+from __future__ import annotations
+
+from cohort.model.trace import Symbol, exp
+
+S = Symbol
+Equations = tuple[dict[str, Symbol], dict[str, Symbol]]
+
+HELD_RELEASE = 0.3390670019600681
+"""steady-liver: release as a share of Rg, f5/Rg of the published hepatic-lag body at rest under 216 mg/min."""
+
+
+def _secretion(G: S, Vg: S, Rm: S, C1: S, a1: S) -> S:
+    """f1: insulin secretion, mU/min."""
+    return Rm / (1 + exp((C1 - G / Vg) / a1))
+
+
+def _use(G: S, Ii: S, Vi: S, Vg: S, E: S, ti: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S) -> S:
+    """f2 + f3 f4: glucose use that needs no insulin, and use that insulin drives, mg/min."""
+    f2 = Ub * (1 - exp(-G / (C2 * Vg)))
+    f3 = G / (C3 * Vg)
+    u = (Ii / C4) * (1 / Vi + 1 / (E * ti))
+    f4 = U0 + (Um - U0) / (1 + u**-beta)
+    return f2 + f3 * f4
+
+
+def _release(x: S, Vp: S, Rg: S, alpha: S, C5: S) -> S:
+    """f5: glucose release by the liver, mg/min."""
+    return Rg / (1 + exp(alpha * (x / Vp - C5)))
+
+
+def _seen(G: S, Ip: S, f1: S, f5: S, Vg: S, Vp: S) -> dict[str, S]:
+    return {
+        "glucose_mg_dl": G / (10 * Vg),
+        "insulin_mu_l": Ip / Vp,
+        "secretion_mu_per_min": f1,
+        "release_mg_per_min": f5,
+    }
+
+
+def hepatic_lag(
+    Ip: S, Ii: S, G: S, x1: S, x2: S, x3: S, Gin: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S,
+    td: S, Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S, alpha: S, C5: S,
+) -> Equations:  # fmt: skip
+    """Sturis et al. 1991 in the form of Tolic et al. 2000: a three-stage lag between plasma insulin and the liver."""
+    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
+    f5 = _release(x3, Vp, Rg, alpha, C5)
+    exchange = E * (Ip / Vp - Ii / Vi)
+    rates = {
+        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ii": exchange - Ii / ti,
+        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+        "x1": 3 * (Ip - x1) / td,
+        "x2": 3 * (x1 - x2) / td,
+        "x3": 3 * (x2 - x3) / td,
+    }
+    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+
+
+def prompt_liver(
+    Ip: S, Ii: S, G: S, Gin: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S,
+    Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S, alpha: S, C5: S,
+) -> Equations:  # fmt: skip
+    """The same body whose liver answers plasma insulin at once: the limit td -> 0."""
+    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
+    f5 = _release(Ip, Vp, Rg, alpha, C5)
+    exchange = E * (Ip / Vp - Ii / Vi)
+    rates = {
+        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ii": exchange - Ii / ti,
+        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+    }
+    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+
+
+def steady_liver(
+    Ip: S, Ii: S, G: S, Gin: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S,
+    Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S,
+) -> Equations:  # fmt: skip
+    """The same body whose liver releases glucose at a constant rate, whatever insulin does."""
+    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
+    f5 = HELD_RELEASE * Rg
+    exchange = E * (Ip / Vp - Ii / Vi)
+    rates = {
+        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ii": exchange - Ii / ti,
+        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+    }
+    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+
+
+def insulin_at_rest(
+    G: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S, Rm: S, a1: S, C1: S
+) -> dict[str, S]:
+    """Insulin amounts that stay where they are while glucose is G: with r = Ii/Ip, Ip (E/Vp + 1/tp - r E/Vi) = f1."""
+    r = (E / Vp) / (E / Vi + 1 / ti)
+    # E/Vp - r E/Vi without the cancellation
+    to_interstitium = r / ti
+    Ip = (secretion * _secretion(G, Vg, Rm, C1, a1) + Iin) / (1 / tp + to_interstitium)
+    return {"Ip": Ip, "Ii": r * Ip}
+
+
+def lag_at_rest(
+    G: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S, Rm: S, a1: S, C1: S
+) -> dict[str, S]:
+    """As `insulin_at_rest`, the lag's stages holding the plasma's amount."""
+    rest = insulin_at_rest(G, Iin, secretion, Vp, Vi, Vg, E, tp, ti, Rm, a1, C1)
+    return {**rest, "x1": rest["Ip"], "x2": rest["Ip"], "x3": rest["Ip"]}
