@@ -19,7 +19,7 @@ from functools import cached_property
 from cohort.model.trace import INPUTS, Symbol, Traced, evaluator, exp, log
 from cohort.program import Builder, Program
 
-ORDER = 10
+ORDER = 12
 TOLERANCE = 1e-8
 LONGEST_STEP_MIN = 30.0
 SHORTEST_STEP_MIN = 1e-7

@@ -1,0 +1,60 @@
+"""Courses: what the integrator leaves behind, as polynomials in time.
+
+Each step's polynomial is the solution itself to full order, so values, extrema, crossings and integrals come from it
+directly and need no grid.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from cohort.compiled import jit
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Courses:
+    """Recorded courses of n subjects of one arm.
+
+    Step i < n_steps[s] of subject s covers start[s, i] .. start[s, i] + step_size[s, i] (min); there column c is the
+    polynomial with coefficients coefficients[s, i, c, :] (rising powers of the time since the step began).
+    status int64[n]: -1 or an index into FAILURES; final float64[n, states].
+    """
+
+    columns: tuple[str, ...]
+    start: Array
+    step_size: Array
+    coefficients: Array
+    n_steps: NDArray[np.int64]
+    status: NDArray[np.int64]
+    final: Array
+
+    def sample(self, times_min: Array) -> Array:
+        """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded."""
+        out = np.full((len(self.n_steps), len(self.columns), len(times_min)), np.nan)
+        _sample(self.start, self.step_size, self.coefficients, self.n_steps, np.asarray(times_min, float), out)
+        return out
+
+
+@jit
+def _sample(start, step_size, coefficients, n_steps, times, out):  # type: ignore[no-untyped-def]
+    n, columns, wanted = out.shape
+    highest = coefficients.shape[3] - 1
+    for s in range(n):
+        i = 0
+        for w in range(wanted):
+            t = times[w]
+            while i + 1 < n_steps[s] and start[s, i + 1] <= t:
+                i += 1
+            if n_steps[s] == 0 or t < start[s, 0] or t > start[s, i] + step_size[s, i]:
+                continue
+            x = t - start[s, i]
+            for c in range(columns):
+                value = coefficients[s, i, c, highest]
+                for k in range(highest - 1, -1, -1):
+                    value = value * x + coefficients[s, i, c, k]
+                out[s, c, w] = value
