@@ -64,6 +64,13 @@ class Body:
         rest = [self.traced.rest[state] for state in self.traced.states]
         return evaluator("balance", (lead, *INPUTS, *self.parameters), [rate, slope, *rest])
 
+    @cached_property
+    def enters(self) -> tuple[int, int]:
+        """Which state, by index, a bolus of glucose and one of insulin raises: the one whose rate holds the input."""
+        slopes = [[derivative(r, {i: Symbol("const", value=1.0)}) for r in self.traced.rates.values()] for i in INPUTS]
+        held = [[node.op == "const" and node.value == 1.0 for node in row] for row in slopes]
+        return held[0].index(True) if any(held[0]) else 0, held[1].index(True) if any(held[1]) else 0
+
     @property
     def _names(self) -> tuple[str, ...]:
         return (*self.traced.states, *INPUTS, *self.parameters)

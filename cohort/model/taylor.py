@@ -266,7 +266,8 @@ class Stepper:
     hoisted: parameters (traced.parameters, in order) -> constants.
     step: inputs  x[n], 1/scale[n], time to the next stop, input coefficients, constants;
           outputs x after the step[n], step, health (1 where all is well), coefficients[seen][order + 1].
-    Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`.
+    Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`. Coefficients are of
+    powers of (time since the step began) / step. The first `watched` states set the step size and the health.
     """
 
     traced: Traced
@@ -275,6 +276,7 @@ class Stepper:
     order: int = ORDER
     tolerance: float = TOLERANCE
     positive: bool = True
+    watched: int | None = None
 
     @cached_property
     def _affine(self) -> tuple[dict[str, Affine], dict[str, Affine]]:
@@ -325,14 +327,20 @@ class Stepper:
             rates,
         )
         states = [Series("state", s) for s in self.traced.states]
-        h = self._step_size(builder, recurrences, states, left=2 * n)
+        h = self._step_size(builder, recurrences, states[: self.watched], left=2 * n)
         after = [self._advance(builder, recurrences, s, h) for s in states]
-        seen = [recurrences.affine(observed[c], k) for c in self.seen for k in range(self.order + 1)]
-        return builder.finish([*after, h, self._health(builder, after, h), *seen])
+        health = self._health(builder, after[: self.watched], h, n)
+        powers = [builder.constant(1.0), h]
+        for k in range(2, self.order + 1):
+            powers.append(builder.mul(powers[k // 2], powers[k - k // 2]))
+        seen = [
+            builder.mul(recurrences.affine(observed[c], k), powers[k]) for c in self.seen for k in range(self.order + 1)
+        ]
+        return builder.finish([*after, h, health, *seen])
 
     def _step_size(self, b: Builder, recurrences: Recurrences, states: Sequence[Series], left: int) -> int:
         """min over the last two orders k of (tolerance / |x_k|)^(1/k), x in units of its scale, at most to the stop."""
-        n = len(states)
+        n = len(self.traced.states)
         shortest = None
         for k in (self.order - 1, self.order):
             largest = b.constant(1e-290)
@@ -351,8 +359,7 @@ class Stepper:
             total = b.fma(total, h, recurrences.value(state, k))
         return total
 
-    def _health(self, b: Builder, after: Sequence[int], h: int) -> int:
-        n = len(after)
+    def _health(self, b: Builder, after: Sequence[int], h: int, n: int) -> int:
         one, zero = b.constant(1.0), b.constant(0.0)
         total, lowest = zero, one
         for i, x in enumerate(after):

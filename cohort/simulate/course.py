@@ -21,7 +21,7 @@ class Courses:
     """Recorded courses of n subjects of one arm.
 
     Step i < n_steps[s] of subject s covers start[s, i] .. start[s, i] + step_size[s, i] (min); there column c is the
-    polynomial with coefficients coefficients[s, i, c, :] (rising powers of the time since the step began).
+    polynomial with coefficients coefficients[s, i, c, :] in rising powers of x = (t - start) / step_size, 0 <= x <= 1.
     status int64[n]: -1 or an index into FAILURES; final float64[n, states].
     """
 
@@ -32,6 +32,13 @@ class Courses:
     n_steps: NDArray[np.int64]
     status: NDArray[np.int64]
     final: Array
+
+    def take(self, rows: NDArray[np.bool_]) -> Courses:
+        """Return the chosen subjects' courses."""
+        return Courses(
+            self.columns, self.start[rows], self.step_size[rows], self.coefficients[rows], self.n_steps[rows],
+            self.status[rows], self.final[rows],
+        )  # fmt: skip
 
     def sample(self, times_min: Array) -> Array:
         """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded."""
@@ -52,7 +59,7 @@ def _sample(start, step_size, coefficients, n_steps, times, out):  # type: ignor
                 i += 1
             if n_steps[s] == 0 or t < start[s, 0] or t > start[s, i] + step_size[s, i]:
                 continue
-            x = t - start[s, i]
+            x = (t - start[s, i]) / step_size[s, i]
             for c in range(columns):
                 value = coefficients[s, i, c, highest]
                 for k in range(highest - 1, -1, -1):
