@@ -220,3 +220,14 @@ def _steady(shape: Shape) -> float | None:
     if not isinstance(shape.period_min, Natural) and shape.period_min > LONGEST_AVERAGED_PERIOD_MIN:
         return None
     return shape.rate * shape.duty if isinstance(shape, OnOff) else shape.mean
+
+
+def held(Gin: Array, Iin: Array, duration_min: Array) -> Inputs:
+    """Constant inputs for n subjects, each for its own time: float64[n] mg/min, mU/min, min."""
+    n = len(Gin)
+    zeros, ends = np.zeros((n, 2)), np.column_stack([duration_min, duration_min])
+    none = np.empty((n, 0))
+    return Inputs(
+        np.array([CONSTANT, CONSTANT]), np.array([GLUCOSE, INSULIN]), zeros, ends, np.column_stack([Gin, Iin]),
+        zeros, zeros, np.ascontiguousarray(duration_min.reshape(n, 1)), none, none, np.empty(0, np.int64),
+    )  # fmt: skip

@@ -141,9 +141,16 @@ class _Loop:
             i.phase, i.stops, i.bolus_time, i.bolus_amount, i.bolus_channel, p.enters, begin, end, record_from,
             self.start, self.step_size, self.coefficients, self.n_steps, self.status, self.final, self.overflow,
         )  # fmt: skip
-        rows = end - begin
+        rows = min(end - begin, len(self.start))
         return Courses(
             p.stepper.seen, self.start[:rows], self.step_size[:rows], self.coefficients.reshape(self.shape)[:rows],
             self.n_steps[begin:end], self.status[begin:end], self.final[begin:end],
         )  # fmt: skip
 
+
+
+def advance(prepared: Prepared) -> tuple[Array, NDArray[np.int64]]:
+    """Integrate every subject to its last stop, recording nothing: (final states float64[n, states], status)."""
+    loop = _Loop(prepared, 1, 1)
+    found = loop.run(0, prepared.count, np.inf)
+    return found.final, found.status

@@ -1,0 +1,24 @@
+"""The body and one infinitesimal neighbour: exact tangents of the flow, derived from the same equations."""
+
+from __future__ import annotations
+
+import functools
+
+from cohort.model.body import Body
+from cohort.model.taylor import Stepper
+from cohort.model.trace import Traced, derivative, name
+
+
+@functools.cache
+def tangent_stepper(body: Body) -> Stepper:
+    """A stepper of states x and then v, with v' = J(x) v; the step size looks at x alone.
+
+    Lanes that hold one subject with different v therefore take the same steps, and their v are columns of the exact
+    derivative of what the integrator computes.
+    """
+    traced = body.traced
+    moved = {state: name("d" + state) for state in traced.states}
+    slopes = {"d" + state: derivative(rate, moved) for state, rate in traced.rates.items()}
+    states = (*traced.states, *slopes)
+    augmented = Traced(states, traced.parameters, {**traced.rates, **slopes}, {}, traced.rest_of, traced.rest)
+    return Stepper(augmented, (), True, positive=body.card.positive, watched=len(traced.states))
