@@ -14,6 +14,7 @@ import struct
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
+from functools import cached_property
 
 Op = tuple[str, tuple[int, ...], float]
 """Operation name, operands (indices of earlier values), and the value of a constant (0 elsewhere)."""
@@ -37,7 +38,7 @@ class Program:
     ops: tuple[Op, ...]
     outputs: tuple[int, ...]
 
-    @property
+    @cached_property
     def key(self) -> str:
         """A digest of what is computed, equal exactly where the arithmetic is."""
         text = repr((self.n_inputs, self.ops, self.outputs))

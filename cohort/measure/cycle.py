@@ -16,7 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.compiled import call_program, compile_program, jit
+from cohort.compiled import compile_program, jit
 from cohort.measure.linear import leading_directions, solve_each
 from cohort.measure.turning import turning_points
 from cohort.model.body import Body
@@ -24,7 +24,7 @@ from cohort.model.inputs import held
 from cohort.model.rest import Rest, spectrum
 from cohort.model.tangent import tangent_stepper
 from cohort.simulate.engine import DONE
-from cohort.simulate.run import advance, assemble, courses, typical
+from cohort.simulate.run import advance, assemble, courses, map_rows, typical
 
 Array = NDArray[np.float64]
 Bools = NDArray[np.bool_]
@@ -121,20 +121,40 @@ def approach(subjects: Held, state: Array, period: Array, cycles: int) -> tuple[
 
     Returns (state, period, amplitude of the lead column, alive); alive is False where nothing oscillates any more.
     """
-    stepper = subjects.body.stepper((_lead_column(subjects.body),), True)
-    pieces = held(subjects.Gin, subjects.Iin, cycles * period)
-    prepared = assemble(stepper, subjects.parameters, state, typical(subjects.body), pieces, subjects.body.enters)
-    marks = np.full((len(state), 5), np.nan)
-    final = np.full(state.shape, np.nan)
-    for rows, found in courses(prepared, float(np.max(cycles * period))):
-        some = np.empty((len(rows), 5))
-        _marks(found.start, found.step_size, found.coefficients, found.n_steps, found.status, some)
-        marks[rows], final[rows] = some, found.final
+    final, marks = _run_cycles(subjects, state, period, cycles)
     return _extrapolate(subjects, final, period, marks)
 
 
+def follow(subjects: Held, state: Array, period: Array, cycles: int) -> tuple[Array, Array, Array, Bools]:
+    """Integrate about `cycles` cycles towards an attracting equilibrium or past it.
+
+    Returns (state, period, amplitude, lingers): lingers is False where the amplitude fell in the last cycle at least
+    half as fast as it does next to the equilibrium, so that no orbit holds it up.
+    """
+    final, marks = _run_cycles(subjects, state, period, cycles)
+    last, before, last_period, _ = marks.T
+    with np.errstate(all="ignore"):
+        change = np.log(last / before)
+    linear = subjects.rest.eigenvalues[:, 0].real * last_period
+    lingers = np.isfinite(change) & (change > 0.5 * linear)
+    return final, np.where(np.isfinite(last_period), last_period, period), last, lingers
+
+
+def _run_cycles(subjects: Held, state: Array, period: Array, cycles: int) -> tuple[Array, Array]:
+    stepper = subjects.body.stepper((_lead_column(subjects.body),), True)
+    pieces = held(subjects.Gin, subjects.Iin, cycles * period)
+    prepared = assemble(stepper, subjects.parameters, state, typical(subjects.body), pieces, subjects.body.enters)
+    marks = np.full((len(state), 4), np.nan)
+    final = np.full(state.shape, np.nan)
+    for rows, found in courses(prepared, float(np.max(cycles * period))):
+        some = np.empty((len(rows), 4))
+        _marks(found.start, found.step_size, found.coefficients, found.n_steps, found.status, some)
+        marks[rows], final[rows] = some, found.final
+    return final, marks
+
+
 def _extrapolate(subjects: Held, final: Array, period: Array, marks: Array) -> tuple[Array, Array, Array, Bools]:
-    last, before, last_period, period_before, _ = marks.T
+    last, before, last_period, _ = marks.T
     alive = np.isfinite(last) & np.isfinite(final).all(axis=1) & (last > 0.0)
     with np.errstate(all="ignore"):
         change = np.log(last / before)
@@ -152,7 +172,7 @@ def _extrapolate(subjects: Held, final: Array, period: Array, marks: Array) -> t
 
 @jit
 def _marks(start, step_size, coefficients, n_steps, status, out):  # type: ignore[no-untyped-def]
-    """Of each course: its last two peak-to-trough amplitudes, its last two periods, and how many peaks it has."""
+    """Of each course: its last two peak-to-trough amplitudes and its last two periods, NaN if it has none."""
     room = start.shape[1] + 8
     times, values = np.empty(room), np.empty(room)
     peak_time, peak, trough = np.empty(room), np.empty(room), np.empty(room)
@@ -168,7 +188,6 @@ def _marks(start, step_size, coefficients, n_steps, status, out):  # type: ignor
             if values[i] > values[i - 1] and values[i] > values[i + 1]:
                 peak_time[peaks], peak[peaks], trough[peaks] = times[i], values[i], values[i + 1]
                 peaks += 1
-        out[s, 4] = peaks
         if peaks >= 3:
             out[s, 0] = peak[peaks - 1] - trough[peaks - 1]
             out[s, 1] = peak[peaks - 2] - trough[peaks - 2]
@@ -198,6 +217,9 @@ def close(subjects: Held, state: Array, period: Array, amplitude: Array) -> Orbi
         x[going], T[going], error[going] = _chords(some, x[going], T[going], monodromy[going])
         going = going[np.isfinite(error[going]) & (error[going] > CONVERGED)]
     multiplier = _second_multiplier(monodromy)
+    close_to_one = np.flatnonzero((multiplier > 0.98) & (error <= ACCEPTED))  # the first point's tangents are too rough
+    some = subjects.take(close_to_one)
+    multiplier[close_to_one] = _second_multiplier(_monodromy(some, x[close_to_one], T[close_to_one]))
     swing = _lead_swing(subjects, x, T)
     with np.errstate(invalid="ignore"):
         good = (error <= ACCEPTED) & (multiplier < 1.0) & (swing > 0.5 * amplitude) & (T > 0.3 * period)
@@ -246,14 +268,8 @@ def _chords(subjects: Held, x: Array, T: Array, monodromy: Array) -> tuple[Array
 def _rates(subjects: Held, x: Array) -> Array:
     source = np.column_stack([x, subjects.Gin, subjects.Iin, subjects.parameters])
     out = np.empty(x.shape)
-    _each(compile_program(subjects.body.rates), source, out)
+    map_rows(compile_program(subjects.body.rates), np.ascontiguousarray(source), out)
     return out
-
-
-@jit
-def _each(program, inputs, outputs):  # type: ignore[no-untyped-def]
-    for row in range(inputs.shape[0]):
-        call_program(program, inputs[row], outputs[row])
 
 
 def _monodromy(subjects: Held, x: Array, T: Array) -> Array:

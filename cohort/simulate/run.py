@@ -44,7 +44,8 @@ class Prepared:
 
 
 @jit
-def _map(program, inputs, outputs):  # type: ignore[no-untyped-def]
+def map_rows(program, inputs, outputs):  # type: ignore[no-untyped-def]
+    """Run a compiled program on every row."""
     for row in range(inputs.shape[0]):
         call_program(program, inputs[row], outputs[row])
 
@@ -86,7 +87,7 @@ def assemble(
 ) -> Prepared:
     """Compute the constants of each subject and bring all arrays to the form the loop takes."""
     constants = np.empty((len(parameters), len(stepper.hoisted.outputs)))
-    _map(compile_program(stepper.hoisted), np.ascontiguousarray(parameters), constants)
+    map_rows(compile_program(stepper.hoisted), np.ascontiguousarray(parameters), constants)
     inverse = np.ascontiguousarray(np.broadcast_to(1.0 / scale, x0.shape))
     return Prepared(stepper, np.ascontiguousarray(x0), inverse, constants, pieces, np.array(enters))
 
@@ -154,3 +155,11 @@ def advance(prepared: Prepared) -> tuple[Array, NDArray[np.int64]]:
     loop = _Loop(prepared, 1, 1)
     found = loop.run(0, prepared.count, np.inf)
     return found.final, found.status
+
+
+def observe_states(body: Body, states: Array, Gin: Array, Iin: Array, parameters: Array) -> Array:
+    """What a reader sees of the body in these states: float64[n, observed columns], in the model's order."""
+    source = np.ascontiguousarray(np.column_stack([states, Gin, Iin, parameters]))
+    seen = np.empty((len(states), len(body.traced.observed)))
+    map_rows(compile_program(body.seen), source, seen)
+    return seen
