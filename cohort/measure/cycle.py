@@ -148,7 +148,7 @@ def _run_cycles(subjects: Held, state: Array, period: Array, cycles: int) -> tup
     final = np.full(state.shape, np.nan)
     for rows, found in courses(prepared, float(np.max(cycles * period))):
         some = np.empty((len(rows), 4))
-        _marks(found.start, found.step_size, found.coefficients, found.n_steps, found.status, some)
+        _marks(found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, some)
         marks[rows], final[rows] = some, found.final
     return final, marks
 
@@ -171,7 +171,7 @@ def _extrapolate(subjects: Held, final: Array, period: Array, marks: Array) -> t
 
 
 @jit
-def _marks(start, step_size, coefficients, n_steps, status, out):  # type: ignore[no-untyped-def]
+def _marks(start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
     """Of each course: its last two peak-to-trough amplitudes and its last two periods, NaN if it has none."""
     room = start.shape[1] + 8
     times, values = np.empty(room), np.empty(room)
@@ -181,8 +181,9 @@ def _marks(start, step_size, coefficients, n_steps, status, out):  # type: ignor
         if status[s] != DONE:
             continue
         n = n_steps[s]
-        end = start[s, n - 1] + step_size[s, n - 1]
-        count = turning_points(start[s], step_size[s], coefficients[s, :n, 0], n, 0.0, end, times, values)
+        count = turning_points(
+            start[s, :n], step_size[s, :n], coefficients[s, :n, 0], summaries[s, :n, 0], times, values
+        )
         peaks = 0
         for i in range(1, count - 1):
             if values[i] > values[i - 1] and values[i] > values[i + 1]:
@@ -322,7 +323,7 @@ def _lead_swing(subjects: Held, x: Array, T: Array) -> Array:
         some = subjects.take(fine)
         for rows, found in orbit_courses(some, x[fine], T[fine], (_lead_column(subjects.body),)):
             out = np.full((len(rows), ORBIT_COLUMNS), np.nan)
-            orbit_rows(found.start, found.step_size, found.coefficients, found.n_steps, found.status, out)
+            orbit_rows(found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, out)
             swing[fine[rows]] = out[:, 1] - out[:, 0]
     return swing
 
@@ -332,7 +333,7 @@ ORBIT_COLUMNS = 4
 
 
 @jit
-def orbit_rows(start, step_size, coefficients, n_steps, status, out):  # type: ignore[no-untyped-def]
+def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
     """Lowest, highest, mean and time of the highest of every column over one turn: out float64[n, 4 x columns]."""
     columns = coefficients.shape[2]
     room = start.shape[1] + 8
@@ -344,7 +345,7 @@ def orbit_rows(start, step_size, coefficients, n_steps, status, out):  # type: i
         end = start[s, n - 1] + step_size[s, n - 1]
         for c in range(columns):
             a = coefficients[s, :n, c]
-            count = turning_points(start[s], step_size[s], a, n, 0.0, end, times, values)
+            count = turning_points(start[s, :n], step_size[s, :n], a, summaries[s, :n, c], times, values)
             low = high = a[0, 0]
             when = 0.0
             for i in range(count):
@@ -353,8 +354,5 @@ def orbit_rows(start, step_size, coefficients, n_steps, status, out):  # type: i
                 low = min(low, values[i])
             total = 0.0
             for i in range(n):
-                part = 0.0
-                for k in range(a.shape[1] - 1, -1, -1):
-                    part += a[i, k] / (k + 1)
-                total += part * step_size[s, i]
+                total += summaries[s, i, c, 4] * step_size[s, i]
             out[s, 4 * c], out[s, 4 * c + 1], out[s, 4 * c + 2], out[s, 4 * c + 3] = low, high, total / end, when

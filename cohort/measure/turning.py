@@ -44,30 +44,42 @@ def integral(a, low, high):  # type: ignore[no-untyped-def]
 
 
 @jit
-def _slope_root(a, low, high):  # type: ignore[no-untyped-def]
-    """Where the slope, of opposite signs at low and high, is zero: secant steps kept inside the bracket (Illinois)."""
-    f_low, f_high = slope(a, low), slope(a, high)
-    side = 0
-    x = low
-    for _ in range(100):
-        x = (low * f_high - high * f_low) / (f_high - f_low)
-        f = slope(a, x)
-        if f == 0.0 or high - low <= 1e-15:
-            break
+def _slope_and_bend(a, x):  # type: ignore[no-untyped-def]
+    n = a.shape[0] - 1
+    first = n * a[n]
+    second = 0.0
+    for k in range(n - 1, 0, -1):
+        second = second * x + first
+        first = first * x + k * a[k]
+    return first, second
+
+
+@jit
+def _value_and_slope(a, x):  # type: ignore[no-untyped-def]
+    total = a[a.shape[0] - 1]
+    first = 0.0
+    for k in range(a.shape[0] - 2, -1, -1):
+        first = first * x + total
+        total = total * x + a[k]
+    return total, first
+
+
+@jit
+def _slope_root(a, low, high, f_low, f_high):  # type: ignore[no-untyped-def]
+    """Where the slope, f_low and f_high of opposite signs at low and high, is zero: Newton kept inside the bracket."""
+    x = (low * f_high - high * f_low) / (f_high - f_low)
+    for _ in range(60):
+        f, g = _slope_and_bend(a, x)
         if (f > 0.0) == (f_high > 0.0):
-            if abs(high - x) <= 1e-15:
-                break
-            high, f_high = x, f
-            if side == 1:
-                f_low *= 0.5
-            side = 1
+            high = x
         else:
-            if abs(x - low) <= 1e-15:
-                break
-            low, f_low = x, f
-            if side == -1:
-                f_high *= 0.5
-            side = -1
+            low = x
+        following = x - f / g
+        if not low <= following <= high:
+            following = 0.5 * (low + high)
+        if abs(following - x) <= 1e-9:
+            return following
+        x = following
     return x
 
 
@@ -75,53 +87,43 @@ def _slope_root(a, low, high):  # type: ignore[no-untyped-def]
 def level_root(a, level, low, high):  # type: ignore[no-untyped-def]
     """Where the polynomial, on opposite sides of `level` at low and high, crosses it."""
     f_low, f_high = value(a, low) - level, value(a, high) - level
-    side = 0
-    x = low
-    for _ in range(100):
-        if f_high == f_low:
-            break
-        x = (low * f_high - high * f_low) / (f_high - f_low)
-        f = value(a, x) - level
-        if f == 0.0 or high - low <= 1e-15:
-            break
+    x = (low * f_high - high * f_low) / (f_high - f_low)
+    for _ in range(60):
+        f, g = _value_and_slope(a, x)
+        f -= level
         if (f > 0.0) == (f_high > 0.0):
-            high, f_high = x, f
-            if side == 1:
-                f_low *= 0.5
-            side = 1
+            high = x
         else:
-            low, f_low = x, f
-            if side == -1:
-                f_high *= 0.5
-            side = -1
+            low = x
+        following = x - f / g
+        if not low <= following <= high:
+            following = 0.5 * (low + high)
+        if abs(following - x) <= 1e-9:
+            return following
+        x = following
     return x
 
 
 @jit
-def turns_in_step(a, found):  # type: ignore[no-untyped-def]
-    """Write the places 0 < x <= 1 where the slope changes sign into `found`; return how many."""
-    n = a.shape[0]
-    rest = 0.0
-    end = a[1]
-    for k in range(2, n):
-        rest += k * abs(a[k])
-        end += k * a[k]
-    if abs(a[1]) > rest:
+def turns_in_step(a, summary, found):  # type: ignore[no-untyped-def]
+    """Write the places 0 < x <= 1 where the slope changes sign into `found`; return how many.
+
+    a: float64[order + 1]; summary: float64[SUMMARY] of the same step (`cohort.model.taylor`).
+    """
+    end_slope = summary[0]
+    if abs(a[1]) > summary[1]:
         return 0
-    bend = 0.0
-    for k in range(3, n):
-        bend += k * (k - 1) * abs(a[k])
-    if 2.0 * abs(a[2]) > bend:
-        if (a[1] > 0.0) == (end > 0.0) or a[1] == 0.0:
+    if 2.0 * abs(a[2]) > summary[2]:
+        if (a[1] > 0.0) == (end_slope > 0.0) or a[1] == 0.0:
             return 0
-        found[0] = _slope_root(a, 0.0, 1.0)
+        found[0] = _slope_root(a, 0.0, 1.0, a[1], end_slope)
         return 1
     count = 0
     before = a[1]
     for part in range(_PARTS):
         after = slope(a, (part + 1) / _PARTS)
         if before != 0.0 and (before > 0.0) != (after > 0.0):
-            found[count] = _slope_root(a, part / _PARTS, (part + 1) / _PARTS)
+            found[count] = _slope_root(a, part / _PARTS, (part + 1) / _PARTS, slope(a, part / _PARTS), after)
             count += 1
         if after != 0.0:
             before = after
@@ -129,47 +131,22 @@ def turns_in_step(a, found):  # type: ignore[no-untyped-def]
 
 
 @jit
-def turning_points(start, step_size, polynomials, n_steps, begin, end, times, values):  # type: ignore[no-untyped-def]
-    """Write the turning points of one column strictly within begin..end; return how many.
+def turning_points(start, step_size, a, summaries, times, values):  # type: ignore[no-untyped-def]
+    """Write the turning points of one column of one course; return how many.
 
-    start, step_size: float64[steps]; polynomials: float64[steps, order + 1]; times, values: room for them. Where an
-    input jumps the slope may change sign between steps: such a corner is a turning point as well.
+    start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries: float64[steps, SUMMARY]; times, values:
+    room for them. Where an input jumps the slope may change sign between steps: such a corner is one as well.
     """
     found = np.empty(_PARTS)
     count = 0
     last = 0.0
-    for i in range(n_steps):
-        if start[i] + step_size[i] <= begin or start[i] >= end:
-            continue
-        a = polynomials[i]
-        if last * a[1] < 0.0 and start[i] > begin and count < times.shape[0]:
-            times[count], values[count] = start[i], a[0]
+    for i in range(start.shape[0]):
+        if last * a[i, 1] < 0.0 and count < times.shape[0]:
+            times[count], values[count] = start[i], a[i, 0]
             count += 1
-        for r in range(turns_in_step(a, found)):
-            t = start[i] + found[r] * step_size[i]
-            if begin < t < end and count < times.shape[0]:
-                times[count], values[count] = t, value(a, found[r])
+        for r in range(turns_in_step(a[i], summaries[i], found)):
+            if count < times.shape[0]:
+                times[count], values[count] = start[i] + found[r] * step_size[i], value(a[i], found[r])
                 count += 1
-        last = slope(a, 1.0)
+        last = summaries[i, 0]
     return count
-
-
-@jit
-def mean_between(start, step_size, polynomials, n_steps, begin, end):  # type: ignore[no-untyped-def]
-    """The column's mean over begin..end."""
-    total = 0.0
-    for i in range(n_steps):
-        low = max((begin - start[i]) / step_size[i], 0.0)
-        high = min((end - start[i]) / step_size[i], 1.0)
-        if high > low:
-            total += integral(polynomials[i], low, high) * step_size[i]
-    return total / (end - begin)
-
-
-@jit
-def value_at(start, step_size, polynomials, n_steps, t):  # type: ignore[no-untyped-def]
-    """The column at time t, from the step that begins at or before it."""
-    i = 0
-    while i + 1 < n_steps and start[i + 1] <= t:
-        i += 1
-    return value(polynomials[i], min((t - start[i]) / step_size[i], 1.0))

@@ -26,6 +26,10 @@ SHORTEST_STEP_MIN = 1e-7
 LARGEST = 1e6
 """A state beyond this multiple of its scale has left the physical range."""
 
+SUMMARY = ("end_slope", "slope_rest", "bend_rest", "spread", "area", "square")
+"""Of each recorded polynomial a over 0 <= x <= 1: a'(1); sum k |a_k| from k = 2; sum k (k-1) |a_k| from k = 3;
+sum |a_k| from k = 1; the integral of a; the integral of (a - a_0)^2 without products beyond order + 2."""
+
 ZERO, ONE = Symbol("const", value=0.0), Symbol("const", value=1.0)
 
 
@@ -265,7 +269,8 @@ class Stepper:
 
     hoisted: parameters (traced.parameters, in order) -> constants.
     step: inputs  x[n], 1/scale[n], time to the next stop, input coefficients, constants;
-          outputs x after the step[n], step, health (1 where all is well), coefficients[seen][order + 1].
+          outputs x after the step[n], step, health (1 where all is well), coefficients[seen][order + 1],
+          summaries[seen][SUMMARY].
     Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`. Coefficients are of
     powers of (time since the step began) / step. The first `watched` states set the step size and the health.
     """
@@ -336,7 +341,31 @@ class Stepper:
         seen = [
             builder.mul(recurrences.affine(observed[c], k), powers[k]) for c in self.seen for k in range(self.order + 1)
         ]
-        return builder.finish([*after, h, health, *seen])
+        size = self.order + 1
+        summaries = [self._summary(builder, seen[c * size : (c + 1) * size]) for c in range(len(self.seen))]
+        return builder.finish([*after, h, health, *seen, *(x for row in summaries for x in row)])
+
+    def _summary(self, b: Builder, a: Sequence[int]) -> list[int]:
+        end_slope, slope_rest, bend_rest, spread = a[1], b.constant(0.0), b.constant(0.0), b.absolute(a[1])
+        area = b.fma(b.constant(0.5), a[1], a[0])
+        for k in range(2, len(a)):
+            size = b.absolute(a[k])
+            end_slope = b.fma(b.constant(float(k)), a[k], end_slope)
+            slope_rest = b.fma(b.constant(float(k)), size, slope_rest)
+            if k > 2:
+                bend_rest = b.fma(b.constant(float(k * (k - 1))), size, bend_rest)
+            spread = b.add(spread, size)
+            area = b.fma(b.constant(1.0 / (k + 1)), a[k], area)
+        square = b.constant(0.0)
+        for m in range(2, self.order + 3):
+            half = b.constant(0.0)
+            for j in range(max(1, m - self.order), (m + 1) // 2):
+                half = b.fma(a[j], a[m - j], half)
+            half = b.add(half, half)
+            if m % 2 == 0:
+                half = b.fma(a[m // 2], a[m // 2], half)
+            square = b.fma(b.constant(1.0 / (m + 1)), half, square)
+        return [end_slope, slope_rest, bend_rest, spread, area, square]
 
     def _step_size(self, b: Builder, recurrences: Recurrences, states: Sequence[Series], left: int) -> int:
         """min over the last two orders k of (tolerance / |x_k|)^(1/k), x in units of its scale, at most to the stop."""

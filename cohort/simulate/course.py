@@ -22,13 +22,14 @@ class Courses:
 
     Step i < n_steps[s] of subject s covers start[s, i] .. start[s, i] + step_size[s, i] (min); there column c is the
     polynomial with coefficients coefficients[s, i, c, :] in rising powers of x = (t - start) / step_size, 0 <= x <= 1.
-    status int64[n]: -1 or an index into FAILURES; final float64[n, states].
+    summaries: float64[n, steps, columns, SUMMARY] (`cohort.model.taylor`). status int64[n]: -1 or an index into FAILURES; final float64[n, states].
     """
 
     columns: tuple[str, ...]
     start: Array
     step_size: Array
     coefficients: Array
+    summaries: Array
     n_steps: NDArray[np.int64]
     status: NDArray[np.int64]
     final: Array
@@ -36,8 +37,8 @@ class Courses:
     def take(self, rows: NDArray[np.bool_]) -> Courses:
         """Return the chosen subjects' courses."""
         return Courses(
-            self.columns, self.start[rows], self.step_size[rows], self.coefficients[rows], self.n_steps[rows],
-            self.status[rows], self.final[rows],
+            self.columns, self.start[rows], self.step_size[rows], self.coefficients[rows], self.summaries[rows],
+            self.n_steps[rows], self.status[rows], self.final[rows],
         )  # fmt: skip
 
     def sample(self, times_min: Array) -> Array:

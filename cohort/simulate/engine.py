@@ -93,23 +93,24 @@ def verdict(x, h):  # type: ignore[no-untyped-def]
 def integrate(
     step, exponential, circular, orders, steady, x0, inverse_scale, constants,
     kind, channel, on, off, amplitude, rate, phase, stops, bolus_time, bolus_amount, bolus_channel, enters,
-    begin, end, record_from, start, step_size, coefficients, n_steps, status, final, overflow,
+    begin, end, record_from, start, step_size, coefficients, summaries, n_steps, status, final, overflow,
 ):  # type: ignore[no-untyped-def]  # fmt: skip
     """Integrate subjects begin..end-1 from time 0 to their last stop.
 
     x0, inverse_scale, final: float64[n, states]; constants: float64[n, hoisted]; inputs as in
     `cohort.model.inputs.Inputs`; enters: state that each channel enters. Row s = b - begin of the record: start and
-    step_size float64[rows, capacity], coefficients float64[rows, capacity, columns x (order + 1)] of the steps that
-    begin at or after `record_from`; n_steps int64[n]; status int64[n], DONE or an index into FAILURES; overflow
+    step_size float64[rows, capacity], coefficients float64[rows, capacity, columns x (order + 1)] and summaries
+    float64[rows, capacity, columns x SUMMARY] of the steps that end after `record_from`; n_steps int64[n]; status int64[n], DONE or an index into FAILURES; overflow
     bool[n] where the record was too small (the subject must be done again with a larger one).
     """
     states = x0.shape[1]
     recorded = coefficients.shape[2]
+    summarised = summaries.shape[2]
     capacity = start.shape[1]
     at_inputs = 2 * states + 1
     at_constants = at_inputs + 2 * orders
     source = np.zeros((at_constants + constants.shape[1], LANES))
-    result = np.zeros((states + 2 + recorded, LANES))
+    result = np.zeros((states + 2 + recorded + summarised, LANES))
     subject = np.full(LANES, -1, dtype=np.int64)
     time = np.zeros(LANES)
     stop = np.zeros(LANES, dtype=np.int64)
@@ -168,6 +169,8 @@ def integrate(
                         step_size[s, i] = h
                         for j in range(recorded):
                             coefficients[s, i, j] = result[states + 2 + j, l]
+                        for j in range(summarised):
+                            summaries[s, i, j] = result[states + 2 + recorded + j, l]
                         n_steps[b] = i + 1
                     else:
                         status[b] = OUT_OF_BUDGET

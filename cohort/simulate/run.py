@@ -13,7 +13,7 @@ from cohort.model.body import Body
 from cohort.model.inputs import Inputs, People, inputs, steady_input
 from cohort.model.protocol import Arm, AtEquilibrium, AtState
 from cohort.model.rest import at_rest
-from cohort.model.taylor import Stepper
+from cohort.model.taylor import SUMMARY, Stepper
 from cohort.simulate.course import Courses
 from cohort.simulate.engine import OUT_OF_BUDGET, elementary, integrate
 
@@ -126,6 +126,7 @@ class _Loop:
         self.shape = (rows, capacity, len(stepper.seen), stepper.order + 1)
         self.start, self.step_size = np.empty((rows, capacity)), np.empty((rows, capacity))
         self.coefficients = np.empty((rows, capacity, len(stepper.seen) * (stepper.order + 1)))
+        self.summaries = np.empty((rows, capacity, len(stepper.seen) * len(SUMMARY)))
         self.n_steps, self.status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
         self.final, self.overflow = np.full(prepared.x0.shape, np.nan), np.zeros(n, np.bool_)
         self.programs = (
@@ -140,11 +141,13 @@ class _Loop:
         integrate(
             *self.programs, p.x0, p.inverse_scale, p.constants, i.kind, i.channel, i.on, i.off, i.amplitude, i.rate,
             i.phase, i.stops, i.bolus_time, i.bolus_amount, i.bolus_channel, p.enters, begin, end, record_from,
-            self.start, self.step_size, self.coefficients, self.n_steps, self.status, self.final, self.overflow,
+            self.start, self.step_size, self.coefficients, self.summaries, self.n_steps, self.status, self.final,
+            self.overflow,
         )  # fmt: skip
         rows = min(end - begin, len(self.start))
         return Courses(
             p.stepper.seen, self.start[:rows], self.step_size[:rows], self.coefficients.reshape(self.shape)[:rows],
+            self.summaries.reshape((*self.shape[:3], len(SUMMARY)))[:rows],
             self.n_steps[begin:end], self.status[begin:end], self.final[begin:end],
         )  # fmt: skip
 
