@@ -16,31 +16,38 @@ HELD_RELEASE = 0.3390670019600681
 """steady-liver: release as a share of Rg, f5/Rg of the published hepatic-lag body at rest under 216 mg/min."""
 
 
-def _secretion(G: S, Vg: S, Rm: S, C1: S, a1: S) -> S:
-    """f1: insulin secretion, mU/min."""
+def f1(G: S, Vg: S, Rm: S, C1: S, a1: S) -> S:
+    """Insulin secretion, mU/min."""
     return Rm / (1 + exp((C1 - G / Vg) / a1))
 
 
-def _use(G: S, Ii: S, Vi: S, Vg: S, E: S, ti: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S) -> S:
-    """f2 + f3 f4: glucose use that needs no insulin, and use that insulin drives, mg/min."""
-    f2 = Ub * (1 - exp(-G / (C2 * Vg)))
-    f3 = G / (C3 * Vg)
+def f2(G: S, Vg: S, Ub: S, C2: S) -> S:
+    """Glucose use that needs no insulin, mg/min."""
+    return Ub * (1 - exp(-G / (C2 * Vg)))
+
+
+def f3(G: S, Vg: S, C3: S) -> S:
+    """How glucose drives the use that needs insulin."""
+    return G / (C3 * Vg)
+
+
+def f4(Ii: S, Vi: S, E: S, ti: S, U0: S, Um: S, beta: S, C4: S) -> S:
+    """How insulin drives it, mg/min; u is the equivalent plasma concentration over its half-point."""
     u = (Ii / C4) * (1 / Vi + 1 / (E * ti))
-    f4 = U0 + (Um - U0) / (1 + u**-beta)
-    return f2 + f3 * f4
+    return U0 + (Um - U0) / (1 + u**-beta)
 
 
-def _release(x: S, Vp: S, Rg: S, alpha: S, C5: S) -> S:
-    """f5: glucose release by the liver, mg/min."""
+def f5(x: S, Vp: S, Rg: S, alpha: S, C5: S) -> S:
+    """Glucose release by the liver, mg/min; x is the insulin amount it answers."""
     return Rg / (1 + exp(alpha * (x / Vp - C5)))
 
 
-def _seen(G: S, Ip: S, f1: S, f5: S, Vg: S, Vp: S) -> dict[str, S]:
+def _seen(G: S, Ip: S, secreted: S, released: S, Vg: S, Vp: S) -> dict[str, S]:
     return {
         "glucose_mg_dl": G / (10 * Vg),
         "insulin_mu_l": Ip / Vp,
-        "secretion_mu_per_min": f1,
-        "release_mg_per_min": f5,
+        "secretion_mu_per_min": secreted,
+        "release_mg_per_min": released,
     }
 
 
@@ -49,18 +56,19 @@ def hepatic_lag(
     td: S, Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S, alpha: S, C5: S,
 ) -> Equations:  # fmt: skip
     """Sturis et al. 1991 in the form of Tolic et al. 2000: a three-stage lag between plasma insulin and the liver."""
-    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
-    f5 = _release(x3, Vp, Rg, alpha, C5)
+    secreted = secretion * f1(G, Vg, Rm, C1, a1)
+    released = f5(x3, Vp, Rg, alpha, C5)
+    used = f2(G, Vg, Ub, C2) + f3(G, Vg, C3) * f4(Ii, Vi, E, ti, U0, Um, beta, C4)
     exchange = E * (Ip / Vp - Ii / Vi)
     rates = {
-        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ip": secreted + Iin - exchange - Ip / tp,
         "Ii": exchange - Ii / ti,
-        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+        "G": Gin - used + released,
         "x1": 3 * (Ip - x1) / td,
         "x2": 3 * (x1 - x2) / td,
         "x3": 3 * (x2 - x3) / td,
     }
-    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+    return rates, _seen(G, Ip, secreted, released, Vg, Vp)
 
 
 def prompt_liver(
@@ -68,15 +76,16 @@ def prompt_liver(
     Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S, alpha: S, C5: S,
 ) -> Equations:  # fmt: skip
     """The same body whose liver answers plasma insulin at once: the limit td -> 0."""
-    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
-    f5 = _release(Ip, Vp, Rg, alpha, C5)
+    secreted = secretion * f1(G, Vg, Rm, C1, a1)
+    released = f5(Ip, Vp, Rg, alpha, C5)
+    used = f2(G, Vg, Ub, C2) + f3(G, Vg, C3) * f4(Ii, Vi, E, ti, U0, Um, beta, C4)
     exchange = E * (Ip / Vp - Ii / Vi)
     rates = {
-        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ip": secreted + Iin - exchange - Ip / tp,
         "Ii": exchange - Ii / ti,
-        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+        "G": Gin - used + released,
     }
-    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+    return rates, _seen(G, Ip, secreted, released, Vg, Vp)
 
 
 def steady_liver(
@@ -84,15 +93,16 @@ def steady_liver(
     Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S,
 ) -> Equations:  # fmt: skip
     """The same body whose liver releases glucose at a constant rate, whatever insulin does."""
-    f1 = secretion * _secretion(G, Vg, Rm, C1, a1)
-    f5 = HELD_RELEASE * Rg
+    secreted = secretion * f1(G, Vg, Rm, C1, a1)
+    released = HELD_RELEASE * Rg
+    used = f2(G, Vg, Ub, C2) + f3(G, Vg, C3) * f4(Ii, Vi, E, ti, U0, Um, beta, C4)
     exchange = E * (Ip / Vp - Ii / Vi)
     rates = {
-        "Ip": f1 + Iin - exchange - Ip / tp,
+        "Ip": secreted + Iin - exchange - Ip / tp,
         "Ii": exchange - Ii / ti,
-        "G": Gin - _use(G, Ii, Vi, Vg, E, ti, Ub, C2, C3, U0, Um, beta, C4) + f5,
+        "G": Gin - used + released,
     }
-    return rates, _seen(G, Ip, f1, f5, Vg, Vp)
+    return rates, _seen(G, Ip, secreted, released, Vg, Vp)
 
 
 def insulin_at_rest(
@@ -102,7 +112,7 @@ def insulin_at_rest(
     r = (E / Vp) / (E / Vi + 1 / ti)
     # E/Vp - r E/Vi without the cancellation
     to_interstitium = r / ti
-    Ip = (secretion * _secretion(G, Vg, Rm, C1, a1) + Iin) / (1 / tp + to_interstitium)
+    Ip = (secretion * f1(G, Vg, Rm, C1, a1) + Iin) / (1 / tp + to_interstitium)
     return {"Ip": Ip, "Ii": r * Ip}
 
 
