@@ -9,13 +9,14 @@ from numpy.typing import NDArray
 
 from cohort.measure.meals import MEAL_COLUMNS, meal_rows
 from cohort.measure.regime import BISTABLE, FAILED, SUSTAINED, UNDECIDED, Cycles, cycles
-from cohort.measure.windows import GLUCOSE_WINDOW, INSULIN_WINDOW, LEVELS_MG_DL, window_rows
+from cohort.measure.windows import GLUCOSE_WINDOW, INSULIN_WINDOW, LEVELS_MG_DL, column_means, window_rows
 from cohort.model.body import Body, body
 from cohort.model.inputs import People, meal_times, steady_input
 from cohort.model.protocol import Arm, Meal
+from cohort.simulate.clamp import ClampedCourses, clamped_courses
 from cohort.simulate.course import Courses
 from cohort.simulate.engine import DONE, NOT_FINITE
-from cohort.simulate.run import courses, prepare, with_secretion
+from cohort.simulate.run import BLOCK, courses, prepare, with_secretion
 
 Array = NDArray[np.float64]
 Columns = dict[str, NDArray[np.generic]]
@@ -23,6 +24,11 @@ Columns = dict[str, NDArray[np.generic]]
 SEEN = ("glucose_mg_dl", "insulin_mu_l")
 BASELINE_MIN = 60.0
 """How far back a baseline reaches where there is no linear period."""
+
+CLAMP_COLUMNS = (
+    "clamp_rate_mean_mg_per_min", "clamp_rate_mean_mg_per_kg_min", "clamp_off_target_min", "clamp_dose_mg",
+    "clamp_target_mg_dl",
+)  # fmt: skip
 
 CYCLE_NOTES = ("no steady input", "at the mean input")
 """Why cycle outcomes are null, or that they speak of the unforced body."""
@@ -50,30 +56,69 @@ def outcomes(model: str | Body, values: Array, body_weight_kg: Array, arm: Arm) 
     tends = None if steady is None else cycles(found, with_secretion(own, arm.secretion), *steady)
     period = np.full(len(values), np.nan) if tends is None else tends.linear_period
     period = np.where(np.isfinite(period), period, BASELINE_MIN)
-    window, meals, status = _measure(found, own, people, arm, period)
+    read = _measure(found, own, people, arm, period)
     forced = _forced(arm)
-    columns = _cycle_columns(tends, status, forced) | {"forced": np.full(len(values), int(forced), np.int8)}
-    return Rows(columns | _window_columns(window, arm.duration_min - arm.settle_min), meals)
+    columns = _cycle_columns(tends, read.status, forced) | {"forced": np.full(len(values), int(forced), np.int8)}
+    columns |= _window_columns(read.window, arm.duration_min - arm.settle_min)
+    if arm.clamp is not None:
+        columns |= {name: read.clamp[:, i].copy() for i, name in enumerate(CLAMP_COLUMNS)}
+    return Rows(columns, _meal_table(read.meals, eaten(arm)))
 
 
-def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array) -> tuple[Array, Columns, NDArray[np.int64]]:
-    """Integrate the arm and read the courses: (window float64[n, columns], meals, status int64[n])."""
-    n = len(own)
-    window = np.full((n, len(GLUCOSE_WINDOW) + len(INSULIN_WINDOW)), np.nan)
-    status = np.full(n, NOT_FINITE)
-    times = eaten(arm)
-    meals = np.full((n, len(times), len(MEAL_COLUMNS)), np.nan)
-    end = arm.duration_min
-    for rows, course in courses(prepare(found, own, people, arm, SEEN), end):
-        status[rows] = course.status
-        some = np.full((len(rows), window.shape[1]), np.nan)
-        window_rows(*_arrays(course), arm.settle_min, end, period[rows], np.array(LEVELS_MG_DL), some)
-        window[rows] = some
-        if len(times):
-            eating = np.full((len(rows), len(times), len(MEAL_COLUMNS)), np.nan)
-            meal_rows(*_arrays(course), times, end, period[rows], eating)
-            meals[rows] = eating
-    return window, _meal_table(meals, times), status
+@dataclass
+class _Measured:
+    """What the courses of one arm give, filled block by block."""
+
+    window: Array
+    meals: Array
+    clamp: Array
+    status: NDArray[np.int64]
+
+
+def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array) -> _Measured:
+    """Integrate the arm and read its courses."""
+    n, times = len(own), eaten(arm)
+    read = _Measured(
+        np.full((n, len(GLUCOSE_WINDOW) + len(INSULIN_WINDOW)), np.nan),
+        np.full((n, len(times), len(MEAL_COLUMNS)), np.nan),
+        np.full((n, len(CLAMP_COLUMNS)), np.nan),
+        np.full(n, NOT_FINITE),
+    )
+    if arm.clamp is not None:
+        for begin in range(0, n, BLOCK):
+            rows = np.arange(begin, min(begin + BLOCK, n))
+            block = slice(begin, begin + BLOCK)
+            clamped = clamped_courses(found, own[block], people.take(block), arm, SEEN)
+            _read(read, rows, clamped.courses, arm, times, period)
+            _read_clamp(read.clamp, rows, clamped, arm, people.body_weight_kg[block])
+    else:
+        for rows, course in courses(prepare(found, own, people, arm, SEEN), arm.duration_min):
+            _read(read, rows, course, arm, times, period)
+    return read
+
+
+def _read(
+    read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, times: Array, period: Array
+) -> None:
+    read.status[rows] = course.status
+    some = np.full((len(rows), read.window.shape[1]), np.nan)
+    window_rows(*_arrays(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)
+    read.window[rows] = some
+    if len(times):
+        eating = np.full((len(rows), *read.meals.shape[1:]), np.nan)
+        meal_rows(*_arrays(course), times, arm.duration_min, period[rows], eating)
+        read.meals[rows] = eating
+
+
+def _read_clamp(out: Array, rows: NDArray[np.int64], clamped: ClampedCourses, arm: Arm, weight: Array) -> None:
+    assert arm.clamp is not None
+    begin = max(arm.settle_min, arm.clamp.from_min)
+    rate = np.full(len(rows), np.nan)
+    column_means(*_arrays(clamped.courses), len(SEEN), begin, arm.duration_min, rate)
+    whole = clamped.courses.status == DONE
+    off = np.where(whole, clamped.off_target_min, np.nan)
+    dose, target = np.where(whole, clamped.dose_mg, np.nan), np.where(whole, clamped.target_mg_dl, np.nan)
+    out[rows] = np.column_stack([rate, rate / weight, off, dose, target])
 
 
 def _arrays(course: Courses) -> tuple[Array, Array, Array, Array, NDArray[np.int64], NDArray[np.int64]]:

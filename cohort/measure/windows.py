@@ -178,3 +178,13 @@ def window_rows(start, step_size, coefficients, summaries, n_steps, status, sett
         glucose_window(glucose, settle, end, periods[b], levels, out[b])
         insulin = scan(start[b, :n], step_size[b, :n], coefficients[b, :n, 1], summaries[b, :n, 1])
         insulin_window(insulin, settle, end, out[b, 14:])
+
+
+@jit
+def column_means(start, step_size, coefficients, summaries, n_steps, status, column, begin, end, out):  # type: ignore[no-untyped-def]
+    """The mean of one recorded column over begin..end of every subject whose course is whole: out float64[n]."""
+    for b in range(n_steps.shape[0]):
+        if status[b] == -1:
+            n = n_steps[b]
+            read = scan(start[b, :n], step_size[b, :n], coefficients[b, :n, column], summaries[b, :n, column])
+            out[b] = mean_between(read, begin, end)

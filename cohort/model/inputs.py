@@ -42,6 +42,15 @@ class People:
     def count(self) -> int:
         return len(self.body_weight_kg)
 
+    def take(self, rows: slice) -> People:
+        """Return the chosen subjects."""
+        return People(
+            self.body_weight_kg[rows],
+            self.meal_absorption_min[rows],
+            self.meal_bioavailability[rows],
+            self.natural_period_min[rows],
+        )
+
 
 @dataclass(frozen=True)
 class Inputs:

@@ -41,6 +41,20 @@ class Courses:
             self.n_steps[rows], self.status[rows], self.final[rows],
         )  # fmt: skip
 
+    def copied(self, capacity: int) -> Courses:
+        """Return the same courses in memory of their own, with room for `capacity` steps."""
+
+        def padded(array: Array) -> Array:
+            out = np.full((array.shape[0], capacity, *array.shape[2:]), np.nan)
+            kept = min(capacity, array.shape[1])
+            out[:, :kept] = array[:, :kept]
+            return out
+
+        return Courses(
+            self.columns, *(padded(a) for a in (self.start, self.step_size, self.coefficients, self.summaries)),
+            self.n_steps.copy(), self.status.copy(), self.final.copy(),
+        )  # fmt: skip
+
     def sample(self, times_min: Array) -> Array:
         """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded."""
         out = np.full((len(self.n_steps), len(self.columns), len(times_min)), np.nan)
