@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import compile_program, jit
-from cohort.measure.linear import leading_directions, solve_each
+from cohort.model.linear import leading_directions, solve_each
 from cohort.measure.turning import turning_points
 from cohort.model.body import Body
 from cohort.model.inputs import held
@@ -109,7 +109,7 @@ def find_orbits(subjects: Held, start: Array, rounds: tuple[int, ...] = ROUNDS) 
                                 (found.state, found.period, found.error, found.multiplier), strict=True):  # fmt: skip
             mine[near[found.found]] = theirs[found.found]
         out.found[near[found.found]] = True
-        left = near[~found.found]
+        left = left[~out.found[left]]
     return out
 
 

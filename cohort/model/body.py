@@ -79,7 +79,7 @@ class Body:
         return hash(self.card.name)
 
 
-def make_body(card: ModelCard, text: Callable[..., Any], at_rest: Callable[..., Any]) -> Body:
+def make_body(card: ModelCard, text: Callable[..., Any], at_rest: Callable[..., Any] | None = None) -> Body:
     """Trace a model's text. Raises ValueError where text and card name different states, KeyError for unknown names."""
     traced = trace(text, at_rest, (*card.parameters, *ARM_PARAMETERS))
     if traced.states != card.states:

@@ -1,7 +1,8 @@
 """Bodies at rest: the equilibrium under a constant input, its eigenvalues, and the regime they imply.
 
 The scalar balance of glucose falls strictly in G (all parameters positive, Um > U0), so it has one root; it is found
-by Newton's method kept inside a bracket. Eigenvalues of the exact Jacobian come from Hessenberg reduction and the
+by Newton's method kept inside a bracket. A model that gives no such balance is solved in all states at once by damped
+Newton steps from near its typical size. Eigenvalues of the exact Jacobian come from Hessenberg reduction and the
 shifted QR iteration of Francis, then Newton's method on det(lambda - J) polishes the leading one.
 """
 
@@ -14,6 +15,7 @@ from numpy.typing import NDArray
 
 from cohort.compiled import call_program, compile_program, jit
 from cohort.model.body import Body
+from cohort.model.linear import solve_each
 
 Array = NDArray[np.float64]
 
@@ -41,34 +43,74 @@ def at_rest(body: Body, parameters: Array, Gin: Array, Iin: Array) -> Rest:
     lead = body.card.states.index(body.traced.rest_of)
     lowest = 0.0 if body.card.positive else -np.inf
     typical = body.card.typical[body.traced.rest_of]
-    _solve(
-        compile_program(body.balance), compile_program(body.rates), compile_program(body.jacobian),
-        inputs, lead, typical, lowest, found, jacobians, eigenvalues,
-    )  # fmt: skip
+    rates, jacobian = compile_program(body.rates), compile_program(body.jacobian)
+    if body.traced.rest:
+        _solve(compile_program(body.balance), inputs, lead, typical, lowest, found)
+    else:
+        sizes = np.array([body.card.typical[s] for s in body.card.states])
+        _solve_together(rates, jacobian, inputs, sizes if body.card.positive else 0.1 * sizes, found)
+    _spectra(jacobian, inputs, found, jacobians, eigenvalues)
     return Rest(found, eigenvalues, jacobians)
 
 
 @jit
-def _solve(balance, rates, jacobian, inputs, lead, typical, lowest, found, jacobians, eigenvalues):  # type: ignore[no-untyped-def]
+def _solve(balance, inputs, lead, typical, lowest, found):  # type: ignore[no-untyped-def]
     n, states = found.shape
     source = np.empty(1 + inputs.shape[1])
     result = np.empty(2 + states)
-    place = np.empty(states + inputs.shape[1])
-    slopes = np.empty((states, states))
     for b in range(n):
         source[1:] = inputs[b]
-        if not root(balance, source, result, typical, lowest):
-            continue
-        for i in range(states):
-            place[i] = result[2 + i]
-        place[lead] = source[0]
+        if root(balance, source, result, typical, lowest):
+            found[b] = result[2:]
+            found[b, lead] = source[0]
+
+
+@jit
+def _solve_together(rates, jacobian, inputs, begin, found):  # type: ignore[no-untyped-def]
+    n, states = found.shape
+    place = np.empty(states + inputs.shape[1])
+    rate, slopes, step = np.empty(states), np.empty((1, states, states)), np.empty((1, states))
+    for b in range(n):
+        place[:states] = begin
         place[states:] = inputs[b]
-        call_program(jacobian, place, slopes)
-        if not np.all(np.isfinite(slopes)):
+        for _ in range(200):
+            call_program(rates, place, rate)
+            call_program(jacobian, place, slopes)
+            solve_each(slopes, -rate.reshape(1, states), step)
+            size = np.abs(rate).sum()
+            relative = np.max(np.abs(step[0]) / (np.abs(place[:states]) + 1e-3 * np.abs(begin)))
+            if not np.isfinite(relative):
+                break
+            before = place[:states].copy()
+            factor = 1.0
+            while factor > 1e-6:
+                place[:states] = before + factor * step[0]
+                call_program(rates, place, rate)
+                if np.abs(rate).sum() <= size:
+                    break
+                factor *= 0.5
+            if relative < 1e-14 or size == 0.0 or factor <= 1e-6:
+                if relative < 1e-9:
+                    found[b] = before
+                break
+
+
+@jit
+def _spectra(jacobian, inputs, found, jacobians, eigenvalues):  # type: ignore[no-untyped-def]
+    """Jacobian and eigenvalues at each equilibrium; one whose Jacobian is not finite is no equilibrium."""
+    n, states = found.shape
+    place = np.empty(states + inputs.shape[1])
+    for b in range(n):
+        if np.isnan(found[b, 0]):
             continue
-        found[b] = place[:states]
-        jacobians[b] = slopes
-        spectrum(slopes, eigenvalues[b])
+        place[:states] = found[b]
+        place[states:] = inputs[b]
+        call_program(jacobian, place, jacobians[b])
+        if np.all(np.isfinite(jacobians[b])):
+            spectrum(jacobians[b], eigenvalues[b])
+        else:
+            found[b] = np.nan
+            jacobians[b] = np.nan
 
 
 @jit

@@ -147,7 +147,8 @@ class Traced:
     """A model's equations as a graph.
 
     rates: d(state)/dt by state, in the states' order; observed: what a reader sees, by boundary name;
-    parameters: names the equations use beside states and inputs; rest: the states at rest in terms of `rest_of`.
+    parameters: names the equations use beside states and inputs; rest: the states at rest in terms of `rest_of`,
+    empty where no such form is known.
     """
 
     states: tuple[str, ...]
@@ -162,13 +163,18 @@ def _call(function: Callable[..., Any]) -> Any:
     return function(*(name(parameter) for parameter in inspect.signature(function).parameters))
 
 
-def trace(equations: Callable[..., Any], at_rest: Callable[..., Any], parameters: Sequence[str]) -> Traced:
+def trace(equations: Callable[..., Any], at_rest: Callable[..., Any] | None, parameters: Sequence[str]) -> Traced:
     """Call the model's text once with symbols.
 
     `equations` returns (rates, observed); `at_rest`, whose first argument is the state that the others follow from,
-    returns the other states. Both name states, inputs and parameters in their signatures.
+    returns the other states; its own rate must then fall strictly with it. Both name states, inputs and parameters
+    in their signatures. Without `at_rest` the equilibrium is sought in all states at once.
     """
     rates, observed = _call(equations)
+    if at_rest is None:
+        rates = {state: _symbol(rate) for state, rate in rates.items()}
+        observed = {column: _symbol(value) for column, value in observed.items()}
+        return Traced(tuple(rates), tuple(parameters), rates, observed, next(iter(rates)), {})
     rest_of = next(iter(inspect.signature(at_rest).parameters))
     rates = {state: _symbol(rate) for state, rate in rates.items()}
     observed = {column: _symbol(value) for column, value in observed.items()}
