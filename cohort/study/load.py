@@ -1,0 +1,142 @@
+"""Read a study: file and overrides in, a checked `Study` out, or every problem at once."""
+
+from __future__ import annotations
+
+import copy
+import os
+import tomllib
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from cohort.errors import Problem, StudyError, nearest
+from cohort.model.catalogue import MODELS
+from cohort.study import arms as arms_of
+from cohort.study import subjects as subjects_of
+from cohort.study.files import Files
+from cohort.study.lines import Path as KeyPath
+from cohort.study.oddities import oddities
+from cohort.study.spec import Output, Study
+from cohort.study.tree import Tree, check, dotted, read_toml
+
+_NAMED_LISTS = ("arms", "strata", "schedules")
+MOST_COURSE_POINTS = 2_000_000_000
+
+
+def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Study:
+    """Read and check a study file; `overrides` are KEY=VALUE words. Raises StudyError with every problem found."""
+    place = Path(path)
+    try:
+        data = place.read_bytes()
+    except OSError as error:
+        folder = place.parent if place.parent.is_dir() else Path()
+        near = nearest(place.name, [p.name for p in folder.glob("*.toml")])
+        raise StudyError([Problem("", f"cannot be read: {(error.strerror or str(error)).lower()}{near}", str(path))]) from None
+    except ValueError as error:
+        raise StudyError([Problem("", f"cannot be read: {error}", str(path))]) from None
+    return study_from(data, place, overrides)
+
+
+def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study:
+    """As `load_study`, from the file's bytes."""
+    raw, text = read_toml(data, str(place))
+    raw, overridden = _override(raw, overrides)
+    tree = check(raw, text, str(place), overridden)
+    model, seed = _model_and_seed(tree)
+    card = MODELS[model]
+    files = Files(place.parent)
+    recipe = subjects_of.recipe(tree, card, seed, files)
+    weighed = any(s.weight is not None for s in recipe.strata)
+    if recipe.table is not None:
+        weighed = not bool((recipe.table.body_weight_kg != recipe.table.body_weight_kg).any())
+    protocols = arms_of.arms(tree, card, weighed)
+    output = _output(tree, recipe.count, protocols)
+    if tree.problems:
+        raise StudyError(_sorted(tree.problems))
+    title = tree.values.get("title", place.stem)
+    study = Study(place, data, tuple(overrides), title, model, seed, recipe, protocols, output, files.digests)
+    warnings = (*tree.warnings, *oddities(study, tree))
+    return Study(**{**study.__dict__, "warnings": tuple(warnings)})
+
+
+def _sorted(problems: list[Problem]) -> list[Problem]:
+    return sorted(dict.fromkeys(problems), key=lambda p: (p.line is None, p.line or 0))
+
+
+def _model_and_seed(tree: Tree) -> tuple[str, int]:
+    model = tree.values.get("model", "hepatic-lag")
+    if model not in MODELS:
+        tree.problem(("model",), f"{model[:60]!r} is not a model{nearest(model, MODELS)}; one of {', '.join(MODELS)}")
+        model = "hepatic-lag"
+    if "seed" not in tree.values and not any(p.key == "seed" for p in tree.problems):
+        tree.problem((), "seed is missing; any whole number >= 0 makes the study repeatable")
+    return model, tree.values.get("seed", 0)
+
+
+def _output(tree: Tree, count: int, protocols: Sequence[Any]) -> Output:
+    values = tree.values.get("output", {})
+    every = values["every"].number if "every" in values else 5.0
+    output = Output(min(values.get("time_courses", 20), count), every)
+    points = sum(arm.duration_min / every for arm in protocols) * output.time_courses
+    if points > MOST_COURSE_POINTS:
+        tree.problem(("output",), f"{points:,.0f} points of time courses; at most {MOST_COURSE_POINTS:,} are allowed")
+    return output
+
+
+# ---- overrides ---------------------------------------------------------------------------------------------------
+
+
+def _override(tree: dict[str, Any], overrides: Sequence[str]) -> tuple[dict[str, Any], frozenset[KeyPath]]:
+    tree = copy.deepcopy(tree) if overrides else tree
+    changed: set[KeyPath] = set()
+    problems: list[Problem] = []
+    for word in overrides:
+        key, sign, text = word.partition("=")
+        if not sign or not key.strip():
+            problems.append(Problem(word[:60], "is not KEY=VALUE, such as subjects.count=500", "--set"))
+            continue
+        try:
+            changed.add(_set(tree, key.strip(), _toml_value(text.strip())))
+        except KeyError as error:
+            problems.append(Problem(key.strip(), str(error.args[0]), "--set"))
+    if problems:
+        raise StudyError(problems)
+    return tree, frozenset(changed)
+
+
+def _toml_value(text: str) -> Any:
+    """A value as TOML writes it; anything else is a text as it stands."""
+    try:
+        found = tomllib.loads(f"x = {text}")
+    except (tomllib.TOMLDecodeError, RecursionError, ValueError):
+        return text
+    return found["x"] if list(found) == ["x"] else text
+
+
+def _set(tree: dict[str, Any], key: str, value: Any) -> KeyPath:
+    """Put `value` at a dotted key; entries of arms, strata and schedules go by name."""
+    node: Any = tree
+    path: KeyPath = ()
+    rest = key
+    while True:
+        if isinstance(node, list):
+            names = [str(item.get("name", "")) if isinstance(item, dict) else "" for item in node]
+            fitting = [n for n in names if n and (rest == n or rest.startswith(n + "."))]
+            if not fitting:
+                word = rest.split(".")[0]
+                known = f"; known: {', '.join(filter(None, names))}" if any(names) else ""
+                raise KeyError(f"{dotted(path)} has no entry named {word!r}{nearest(word, names)}{known}")
+            name = max(fitting, key=len)
+            index = names.index(name)
+            node, path, rest = node[index], (*path, index), rest[len(name) + 1 :]
+            if not rest:
+                raise KeyError("names a whole entry; name one of its keys")
+            continue
+        part, _, rest = rest.partition(".")
+        path = (*path, part)
+        if not rest:
+            node[part] = value
+            return path
+        if not isinstance(node.get(part), dict | list):
+            node[part] = {}
+        node = node[part]

@@ -1,0 +1,160 @@
+"""What a study will do before it does it: subjects, runs, time, memory and disk."""
+
+from __future__ import annotations
+
+import os
+from dataclasses import dataclass
+
+import numpy as np
+
+from cohort.model.protocol import Arm, Meal, OnOff, Sine
+from cohort.population.laws import Fixed
+from cohort.population.recipe import WEIGHT, Stratum
+from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
+from cohort.study.arms import has_steady_input
+from cohort.study.spec import Study
+
+SHARD = 16_384
+"""Consecutive subjects that are simulated, stored and resumed together."""
+
+# Costs on the machine the figures in the README were measured on; `cohort check` says that times are estimates.
+US_PER_HOUR = 2.3
+US_PER_HOUR_MEALS = 4.6
+US_PER_CYCLE_SEARCH = 55.0
+US_PER_SUBJECT_WRITTEN = 12.0
+SECONDS_AT_START = 1.2
+BYTES_PER_OUTCOME = 8.5
+OUTCOME_COLUMNS = 48
+BASE_MEMORY_MB = 230.0
+MEMORY_PER_WORKER_MB = 90.0
+
+
+@dataclass(frozen=True)
+class ArmPlan:
+    """One arm: its hours, how many stops its inputs make, and seconds of one core it takes."""
+
+    name: str
+    hours: float
+    stops: int
+    core_seconds: float
+
+
+@dataclass(frozen=True)
+class LawRow:
+    """The 5th, 50th and 95th percentile of a law, and the share its physical range cuts off."""
+
+    stratum: str
+    parameter: str
+    unit: str
+    p5: float
+    p50: float
+    p95: float
+    cut: float
+
+
+@dataclass(frozen=True)
+class Plan:
+    """The whole run. seconds: of the clock, on `workers` workers."""
+
+    subjects: int
+    shards: int
+    runs: int
+    workers: int
+    arms: tuple[ArmPlan, ...]
+    seconds: float
+    memory_mb: float
+    disk_mb: float
+    laws: tuple[LawRow, ...]
+
+
+def plan(study: Study, workers: int | None = None) -> Plan:
+    """Return what running the study takes; nothing is drawn or simulated."""
+    workers = workers or os.cpu_count() or 1
+    n = study.recipe.count
+    arms = tuple(_arm(arm, n) for arm in study.arms)
+    core = sum(a.core_seconds for a in arms) + n * US_PER_SUBJECT_WRITTEN * 1e-6 * (len(arms) + 1)
+    subject_columns = len(study.recipe.varied) + 3
+    rows_mb = n * (len(arms) * OUTCOME_COLUMNS + subject_columns) * BYTES_PER_OUTCOME / 1e6
+    points = sum(a.duration_min / study.output.every_min + 1 for a in study.arms)
+    disk = rows_mb + points * study.output.time_courses * 6 * BYTES_PER_OUTCOME / 1e6
+    return Plan(
+        n, -(-n // SHARD), n * len(arms), workers, arms, SECONDS_AT_START + core / max(min(workers, n / 256), 1.0),
+        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study),
+    )  # fmt: skip
+
+
+def _arm(arm: Arm, n: int) -> ArmPlan:
+    hours = arm.duration_min / 60.0
+    stops = 1
+    eating = False
+    for shape in (*arm.glucose, *arm.insulin):
+        if isinstance(shape, OnOff) and isinstance(shape.period_min, float):
+            stops += 2 * int(arm.duration_min / shape.period_min)
+        eating |= isinstance(shape, Meal | Sine)
+    per_subject = hours * (US_PER_HOUR_MEALS if eating or arm.clamp else US_PER_HOUR) + 0.15 * stops
+    per_subject += US_PER_CYCLE_SEARCH if has_steady_input(arm) else 0.0
+    return ArmPlan(arm.name, hours, stops, per_subject * n * 1e-6)
+
+
+def _laws(study: Study) -> tuple[LawRow, ...]:
+    rows = []
+    for stratum in study.recipe.strata:
+        for name in study.recipe.drawn:
+            if study.recipe.table is None and (row := _law_row(study, stratum, name)):
+                rows.append(row)
+    return tuple(rows)
+
+
+def _law_row(study: Study, stratum: Stratum, name: str) -> LawRow | None:
+    law = stratum.weight if name == WEIGHT else stratum.laws.get(name)
+    if law is None or isinstance(law, Fixed):
+        return None
+    inner, mass = study.recipe.cut_law(stratum, name)
+    low, middle, high = inner.quantile(np.array([0.05, 0.5, 0.95]))
+    unit = "kg" if name == WEIGHT else (PARAMETERS.get(name) or INPUT_PARAMETERS[name]).unit
+    return LawRow(stratum.name, name, unit, float(low), float(middle), float(high), mass)
+
+
+# ---- in words ----------------------------------------------------------------------------------------------------
+
+
+def describe(study: Study, found: Plan) -> str:
+    """The plan as a colleague would tell it, in lines of at most 80 characters."""
+    n_arms = len(found.arms)
+    lines = [
+        f"{study.title}",
+        f"  model {study.model}, seed {study.seed}",
+        f"  {found.subjects:,} subjects x {n_arms} arm{'s' * (n_arms > 1)} = {found.runs:,} runs "
+        f"in {found.shards:,} shard{'s' * (found.shards > 1)}",
+        f"  about {duration(found.seconds)} on {found.workers} worker{'s' * (found.workers > 1)}, "
+        f"{found.memory_mb:,.0f} MB of memory, {size(found.disk_mb)} of disk (estimates)",
+        "",
+        "  arm                               hours   steady input",
+    ]
+    for arm, row in zip(study.arms, found.arms, strict=True):
+        lines.append(f"  {row.name[:32]:32s}  {row.hours:5g}   {'yes' if has_steady_input(arm) else 'no'}")
+    if found.laws:
+        lines += ["", "  varied between subjects            5 %       50 %       95 %"]
+        many = len({row.stratum for row in found.laws}) > 1
+        for law in found.laws:
+            label = f"{law.stratum}: {law.parameter}" if many else law.parameter
+            lines.append(f"  {label[:28]:28s} {law.p5:10.4g} {law.p50:10.4g} {law.p95:10.4g}  {_unit(law.unit)}".rstrip())
+    elif study.recipe.table is None:
+        lines += ["", "  nothing varies between subjects: every row will be the same body"]
+    return "\n".join(lines)
+
+
+def _unit(unit: str) -> str:
+    return "" if unit == "1" else unit
+
+
+def duration(seconds: float) -> str:
+    """A time as a person says it: 4 s, 12 min, 3.5 h."""
+    if seconds < 90:
+        return f"{max(seconds, 1):.0f} s"
+    return f"{seconds / 60:.0f} min" if seconds < 5400 else f"{seconds / 3600:.1f} h"
+
+
+def size(megabytes: float) -> str:
+    """A size as a person says it: 12 MB, 3.4 GB."""
+    return f"{max(megabytes, 1):,.0f} MB" if megabytes < 2000 else f"{megabytes / 1000:,.1f} GB"

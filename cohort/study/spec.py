@@ -1,0 +1,40 @@
+"""A checked study: plain data, ready to plan and run."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from cohort.errors import Problem
+from cohort.model.protocol import Arm
+from cohort.population.recipe import Recipe
+
+
+@dataclass(frozen=True)
+class Output:
+    """How many subjects keep their time courses, and how far apart (min) their points are."""
+
+    time_courses: int = 20
+    every_min: float = 5.0
+
+
+@dataclass(frozen=True)
+class Study:
+    """A study file, read and checked.
+
+    path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
+    file order; files: SHA-256 of every data file by the name the study gives it; warnings: legal but odd.
+    """
+
+    path: Path
+    text: bytes
+    overrides: tuple[str, ...]
+    title: str
+    model: str
+    seed: int
+    recipe: Recipe
+    arms: tuple[Arm, ...]
+    output: Output
+    files: Mapping[str, str] = field(default_factory=dict)
+    warnings: tuple[Problem, ...] = ()

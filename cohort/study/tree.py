@@ -1,0 +1,225 @@
+"""From TOML text to checked values: spelling, types, units and ranges of every key, all problems at once."""
+
+from __future__ import annotations
+
+import tomllib
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from cohort.errors import Problem, StudyError, nearest
+from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
+from cohort.study.keys import KEYS, Key, children, parameter_unit
+from cohort.study.lines import Path, locate
+from cohort.study.units import UnitError, parse
+
+LARGEST_TEXT = 2_000_000
+_ANY = "*"
+
+
+@dataclass(frozen=True)
+class Quantity:
+    """A converted quantity: number in the kept unit."""
+
+    number: float
+    unit: str
+
+
+@dataclass
+class Tree:
+    """A study's values by path, converted, and every problem found on the way.
+
+    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out.
+    """
+
+    file: str
+    lines: Mapping[Path, int]
+    overridden: frozenset[Path]
+    values: dict[str, Any]
+    problems: list[Problem] = field(default_factory=list)
+    warnings: list[Problem] = field(default_factory=list)
+
+    def problem(self, path: Sequence[str | int], message: str) -> None:
+        """Note a problem at a path."""
+        self.problems.append(self.place(path, message))
+
+    def place(self, path: Sequence[str | int], message: str) -> Problem:
+        """A problem at a path, with the line of the nearest key above it that stands in the file."""
+        at = tuple(path)
+        if any(at[: i + 1] in self.overridden for i in range(len(at))):
+            return Problem(dotted(at), message, "--set")
+        for length in range(len(at), 0, -1):
+            if at[:length] in self.lines:
+                return Problem(dotted(at), message, self.file, self.lines[at[:length]])
+        return Problem(dotted(at), message, self.file)
+
+
+def dotted(path: Sequence[str | int]) -> str:
+    """A path as a user writes it: arms[0].duration, numbered from 1."""
+    out = ""
+    for part in path:
+        out += f"[{part + 1}]" if isinstance(part, int) else f".{part}" if out else part
+    return out
+
+
+def read_toml(data: bytes, file: str) -> tuple[dict[str, Any], str]:
+    """Return (tree, text). Raises StudyError where the bytes are no TOML, or too many."""
+    if len(data) > LARGEST_TEXT:
+        raise StudyError([Problem("", f"is larger than a study file may be ({LARGEST_TEXT:,} bytes)", file)])
+    try:
+        text = data.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        line = data[: error.start].count(b"\n") + 1
+        raise StudyError([Problem("", "is not UTF-8 text", file, line)]) from None
+    try:
+        return tomllib.loads(text.replace("\r\n", "\n")), text
+    except tomllib.TOMLDecodeError as error:
+        message, _, place = str(error).partition(" (at ")
+        line = place.removeprefix("line ").split(",")[0]
+        number = int(line) if line.isdigit() else text.count("\n") + 1
+        raise StudyError([Problem("", f"is not TOML: {message[0].lower()}{message[1:]}", file, number)]) from None
+    except (RecursionError, ValueError) as error:
+        why = "is nested too deeply" if isinstance(error, RecursionError) else f"is not TOML: {error}"
+        raise StudyError([Problem("", why, file)]) from None
+
+
+def check(tree: dict[str, Any], text: str, file: str, overridden: frozenset[Path]) -> Tree:
+    """Convert and check every key of a TOML tree against the table of keys."""
+    out = Tree(file, locate(text), overridden, {})
+    out.values = _table(out, tree, (), "")
+    return out
+
+
+def _pattern_of(pattern: str, name: str) -> str | None:
+    base = f"{pattern}." if pattern else ""
+    if base + name in KEYS:
+        return base + name
+    return f"{base}{_ANY}" if f"{base}{_ANY}" in KEYS else None
+
+
+def _table(out: Tree, table: dict[str, Any], path: Path, pattern: str) -> dict[str, Any]:
+    converted: dict[str, Any] = {}
+    for name, value in table.items():
+        here = (*path, name)
+        found = _pattern_of(pattern, name)
+        if found is None:
+            allowed = children(pattern)
+            near = nearest(name, allowed)
+            listed = "" if near else f"; allowed here: {', '.join(allowed)}" if allowed else ""
+            out.problem(here, f"no such key{near}{listed}")
+            continue
+        key = KEYS[found]
+        if not key.available:
+            out.problem(here, "not available yet")
+            continue
+        good = _value(out, value, here, key)
+        if good is not None:
+            converted[name] = good
+    return converted
+
+
+def _value(out: Tree, value: Any, path: Path, key: Key) -> Any:
+    if key.kind == "tables":
+        return _tables(out, value, path, key)
+    if isinstance(value, dict):
+        if key.kind != "table" and not children(key.path):
+            out.problem(path, f"a table is not allowed; {key.meaning}")
+            return None
+        return _table(out, value, path, key.path)
+    if key.kind == "table":
+        out.problem(path, f"{_shown(value)} is not allowed; a table is wanted: {key.meaning}")
+        return None
+    if key.kind in ("texts", "quantities", "numbers"):
+        return _list(out, value, path, key)
+    return _leaf(out, value, path, key)
+
+
+def _tables(out: Tree, value: Any, path: Path, key: Key) -> Any:
+    if not isinstance(value, list) or not all(isinstance(item, dict) for item in value):
+        out.problem(path, f"{_shown(value)} is not allowed; a list of tables is wanted: {key.meaning}")
+        return None
+    if len(value) > 1000:
+        out.problem(path, f"{len(value):,} entries; at most 1,000 are allowed")
+        return None
+    return [_table(out, item, (*path, i), f"{key.path}[]") for i, item in enumerate(value)]
+
+
+def _list(out: Tree, value: Any, path: Path, key: Key) -> Any:
+    if not isinstance(value, list):
+        out.problem(path, f"{_shown(value)} is not allowed; a list is wanted: {key.meaning}")
+        return None
+    if len(value) > 100_000:
+        out.problem(path, f"{len(value):,} entries; at most 100,000 are allowed")
+        return None
+    found = [_leaf(out, item, (*path, i), key) for i, item in enumerate(value)]
+    return None if any(item is None for item in found) else found
+
+
+def _leaf(out: Tree, value: Any, path: Path, key: Key) -> Any:
+    kind = {"texts": "text", "quantities": "quantity", "numbers": "number"}.get(key.kind, key.kind)
+    if kind == "quantity":
+        return _quantity(out, value, path, key)
+    if kind == "yes/no":
+        good = isinstance(value, bool)
+    elif kind in ("text", "word"):
+        good = isinstance(value, str)
+    else:
+        good = isinstance(value, int if kind == "whole" else int | float) and not isinstance(value, bool)
+    if not good:
+        wanted = {"whole": "a whole number", "number": "a number", "yes/no": "true or false"}.get(kind, "a text")
+        out.problem(path, f"{_shown(value)} is not allowed; {wanted} is wanted: {key.meaning}")
+        return None
+    if kind == "word" and key.words and value not in key.words:
+        near = nearest(value, key.words)
+        out.problem(path, f"{value[:60]!r} is not allowed{near}; one of {', '.join(key.words)}")
+        return None
+    if kind in ("whole", "number") and not _in_range(out, float(min(max(value, -1e300), 1e300)), value, path, key, ""):
+        return None
+    return value
+
+
+def _quantity(out: Tree, value: Any, path: Path, key: Key) -> Quantity | str | None:
+    if key.path.endswith("clamp.glucose") and value == "own fasting":
+        return str(value)
+    units = key.units
+    if units == ("parameter",):
+        symbol = next((str(p) for p in path if p in PARAMETERS or p in INPUT_PARAMETERS), None)
+        if symbol is None:
+            return None  # the symbol itself is unknown and has its own problem
+        units = (parameter_unit(symbol),)
+    try:
+        number, unit = parse(value, *units)
+    except UnitError as error:
+        out.problem(path, str(error))
+        return None
+    return Quantity(number, unit) if _in_range(out, number, value, path, key, f" {unit}") else None
+
+
+def _in_range(out: Tree, number: float, shown: Any, path: Path, key: Key, unit: str) -> bool:
+    if number != number or number in (float("inf"), float("-inf")):
+        out.problem(path, f"{shown} is not a finite number")
+        return False
+    unit = "" if unit == " 1" else unit
+    name = key.path.rsplit(".", 1)[-1]
+    what = {"cv": "a coefficient of variation"}.get(name, f"{key.meaning}")
+    if number < key.low or (key.above and number == key.low):
+        sign = ">" if key.above else ">="
+        out.problem(path, f"{_shown(shown)} is not allowed; {what} must be {sign} {_plain(key.low)}{unit}.")
+        return False
+    if number > key.high:
+        out.problem(path, f"{_shown(shown)} is not allowed; {what} must be <= {_plain(key.high)}{unit}.")
+        return False
+    return True
+
+
+def _plain(x: float) -> str:
+    return f"{x:,.0f}" if x == int(x) and abs(x) < 1e16 else f"{x:g}"
+
+
+def _shown(value: Any) -> str:
+    if isinstance(value, dict):
+        return "a table"
+    if isinstance(value, list):
+        return "a list"
+    text = str(value).lower() if isinstance(value, bool) else repr(value) if isinstance(value, str) else f"{value}"
+    return text if len(text) <= 60 else f"{text[:57]}..."
