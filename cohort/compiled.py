@@ -26,6 +26,7 @@ import llvmlite.binding as llvm
 import numba
 from llvmlite import ir
 from numba.core import cgutils, types
+from numba.core.compiler_lock import global_compiler_lock
 from numba.extending import intrinsic
 
 from cohort.program import Program
@@ -210,9 +211,11 @@ _LOADED: dict[tuple[str, int], tuple[int, Any]] = {}
 
 def compile_program(program: Program, lanes: int = 1) -> int:
     """Return the address of `void f(const double *inputs, double *outputs)`, value i of lane l at [i * lanes + l]."""
-    _start_llvm()
     key = (program.key, lanes)
-    if key not in _LOADED:
+    if key in _LOADED:
+        return _LOADED[key][0]
+    with global_compiler_lock:  # LLVM is not for two threads at once
+        _start_llvm()
         empty = llvm.parse_assembly("")
         empty.triple = llvm.get_process_triple()
         machine = llvm.Target.from_triple(empty.triple).create_target_machine()

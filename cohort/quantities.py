@@ -62,3 +62,128 @@ INPUT_PARAMETERS: dict[str, Quantity] = {
     )
 }
 """Properties of a person that act on the arms' inputs, not on the body's equations."""
+
+
+REGIMES = ("sustained", "damped", "quiet", "bistable", "undecided", "failed")
+FAILURES = ("not finite", "step too small", "left the physical range", "out of budget", "process died")
+CYCLE_NOTES = ("no steady input", "at the mean input")
+KEPT_BECAUSE = ("typical", "borderline", "extreme")
+
+
+@dataclass(frozen=True)
+class Column:
+    """A column of a result table. kind: int64, float64, bool, text, or words (one of `words`, as codes on the way)."""
+
+    name: str
+    kind: str
+    unit: str
+    meaning: str
+    words: tuple[str, ...] = ()
+
+
+def _cycle_columns(short: str, unit: str, shown: str, what: str) -> tuple[Column, ...]:
+    return (
+        Column(f"{short}_amplitude_{unit}", "float64", shown, f"{what}: peak to trough of the limit cycle; 0 if none"),
+        Column(f"{short}_relative_amplitude", "float64", "1", f"{what}: half of peak to trough over the cycle's mean"),
+        Column(f"cycle_{short}_min_{unit}", "float64", shown, f"{what}: lowest value on the limit cycle"),
+        Column(f"cycle_{short}_max_{unit}", "float64", shown, f"{what}: highest value on the limit cycle"),
+        Column(f"cycle_{short}_mean_{unit}", "float64", shown, f"{what}: mean over the limit cycle"),
+    )
+
+
+CYCLE_OUTCOMES: tuple[Column, ...] = (
+    Column("regime", "words", "", "what the subject tends to under the arm's steady input", REGIMES),
+    Column("failure", "words", "", "why the row failed", FAILURES),
+    Column("cycle_note", "words", "", "why cycle outcomes are null, or what they speak of", CYCLE_NOTES),
+    Column("forced", "bool", "", "the arm has a periodic input; cycle outcomes are those of the unforced body"),
+    Column("oscillates", "bool", "", "sustained or bistable; null for undecided and failed"),
+    Column("bistable_searched", "bool", "", "a second attractor was looked for beside a stable equilibrium"),
+    Column("equilibrium_glucose_mg_dl", "float64", "mg/dL", "plasma glucose at the equilibrium"),
+    Column("equilibrium_insulin_mu_l", "float64", "mU/L", "plasma insulin at the equilibrium"),
+    Column("growth_per_min", "float64", "1/min", "largest real part of the equilibrium's eigenvalues"),
+    Column("linear_period_min", "float64", "min", "2 pi over the imaginary part of that eigenvalue; null if real"),
+    Column("period_min", "float64", "min", "period of the limit cycle"),
+    Column("cycle_error", "float64", "1", "relative size of the last correction when the limit cycle was closed"),
+    *_cycle_columns("glucose", "mg_dl", "mg/dL", "plasma glucose"),
+    *_cycle_columns("insulin", "mu_l", "mU/L", "plasma insulin"),
+    *_cycle_columns("secretion", "mu_per_min", "mU/min", "insulin secretion"),
+    Column("insulin_lag_min", "float64", "min", "from the glucose peak to the insulin peak of the limit cycle"),
+)
+
+WINDOW_OUTCOMES: tuple[Column, ...] = (
+    Column("glucose_mean_mg_dl", "float64", "mg/dL", "mean glucose in the measured window"),
+    Column("glucose_sd_mg_dl", "float64", "mg/dL", "standard deviation of glucose over the window's time"),
+    Column("glucose_cv", "float64", "1", "that standard deviation over the mean"),
+    Column("glucose_peak_mg_dl", "float64", "mg/dL", "highest glucose in the window"),
+    Column("glucose_nadir_mg_dl", "float64", "mg/dL", "lowest glucose in the window"),
+    Column("glucose_range_mg_dl", "float64", "mg/dL", "peak minus nadir"),
+    Column("time_to_peak_min", "float64", "min", "from the window's beginning to its highest glucose"),
+    Column("time_below_54_min", "float64", "min", "time below 54 mg/dL in the window"),
+    Column("time_below_70_min", "float64", "min", "time below 70 mg/dL in the window"),
+    Column("time_above_140_min", "float64", "min", "time above 140 mg/dL in the window"),
+    Column("time_above_180_min", "float64", "min", "time above 180 mg/dL in the window"),
+    Column("time_above_250_min", "float64", "min", "time above 250 mg/dL in the window"),
+    Column("time_in_range_70_180_min", "float64", "min", "time from 70 to 180 mg/dL in the window"),
+    Column("iauc_mg_dl_min", "float64", "mg/dL min",
+           "area above the mean of one linear period before the window (60 min where there is none)"),
+    Column("glucose_mage_mg_dl", "float64", "mg/dL",
+           "mean of swings of at least one SD, in the direction of each whole day's first; null under one day"),
+    Column("insulin_mean_mu_l", "float64", "mU/L", "mean plasma insulin in the window"),
+    Column("insulin_peak_mu_l", "float64", "mU/L", "highest plasma insulin in the window"),
+    Column("insulin_nadir_mu_l", "float64", "mU/L", "lowest plasma insulin in the window"),
+    Column("whole_arm_glucose_peak_mg_dl", "float64", "mg/dL", "highest glucose of the whole arm, settling included"),
+    Column("whole_arm_glucose_nadir_mg_dl", "float64", "mg/dL", "lowest glucose of the whole arm, settling included"),
+)  # fmt: skip
+
+CLAMP_OUTCOMES: tuple[Column, ...] = (
+    Column("clamp_rate_mean_mg_per_min", "float64", "mg/min", "mean infusion that held glucose, over the window"),
+    Column("clamp_rate_mean_mg_per_kg_min", "float64", "mg/kg/min", "the same by body weight; null without weights"),
+    Column("clamp_off_target_min", "float64", "min", "time in the window since the clamp began with glucose not held"),
+    Column("clamp_dose_mg", "float64", "mg", "instant dose that lifted glucose to its target"),
+    Column("clamp_target_mg_dl", "float64", "mg/dL", "the value glucose was held at"),
+)
+
+MEAL_OUTCOMES: tuple[Column, ...] = (
+    Column("meal", "int64", "", "which meal of the arm, from 1"),
+    Column("meal_time_min", "float64", "min", "when it was eaten, from the arm's beginning"),
+    Column("baseline_mg_dl", "float64", "mg/dL",
+           "mean of one linear period before the meal (60 min where there is none)"),
+    Column("peak_mg_dl", "float64", "mg/dL", "highest glucose until the next meal or the arm's end"),
+    Column("time_to_peak_min", "float64", "min", "from the meal to that peak"),
+    Column("iauc_mg_dl_min", "float64", "mg/dL min", "area above the baseline in 2 h, or to the next meal"),
+    Column("ringing_cycles", "float64", "1", "rises and falls beyond 1 mg/dL after the meal's peak"),
+)  # fmt: skip
+
+COURSE_COLUMNS: tuple[Column, ...] = (
+    Column("why", "words", "", "why this subject's course is kept", KEPT_BECAUSE),
+    Column("time_min", "float64", "min", "time from the arm's beginning"),
+    Column("glucose_mg_dl", "float64", "mg/dL", "plasma glucose"),
+    Column("insulin_mu_l", "float64", "mU/L", "plasma insulin"),
+    Column("secretion_mu_per_min", "float64", "mU/min", "insulin secretion"),
+    Column("release_mg_per_min", "float64", "mg/min", "glucose release by the liver"),
+)
+
+KEY_COLUMNS: dict[str, Column] = {
+    c.name: c
+    for c in (
+        Column("subject", "int64", "", "the virtual subject, from 0"),
+        Column("arm", "text", "", "what was done"),
+        Column("model", "text", "", "the body's equations"),
+        Column("stratum", "text", "", "the subgroup the subject belongs to"),
+        Column("id", "text", "", "the subject's own name, from the table of subjects"),
+        Column("body_weight_kg", "float64", "kg", "body weight; null without sizes"),
+    )
+}
+
+INCIDENCE_COLUMNS: tuple[Column, ...] = (
+    Column("arm", "text", "", "what was done"),
+    Column("stratum", "text", "", "the subgroup, or everyone"),
+    Column("regime", "text", "", "the regime counted; oscillates: sustained and bistable together"),
+    Column("n", "int64", "", "subjects in it"),
+    Column("share", "float64", "1", "their share; unresolved subjects counted half"),
+    Column("low", "float64", "1", "lower end of the 95 % interval of Monte Carlo error"),
+    Column("high", "float64", "1", "upper end"),
+    Column("denominator", "int64", "", "subjects counted"),
+    Column("unresolved", "int64", "", "undecided or failed subjects, counted once as no and once as yes by the interval"),
+    Column("method", "text", "", "how the interval was made"),
+)

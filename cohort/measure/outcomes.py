@@ -13,6 +13,7 @@ from cohort.measure.windows import GLUCOSE_WINDOW, INSULIN_WINDOW, LEVELS_MG_DL,
 from cohort.model.body import Body, body
 from cohort.model.inputs import People, meal_times, steady_input
 from cohort.model.protocol import Arm, Meal
+from cohort.quantities import CLAMP_OUTCOMES
 from cohort.simulate.clamp import ClampedCourses, clamped_courses
 from cohort.simulate.course import Courses
 from cohort.simulate.engine import DONE, NOT_FINITE
@@ -25,13 +26,7 @@ SEEN = ("glucose_mg_dl", "insulin_mu_l")
 BASELINE_MIN = 60.0
 """How far back a baseline reaches where there is no linear period."""
 
-CLAMP_COLUMNS = (
-    "clamp_rate_mean_mg_per_min", "clamp_rate_mean_mg_per_kg_min", "clamp_off_target_min", "clamp_dose_mg",
-    "clamp_target_mg_dl",
-)  # fmt: skip
-
-CYCLE_NOTES = ("no steady input", "at the mean input")
-"""Why cycle outcomes are null, or that they speak of the unforced body."""
+CLAMP_COLUMNS = tuple(column.name for column in CLAMP_OUTCOMES)
 
 
 @dataclass(frozen=True)

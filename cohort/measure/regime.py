@@ -21,12 +21,12 @@ from cohort.measure.cycle import (
 )
 from cohort.model.body import Body
 from cohort.model.rest import at_rest
+from cohort.quantities import REGIMES
 from cohort.simulate.run import observe_states
 
 Array = NDArray[np.float64]
 
-REGIMES = ("sustained", "damped", "quiet", "bistable", "undecided", "failed")
-SUSTAINED, DAMPED, QUIET, BISTABLE, UNDECIDED, FAILED = range(6)
+SUSTAINED, DAMPED, QUIET, BISTABLE, UNDECIDED, FAILED = range(len(REGIMES))
 
 BORDER_PER_MIN = 1e-7
 RINGING_KEPT = 0.05

@@ -15,9 +15,9 @@ import numpy as np
 from cohort.compiled import LANES, call_program, jit
 from cohort.model.inputs import CONSTANT, DECAY, RISE_DECAY, WAVE
 from cohort.program import Builder, Program
+from cohort.quantities import FAILURES
 
-FAILURES = ("not finite", "step too small", "left the physical range", "out of budget", "process died")
-NOT_FINITE, STEP_TOO_SMALL, OUT_OF_RANGE, OUT_OF_BUDGET, PROCESS_DIED = range(5)
+NOT_FINITE, STEP_TOO_SMALL, OUT_OF_RANGE, OUT_OF_BUDGET, PROCESS_DIED = range(len(FAILURES))
 DONE = -1
 """Status of a subject that reached the arm's end; other statuses index FAILURES."""
 

@@ -5,7 +5,7 @@ from __future__ import annotations
 import copy
 import os
 import tomllib
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -17,7 +17,7 @@ from cohort.study.files import Files
 from cohort.study.lines import Path as KeyPath
 from cohort.study.oddities import oddities
 from cohort.study.spec import Output, Study
-from cohort.study.tree import Tree, check, dotted, read_toml
+from cohort.study.tree import Quantity, Tree, check, dotted, read_toml
 
 _NAMED_LISTS = ("arms", "strata", "schedules")
 MOST_COURSE_POINTS = 2_000_000_000
@@ -54,9 +54,26 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study
     if tree.problems:
         raise StudyError(_sorted(tree.problems))
     title = tree.values.get("title", place.stem)
-    study = Study(place, data, tuple(overrides), title, model, seed, recipe, protocols, output, files.digests)
+    study = Study(
+        place, data, tuple(overrides), title, model, seed, recipe, protocols, output, files.digests,
+        dict(_settings(tree.values)),
+    )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))
     return Study(**{**study.__dict__, "warnings": tuple(warnings)})
+
+
+def _settings(value: Any, path: str = "") -> Iterator[tuple[str, str]]:
+    """Every leaf of the checked tree as (dotted key, value in its kept unit); list entries by name where they have one."""
+    if isinstance(value, dict):
+        for name, inner in value.items():
+            yield from _settings(inner, f"{path}.{name}" if path else name)
+    elif isinstance(value, list) and any(isinstance(item, dict) for item in value):
+        for i, item in enumerate(value):
+            yield from _settings(item, f"{path}.{item.get('name', i + 1)}")
+    elif isinstance(value, list):
+        yield path, str([item.number if isinstance(item, Quantity) else item for item in value])
+    else:
+        yield path, repr(value.number) + f" {value.unit}" if isinstance(value, Quantity) else str(value)
 
 
 def _sorted(problems: list[Problem]) -> list[Problem]:

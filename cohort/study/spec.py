@@ -24,7 +24,8 @@ class Study:
     """A study file, read and checked.
 
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
-    file order; files: SHA-256 of every data file by the name the study gives it; warnings: legal but odd.
+    file order; files: SHA-256 of every data file by the name the study gives it; settings: every key as it counts
+    (overrides applied, arms and strata by name), for telling what changed; warnings: legal but odd.
     """
 
     path: Path
@@ -37,4 +38,5 @@ class Study:
     arms: tuple[Arm, ...]
     output: Output
     files: Mapping[str, str] = field(default_factory=dict)
+    settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()

@@ -7,9 +7,10 @@ import pytest
 from scipy.integrate import solve_ivp
 
 from cohort.compiled import compile_program
-from cohort.measure.regime import BISTABLE, DAMPED, FAILED, QUIET, REGIMES, SUSTAINED, UNDECIDED, cycles
+from cohort.measure.regime import BISTABLE, DAMPED, FAILED, QUIET, SUSTAINED, UNDECIDED, cycles
 from cohort.model.body import body
 from cohort.model.rest import at_rest
+from cohort.quantities import REGIMES
 from tests.measure import toys
 
 BODY = body("hepatic-lag")

@@ -10,7 +10,7 @@ from cohort.model.body import body
 from cohort.model.inputs import People
 from cohort.model.protocol import Arm, AtState, Constant, Meal
 from cohort.program import run
-from cohort.simulate.engine import FAILURES
+from cohort.quantities import FAILURES
 from cohort.simulate.run import courses, prepare
 
 BODY = body("hepatic-lag")

@@ -1,0 +1,1 @@
+"""Running a study: shards, commits, resume. The only import of dask."""

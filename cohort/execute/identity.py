@@ -1,0 +1,70 @@
+"""What a table's content depends on, as a digest; and what of a study may change without touching what is there."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Mapping
+from dataclasses import fields, is_dataclass
+from typing import Any
+
+import numpy as np
+
+from cohort.compiled import kernel_identity
+from cohort.model.protocol import Arm
+from cohort.model.taylor import ORDER, TOLERANCE
+from cohort.population.laws import Empirical
+from cohort.study import Study
+
+GROWING = ("subjects.count",)
+"""Keys that may grow in a folder that holds results; arms may be added."""
+
+UNSEEN = ("title", "output.")
+"""Keys that no stored number depends on."""
+
+
+def plain(value: Any) -> Any:
+    """Dataclasses, mappings and arrays as what JSON can hold, floats exactly."""
+    if isinstance(value, Empirical):
+        return ["Empirical", _digest([x.hex() for x in value.values])]
+    if is_dataclass(value) and not isinstance(value, type):
+        return [type(value).__name__, {f.name: plain(getattr(value, f.name)) for f in fields(value)}]
+    if isinstance(value, Mapping):
+        return {str(k): plain(v) for k, v in sorted(value.items())}
+    if isinstance(value, np.ndarray):
+        return [str(value.dtype), hashlib.blake2b(np.ascontiguousarray(value).tobytes(), digest_size=16).hexdigest()]
+    if isinstance(value, list | tuple):
+        return [plain(v) for v in value]
+    return float(value).hex() if isinstance(value, float) else value
+
+
+def _digest(value: Any) -> str:
+    text = json.dumps(value, sort_keys=True, separators=(",", ":"))
+    return hashlib.blake2b(text.encode(), digest_size=16).hexdigest()
+
+
+def subjects_identity(study: Study) -> str:
+    """Of subjects/: the recipe without its count (with it where the draw depends on it), and the model's name."""
+    recipe = plain(study.recipe)[1]
+    if study.recipe.draw != "latin-hypercube" and study.recipe.table is None:
+        recipe.pop("count")
+    return _digest(["subjects", study.model, recipe, kernel_identity()])
+
+
+def arm_identity(study: Study, arm: Arm, table: str) -> str:
+    """Of an arm's table: its subjects, the protocol, kernels and accuracy. Other arms are not in it."""
+    return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE])
+
+
+def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: set[str]) -> str | None:
+    """The first key of two studies' settings that differs and may not, or None. `arms`: names that were there before."""
+    for key in dict.fromkeys((*before, *now)):
+        if key.startswith(UNSEEN) or before.get(key) == now.get(key):
+            continue
+        if key in GROWING and int(now.get(key, 0)) >= int(before.get(key, 0)):
+            continue
+        new_arm = key.startswith("arms.") and not any(key.startswith(f"arms.{name}.") for name in arms)
+        if new_arm and key not in before:
+            continue
+        return key
+    return None

@@ -1,0 +1,255 @@
+"""Run a study into a folder: start, or carry on where it stopped."""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import os
+import platform
+import signal
+import sys
+import threading
+import time
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from importlib import metadata
+from pathlib import Path
+from typing import Any
+
+from cohort.errors import Problem, RunError, StudyError
+from cohort.execute.courses import keep_courses
+from cohort.execute.facts import arm_facts
+from cohort.execute.identity import arm_identity, first_difference, subjects_identity
+from cohort.execute.progress import Progress
+from cohort.execute.shards import Work, commit, missing, strays
+from cohort.execute.stages import rows
+from cohort.study import Study, plan
+from cohort.study.plan import SHARD
+from cohort.tables import write_bytes
+
+WINDOW_SUB_BATCHES = 64
+"""Sub-batches handed to dask at once: enough to keep workers busy, few enough that memory stays flat."""
+
+
+@dataclass(frozen=True)
+class Finished:
+    """A run that reached its end: the folder, runs simulated now and before, seconds of the clock."""
+
+    folder: Path
+    simulated: int
+    kept: int
+    seconds: float
+
+
+def run_study(
+    study: Study, out: Path, workers: int | None = None, shard_size: int = SHARD, quiet: bool = False
+) -> Finished:
+    """Simulate what is missing in `out` and write it there. Raises StudyError where the folder holds another study,
+    RunError where it cannot finish, KeyboardInterrupt when interrupted (also by SIGTERM); what is done stays."""
+    workers = workers or os.cpu_count() or 1
+    began = time.monotonic()
+    try:
+        out.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise RunError(f"{out}: cannot be made: {_why(error)}") from None
+    with _locked(out), _terminable():
+        before = _check_folder(study, out)
+        record = _record(study, workers, before)
+        _write_record(out, record, "running")
+        try:
+            for path in strays(study, out, shard_size):
+                path.unlink()
+            done, kept = _simulate(study, out, workers, shard_size, quiet)
+            keep_courses(study, out)
+        except KeyboardInterrupt:
+            _write_record(out, record, "interrupted")
+            raise
+        except OSError as error:
+            with contextlib.suppress(OSError):
+                _write_record(out, record, "stopped")
+            raise RunError(f"{out}: {_why(error)}; what was finished is kept, run again to carry on") from None
+        seconds = time.monotonic() - began
+        record["timings"] = {"seconds": round(seconds, 3), "runs": done}
+        _write_record(out, record, "done")
+    return Finished(out, done, kept, seconds)
+
+
+def _why(error: OSError) -> str:
+    return (error.strerror or str(error)).lower()
+
+
+def _simulate(study: Study, out: Path, workers: int, shard_size: int, quiet: bool) -> tuple[int, int]:
+    """Do the missing work; returns (runs simulated, runs that were there)."""
+    left = missing(study, out, shard_size)
+    todo = sum(len(w.arms) * (w.shard.last - w.shard.first) for w in left)
+    total = study.recipe.count * len(study.arms)
+    progress = Progress(total, total - todo) if not quiet else None
+    if left:
+        first = left[0].shard.first
+        rows(study, first, first + 1, left[0].arms)  # compiles, once, before there are threads
+    try:
+        for window in _windows(left):
+            _run_window(study, out, window, workers, progress)
+    finally:
+        if progress:
+            progress.end()
+    return todo, total - todo
+
+
+def _windows(left: Sequence[Work]) -> Iterator[list[Work]]:
+    window: list[Work] = []
+    size = 0
+    for work in left:
+        window.append(work)
+        size += len(list(work.shard.sub_batches()))
+        if size >= WINDOW_SUB_BATCHES:
+            yield window
+            window, size = [], 0
+    if window:
+        yield window
+
+
+def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, progress: Progress | None) -> None:
+    """One graph: a task a sub-batch, and for each shard one that writes its parts when the last is home."""
+    from dask.threaded import get
+
+    stop = threading.Event()
+
+    def simulate(start: int, end: int, arms: tuple[str, ...]) -> dict[str, Any]:
+        if stop.is_set():
+            raise KeyboardInterrupt
+        found = rows(study, start, end, arms)
+        if progress:
+            progress.add((end - start) * len(arms))
+        return found
+
+    def write(work_index: int, *pieces: dict[str, Any]) -> int:
+        return commit(study, out, window[work_index], pieces)
+
+    graph: dict[Any, Any] = {}
+    ends = []
+    for i, work in enumerate(window):
+        keys = []
+        for start, end in work.shard.sub_batches():
+            key = f"rows-{start}"
+            graph[key] = (simulate, start, end, work.arms)
+            keys.append(key)
+        graph[f"shard-{work.shard.number}"] = (write, i, *keys)
+        ends.append(f"shard-{work.shard.number}")
+    try:
+        get(graph, ends, num_workers=workers)
+    except KeyboardInterrupt:
+        stop.set()
+        raise
+
+
+# ---- the folder --------------------------------------------------------------------------------------------------
+
+
+@contextlib.contextmanager
+def _locked(out: Path) -> Iterator[None]:
+    """Hold the folder for this process; the kernel lets go of it if the process dies. Raises RunError where another
+    run holds it."""
+    import fcntl
+
+    with (out / ".lock").open("a+") as file:
+        try:
+            fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except OSError:
+            file.seek(0)
+            holder = file.read().strip() or "another run"
+            raise RunError(f"{out}: {holder} is running in this folder") from None
+        file.truncate(0)
+        file.write(f"process {os.getpid()} on {platform.node()}")
+        file.flush()
+        yield
+        file.truncate(0)
+
+
+@contextlib.contextmanager
+def _terminable() -> Iterator[None]:
+    """SIGTERM ends a run as Ctrl-C does."""
+
+    def interrupt(signum: int, frame: Any) -> None:
+        raise KeyboardInterrupt
+
+    if threading.current_thread() is not threading.main_thread():
+        yield
+        return
+    before = signal.signal(signal.SIGTERM, interrupt)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
+
+
+def _check_folder(study: Study, out: Path) -> dict[str, Any]:
+    """Refuse a folder that holds something else; returns the record that was there, or {}."""
+    path = out / "run.json"
+    if not path.exists():
+        other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
+        if other:
+            raise StudyError([Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))])
+        return {}
+    try:
+        before: dict[str, Any] = json.loads(path.read_text())
+        settings, arms = before["settings"], set(before["arms"])
+        identities = before["identities"]
+    except (ValueError, KeyError, TypeError, OSError):
+        raise StudyError([Problem("", "is not a run's record; name another folder with --out", str(path))]) from None
+    changed = first_difference(settings, study.settings, arms)
+    if changed:
+        raise StudyError([_refusal(changed, settings, study.settings, out)])
+    if identities["subjects"] != subjects_identity(study) or any(
+        identities["outcomes"].get(arm.name, now) != now for arm in study.arms for now in [arm_identity(study, arm, "outcomes")]
+    ):
+        why = "holds results of other data files or of another version of this package"
+        raise StudyError([Problem("", f"{why}; name another folder with --out", str(out))])
+    return before
+
+
+def _refusal(key: str, before: Mapping[str, str], now: Mapping[str, str], out: Path) -> Problem:
+    was, is_now = before.get(key, "not given"), now.get(key, "not given")
+    grows = "may only grow" if key == "subjects.count" else "cannot change"
+    return Problem(key, f"was {was} in the results that {out} holds and is {is_now} now; it {grows} there. Name another "
+                   "folder with --out, or put it back")  # fmt: skip
+
+
+def _record(study: Study, workers: int, before: Mapping[str, Any]) -> dict[str, Any]:
+    texts = [t for t in before.get("study_texts", []) if t != study.text.decode("utf-8", "replace")]
+    found = plan(study, workers)
+    return {
+        "title": study.title,
+        "model": study.model,
+        "seed": study.seed,
+        "count": study.recipe.count,
+        "draw": study.recipe.draw if study.recipe.table is None else "table",
+        "arms": [arm.name for arm in study.arms],
+        "strata": list(study.recipe.stratum_names),
+        "arm_facts": {arm.name: arm_facts(arm) for arm in study.arms},
+        "varied": list(study.recipe.varied),
+        "identities": {
+            "subjects": subjects_identity(study),
+            "outcomes": {arm.name: arm_identity(study, arm, "outcomes") for arm in study.arms},
+        },
+        "settings": dict(study.settings),
+        "overrides": list(study.overrides),
+        "study_texts": [*texts, study.text.decode("utf-8", "replace")],
+        "files": dict(study.files),
+        "versions": _versions(),
+        "plan": {"runs": found.runs, "shards": found.shards, "workers": workers},
+    }
+
+
+def _versions() -> dict[str, str]:
+    packages = ("numpy", "numba", "llvmlite", "pyarrow", "dask")
+    own = "0.1.0"
+    with contextlib.suppress(metadata.PackageNotFoundError):
+        own = metadata.version("ultradian-cohort")
+    return {"cohort": own, "python": sys.version.split()[0]} | {p: metadata.version(p) for p in packages}
+
+
+def _write_record(out: Path, record: Mapping[str, Any], state: str) -> None:
+    write_bytes(out / "study.toml", record["study_texts"][-1].encode())
+    write_bytes(out / "run.json", (json.dumps({**record, "state": state}, indent=2) + "\n").encode())
+

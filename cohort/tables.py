@@ -1,0 +1,257 @@
+"""The only import of pyarrow: the schema of every table, and how parts are written, verified and read.
+
+A part is one Parquet file of a table: whole or absent, with the same bytes for the same content. Its footer carries
+the table's identity, the subjects it covers and a digest of its columns' values; a part is trusted only where all
+three are as expected. Missing numbers (NaN) and words (-1) become true nulls here, and nowhere else.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import io
+import os
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyarrow as pa
+import pyarrow.parquet as pq
+from numpy.typing import NDArray
+
+from cohort.quantities import (
+    CLAMP_OUTCOMES,
+    COURSE_COLUMNS,
+    CYCLE_OUTCOMES,
+    INCIDENCE_COLUMNS,
+    INPUT_PARAMETERS,
+    KEY_COLUMNS,
+    MEAL_OUTCOMES,
+    PARAMETERS,
+    WINDOW_OUTCOMES,
+    Column,
+)
+
+Values = Mapping[str, NDArray[Any] | Sequence[str] | str]
+
+_TYPES = {
+    "int64": pa.int64(),
+    "float64": pa.float64(),
+    "bool": pa.bool_(),
+    "text": pa.string(),
+    "words": pa.string(),
+}
+FORMAT = b"cohort-part-1"
+
+
+@dataclass(frozen=True)
+class Schema:
+    """The columns of one table, in order."""
+
+    table: str
+    columns: tuple[Column, ...]
+
+    @property
+    def arrow(self) -> pa.Schema:
+        """The Arrow schema; every field carries its unit and meaning."""
+        return pa.schema(
+            [
+                pa.field(c.name, _TYPES[c.kind], metadata={b"unit": c.unit.encode(), b"meaning": c.meaning.encode()})
+                for c in self.columns
+            ]
+        )
+
+
+def subjects_schema(varied: Sequence[str], with_id: bool) -> Schema:
+    """subjects/: who was simulated, every varied parameter as integrated."""
+    known = PARAMETERS | INPUT_PARAMETERS
+    parameters = tuple(Column(p, "float64", known[p].unit, known[p].meaning) for p in varied)
+    keys = ("subject", *(("id",) if with_id else ()), "stratum", "body_weight_kg")
+    return Schema("subjects", (*(KEY_COLUMNS[k] for k in keys), *parameters))
+
+
+def outcomes_schema(clamped: bool) -> Schema:
+    """outcomes/<arm>/: a row a subject."""
+    extra = CLAMP_OUTCOMES if clamped else ()
+    keys = tuple(KEY_COLUMNS[k] for k in ("subject", "arm", "model"))
+    return Schema("outcomes", (*keys, *CYCLE_OUTCOMES, *WINDOW_OUTCOMES, *extra))
+
+
+MEALS = Schema("meals", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *MEAL_OUTCOMES))
+TIME_COURSES = Schema("time_courses", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *COURSE_COLUMNS))
+INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
+
+
+# ---- numbers to Arrow --------------------------------------------------------------------------------------------
+
+
+def to_arrow(schema: Schema, values: Values) -> pa.Table:
+    """Build a table; a plain str fills its whole column. Raises KeyError for a missing column."""
+    lengths = {len(v) for v in values.values() if not isinstance(v, str)}
+    (n,) = lengths or {0}
+    return pa.table([_array(c, values[c.name], n) for c in schema.columns], schema=schema.arrow)
+
+
+def _array(column: Column, values: Any, n: int) -> pa.Array:
+    if isinstance(values, str):
+        return pa.repeat(pa.scalar(values), n)
+    if column.kind == "text":
+        return pa.array(values, pa.string())
+    values = np.asarray(values)
+    if column.kind == "float64":
+        numbers = values.astype(np.float64)
+        return pa.array(numbers, mask=np.isnan(numbers))
+    if column.kind == "int64":
+        return pa.array(values.astype(np.int64))
+    if column.kind == "bool":
+        return pa.array(values == 1, mask=values == -1)
+    codes = pa.array(np.maximum(values, 0).astype(np.int32), mask=values < 0)
+    return pa.DictionaryArray.from_arrays(codes, pa.array(column.words)).cast(pa.string())
+
+
+def digest(table: pa.Table) -> str:
+    """A digest of the columns' names and values, nulls apart from any value; the same for the same rows."""
+    whole = hashlib.blake2b(digest_size=16)
+    for name, column in zip(table.column_names, table.columns, strict=True):
+        array = column.combine_chunks() if isinstance(column, pa.ChunkedArray) else column
+        whole.update(f"{name}:{array.type}:{len(array)}\0".encode())
+        missing = np.asarray(array.is_null())
+        whole.update(np.packbits(missing).tobytes())
+        if pa.types.is_string(array.type):
+            coded = array.fill_null("").dictionary_encode()
+            words = [str(w).encode() for w in coded.dictionary.to_pylist()]
+            order = np.argsort(words, kind="stable") if words else np.empty(0, np.int64)
+            rank = np.empty(len(words), np.int32)
+            rank[order] = np.arange(len(words))
+            whole.update(b"\0".join(sorted(words)) + b"\0")
+            whole.update(rank[np.asarray(coded.indices)].astype("<i4").tobytes() if words else b"")
+        else:
+            filled = array.fill_null(False if pa.types.is_boolean(array.type) else 0)
+            numbers = np.asarray(filled)
+            whole.update(numbers.astype(numbers.dtype.newbyteorder("<")).tobytes())
+    return whole.hexdigest()
+
+
+# ---- parts -------------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True)
+class Stamp:
+    """What a part's footer says: the table's identity and the subjects first..last-1 it covers."""
+
+    identity: str
+    first: int
+    last: int
+
+
+def write_part(path: Path, schema: Schema, values: Values, stamp: Stamp) -> None:
+    """Write one part, whole or not at all. Raises OSError where the disk refuses."""
+    table = to_arrow(schema, values)
+    marks = {
+        b"format": FORMAT,
+        b"identity": stamp.identity.encode(),
+        b"first": str(stamp.first).encode(),
+        b"last": str(stamp.last).encode(),
+        b"digest": digest(table).encode(),
+    }
+    write_bytes(path, _parquet(table.replace_schema_metadata(marks)))
+
+
+def write_table(path: Path, schema: Schema, values: Values) -> None:
+    """Write a small table that is made anew at each run, in the same safe way."""
+    write_bytes(path, _parquet(to_arrow(schema, values)))
+
+
+def _parquet(table: pa.Table) -> bytes:
+    words = [f.name for f in table.schema if pa.types.is_string(f.type)]
+    sink = io.BytesIO()
+    pq.write_table(table, sink, use_dictionary=words, compression="zstd", compression_level=1, store_schema=True)
+    return sink.getvalue()
+
+
+def write_bytes(path: Path, data: bytes) -> None:
+    """Write a file so that a crash leaves the old one or the new one: temporary, fsync, rename, fsync the folder."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
+    try:
+        with temporary.open("wb") as file:
+            file.write(data)
+            file.flush()
+            os.fsync(file.fileno())
+        temporary.replace(path)
+    except BaseException:
+        temporary.unlink(missing_ok=True)
+        raise
+    folder = os.open(path.parent, os.O_RDONLY)
+    try:
+        os.fsync(folder)
+    finally:
+        os.close(folder)
+
+
+def verify_part(path: Path, stamp: Stamp) -> bool:
+    """Whether the part exists, is readable, carries this stamp, and holds the values its digest was made of."""
+    try:
+        table = pq.read_table(path, use_threads=False)
+    except (OSError, pa.ArrowException, ValueError):
+        return False
+    marks = table.schema.metadata or {}
+    expected = {b"identity": stamp.identity, b"first": str(stamp.first), b"last": str(stamp.last)}
+    if any(marks.get(key, b"").decode(errors="replace") != value for key, value in expected.items()):
+        return False
+    return bool(marks.get(b"format") == FORMAT and marks.get(b"digest", b"").decode() == digest(table))
+
+
+def part_name(number: int) -> str:
+    """part-000042.parquet"""
+    return f"part-{number:06d}.parquet"
+
+
+def part_paths(folder: Path) -> list[Path]:
+    """The parts of a table, in order."""
+    return sorted(folder.glob("part-*.parquet"))
+
+
+def read_parts(folder: Path, columns: Sequence[str] | None = None) -> pa.Table:
+    """All parts of a table as one, in order; chosen columns or all. Raises FileNotFoundError where there is none."""
+    paths = part_paths(folder)
+    if not paths:
+        raise FileNotFoundError(f"no parts in {folder}")
+    names = list(columns) if columns is not None else None
+    tables = [pq.read_table(path, columns=names, use_threads=False) for path in paths]
+    return pa.concat_tables([t.replace_schema_metadata(None) for t in tables])
+
+
+def iter_parts(folder: Path, columns: Sequence[str]) -> Iterable[pa.Table]:
+    """The parts of a table one by one, with the chosen columns that they have."""
+    for path in part_paths(folder):
+        known = set(pq.read_schema(path).names)
+        yield pq.read_table(path, columns=[c for c in columns if c in known], use_threads=False)
+
+
+def read_table(path: Path) -> pa.Table:
+    """One table file."""
+    return pq.read_table(path, use_threads=False)
+
+
+def row_digest(table: pa.Table, keys: Sequence[str]) -> str:
+    """A digest of a whole table sorted by its keys: equal for the same rows, however they were stored."""
+    return digest(table.sort_by([(key, "ascending") for key in keys]))
+
+
+def read_columns(path: Path) -> dict[str, list[object]]:
+    """The columns of any Parquet file as Python lists. Raises ValueError where it is none."""
+    try:
+        table = pq.read_table(path, use_threads=False)
+    except (OSError, pa.ArrowException) as error:
+        raise ValueError(str(error).splitlines()[0]) from None
+    return {name: table.column(name).to_pylist() for name in table.column_names}
+
+
+def numbers(table: pa.Table, name: str) -> NDArray[np.float64]:
+    """A numeric or boolean column as float64, NaN where null."""
+    column = table.column(name).combine_chunks()
+    if pa.types.is_boolean(column.type):
+        column = column.cast(pa.int8())
+    return np.asarray(column.cast(pa.float64()).fill_null(float("nan")))
