@@ -1,0 +1,150 @@
+"""The command line: one short function a command. Exit codes: 0 done, 2 the study or the call is wrong, 3 the run
+could not finish (what is there is kept), 130 interrupted."""
+
+from __future__ import annotations
+
+import argparse
+import json
+import sys
+from collections.abc import Callable, Sequence
+from pathlib import Path
+
+from cohort.errors import CohortError, Problem, StudyError
+
+INTERRUPTED = 130
+DESCRIPTION = """In-silico cohorts and sensitivity studies of ultradian insulin-glucose oscillations.
+
+For research planning. Virtual subjects are not patients; not for diagnosis, dosing or care."""
+
+
+def check(words: argparse.Namespace) -> int:
+    """Print the plan, or every problem."""
+    from cohort.study import describe, load_study, plan
+
+    study = load_study(words.study, words.set)
+    print(describe(study, plan(study, words.workers)))
+    _warn(study.warnings)
+    return 0
+
+
+def run(words: argparse.Namespace) -> int:
+    """Run a study and print what came out."""
+    from cohort.execute.run import run_study
+    from cohort.report.summary import closing_words, rebuild
+    from cohort.study import load_study
+
+    study = load_study(words.study, words.set)
+    _warn(study.warnings)
+    folder = Path(words.out) if words.out else Path("results") / study.path.stem
+    done = run_study(study, folder, words.workers)
+    _, summary = rebuild(folder)
+    if words.json:
+        print(json.dumps(summary, indent=2))
+        return 0
+    print(closing_words(summary))
+    kept = f", {done.kept:,} were there" if done.kept else ""
+    print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. Results: {folder}")
+    return 0
+
+
+def report(words: argparse.Namespace) -> int:
+    """Rebuild tables and summary from the result files."""
+    from cohort.report.summary import closing_words, rebuild
+
+    _, summary = rebuild(Path(words.folder))
+    print(json.dumps(summary, indent=2) if words.json else closing_words(summary))
+    return 0
+
+
+def models(words: argparse.Namespace) -> int:
+    """Print the models, or one in full."""
+    from cohort.report.models import describe_model, list_models
+
+    print(describe_model(words.name) if words.name else list_models())
+    return 0
+
+
+def schema(words: argparse.Namespace) -> int:
+    """Print the JSON Schema of the study file."""
+    from cohort.study.schema import json_schema
+
+    print(json.dumps(json_schema(), indent=2))
+    return 0
+
+
+def certify(words: argparse.Namespace) -> int:
+    """Integrate some subjects again at high order and tight tolerance."""
+    from cohort.execute.certify import certify_study
+    from cohort.study import load_study
+
+    found = certify_study(load_study(words.study, words.set), words.n)
+    print(found.words())
+    return 0 if found.kept else 3
+
+
+def _warn(warnings: Sequence[Problem]) -> None:
+    for warning in warnings:
+        print(f"note: {warning}", file=sys.stderr)
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="cohort", description=DESCRIPTION, formatter_class=argparse.RawDescriptionHelpFormatter
+    )
+    commands = parser.add_subparsers(metavar="COMMAND", required=True)
+
+    def command(name: str, function: Callable[[argparse.Namespace], int], text: str) -> argparse.ArgumentParser:
+        made = commands.add_parser(name, help=text, description=text)
+        made.set_defaults(function=function)
+        return made
+
+    def with_study(made: argparse.ArgumentParser) -> None:
+        made.add_argument("study", metavar="STUDY", help="a study file, such as studies/steady-infusion.toml")
+        made.add_argument("--set", action="append", default=[], metavar="KEY=VALUE",
+                          help="override a value: subjects.count=500, arms.fasting.duration='12 h'")  # fmt: skip
+
+    checking = command("check", check, "say what a study would do, or every problem in it")
+    with_study(checking)
+    checking.add_argument("--workers", type=_positive, metavar="N", help="workers to plan for (default: the cores)")
+    running = command("run", run, "run a study, or carry on where it stopped")
+    with_study(running)
+    running.add_argument("--out", metavar="DIR", help="result folder (default: results/<study>)")
+    running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
+    running.add_argument("--json", action="store_true", help="print summary.json instead of words")
+    reporting = command("report", report, "rebuild tables and summary from the result files")
+    reporting.add_argument("folder", metavar="DIR")
+    reporting.add_argument("--json", action="store_true", help="print summary.json instead of words")
+    certifying = command("certify", certify, "integrate some subjects again at high order; print the worst differences")
+    with_study(certifying)
+    certifying.add_argument("n", nargs="?", type=_positive, default=200, metavar="N", help="how many (default 200)")
+    listing = command("models", models, "models, parameters, units, published values, sources")
+    listing.add_argument("name", nargs="?", metavar="NAME")
+    command("schema", schema, "JSON Schema of the study file, for editors")
+    return parser
+
+
+def _positive(text: str) -> int:
+    if not text.isdigit() or not 0 < int(text) < 10**6:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a whole number above 0")
+    return int(text)
+
+
+def main(words: Sequence[str] | None = None) -> int:
+    """Run one command and return its exit code; no traceback reaches a user."""
+    parsed = _parser().parse_args(words)
+    try:
+        function: Callable[[argparse.Namespace], int] = parsed.function
+        return function(parsed)
+    except StudyError as error:
+        n = len(error.problems)
+        print(f"{error}\n{n} problem{'s' * (n > 1)} found; nothing was run", file=sys.stderr)
+        return error.exit_code
+    except CohortError as error:
+        print(error, file=sys.stderr)
+        return error.exit_code
+    except KeyboardInterrupt:
+        print("\ninterrupted; what was finished is kept, run again to carry on", file=sys.stderr)
+        return INTERRUPTED
+    except BrokenPipeError:
+        sys.stderr.close()
+        return 0

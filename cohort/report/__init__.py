@@ -1,0 +1,1 @@
+"""Tables, figures and words made from result files; reads nothing else."""

@@ -1,0 +1,76 @@
+"""A result folder, opened for reading."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Sequence
+from dataclasses import dataclass
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from cohort.errors import Problem, StudyError
+
+if TYPE_CHECKING:
+    import pyarrow as pa
+
+
+@dataclass(frozen=True)
+class Results:
+    """The tables of one run, as Arrow tables; every method reads from disk.
+
+    Raises StudyError where the folder is no result folder.
+    """
+
+    folder: Path
+
+    @cached_property
+    def record(self) -> dict[str, Any]:
+        """run.json: identities, overrides, versions, plan, state."""
+        path = self.folder / "run.json"
+        try:
+            found: dict[str, Any] = json.loads(path.read_text())
+            found["arms"], found["strata"], found["arm_facts"]
+        except (OSError, ValueError, KeyError, TypeError):
+            raise StudyError([Problem("", "is not a result folder (no readable run.json)", str(self.folder))]) from None
+        return found
+
+    @property
+    def arms(self) -> tuple[str, ...]:
+        """Names of the arms."""
+        return tuple(self.record["arms"])
+
+    def subjects(self, columns: Sequence[str] | None = None) -> pa.Table:
+        """subjects/: a row a subject."""
+        return self._parts("subjects", columns)
+
+    def outcomes(self, arm: str, columns: Sequence[str] | None = None) -> pa.Table:
+        """outcomes/<arm>/: a row a subject."""
+        return self._parts(f"outcomes/{arm}", columns)
+
+    def meals(self, arm: str) -> pa.Table:
+        """meals/<arm>/: a row a subject and meal."""
+        return self._parts(f"meals/{arm}", None)
+
+    def time_courses(self, arm: str) -> pa.Table:
+        """time_courses/<arm>/: kept courses, a row a point."""
+        return self._parts(f"time_courses/{arm}", None)
+
+    def incidence(self) -> pa.Table:
+        """incidence.parquet: how many are in each regime, by arm and stratum."""
+        from cohort.tables import read_table
+
+        return read_table(self.folder / "incidence.parquet")
+
+    def summary(self) -> dict[str, Any]:
+        """summary.json: the headline numbers."""
+        found: dict[str, Any] = json.loads((self.folder / "summary.json").read_text())
+        return found
+
+    def _parts(self, table: str, columns: Sequence[str] | None) -> pa.Table:
+        from cohort.tables import read_parts
+
+        try:
+            return read_parts(self.folder / table, columns)
+        except FileNotFoundError:
+            raise StudyError([Problem("", f"has no table {table}", str(self.folder))]) from None
