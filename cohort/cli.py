@@ -43,7 +43,7 @@ def run(words: argparse.Namespace) -> int:
         return 0
     print(closing_words(summary))
     kept = f", {done.kept:,} were there" if done.kept else ""
-    print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. Results: {folder}")
+    print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. Results are in\n{folder}")
     return 0
 
 
@@ -64,7 +64,7 @@ def models(words: argparse.Namespace) -> int:
     return 0
 
 
-def schema(words: argparse.Namespace) -> int:
+def schema(_: argparse.Namespace) -> int:
     """Print the JSON Schema of the study file."""
     from cohort.study.schema import json_schema
 

@@ -19,7 +19,7 @@ import sys
 import tempfile
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any
 
 import llvmlite
 import llvmlite.binding as llvm
@@ -30,8 +30,6 @@ from numba.core.compiler_lock import global_compiler_lock
 from numba.extending import intrinsic
 
 from cohort.program import Program
-
-F = TypeVar("F", bound=Callable[..., Any])
 
 LANES = 4
 """How many subjects one vector holds. More than this runs out of registers on common processors."""
@@ -90,12 +88,14 @@ def cache_folder() -> Path | None:
         return None
 
 
-def jit(function: F) -> F:
+def jit(function: Callable[..., Any]) -> Callable[..., Any]:
     """Compile a loop: no Python objects, the interpreter's lock released, no reordering of arithmetic."""
     folder = cache_folder()
     if folder is not None:
         numba.config.CACHE_DIR = str(folder)
-    compiled: F = numba.njit(nogil=True, cache=folder is not None, error_model="numpy", boundscheck=False)(function)
+    compiled: Callable[..., Any] = numba.njit(
+        nogil=True, cache=folder is not None, error_model="numpy", boundscheck=False
+    )(function)
     return compiled
 
 
@@ -202,7 +202,7 @@ def _machine_code(program: Program, lanes: int) -> bytes:
     if kept is not None:
         with tempfile.NamedTemporaryFile(dir=kept.parent, delete=False) as file:
             file.write(code)
-        os.replace(file.name, kept)
+        Path(file.name).replace(kept)
     return code
 
 
@@ -226,8 +226,8 @@ def compile_program(program: Program, lanes: int = 1) -> int:
     return _LOADED[key][0]
 
 
-@intrinsic
-def call_program(typing: Any, address: Any, inputs: Any, outputs: Any) -> Any:
+@intrinsic  # type: ignore[untyped-decorator]
+def call_program(typing: Any, address: Any, inputs: Any, outputs: Any) -> Any:  # noqa: ARG001 - numba's signature
     """Inside `jit` code: run the compiled program at `address` on two C-contiguous arrays of doubles."""
 
     def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:

@@ -47,7 +47,9 @@ PARAMETERS: dict[str, Quantity] = {
         Quantity("U0", "insulin-driven use factor with no insulin", "mg/min", 0.1, 2000.0),
         Quantity("Um", "insulin-driven use factor at the highest insulin", "mg/min", 1.0, 50000.0),
         Quantity("beta", "steepness of insulin's effect on glucose use", "1", 0.2, 20.0),
-        Quantity("C4", "interstitial insulin concentration at the half-point of its effect on use", "mU/L", 1.0, 4000.0),
+        Quantity(
+            "C4", "interstitial insulin concentration at the half-point of its effect on use", "mU/L", 1.0, 4000.0
+        ),
         Quantity("Rg", "highest rate of glucose release by the liver", "mg/min", 1.0, 9000.0),
         Quantity("alpha", "steepness of insulin's braking of glucose release", "L/mU", 0.005, 15.0),
         Quantity("C5", "insulin concentration at half the highest glucose release", "mU/L", 0.5, 1300.0),
@@ -184,6 +186,8 @@ INCIDENCE_COLUMNS: tuple[Column, ...] = (
     Column("low", "float64", "1", "lower end of the 95 % interval of Monte Carlo error"),
     Column("high", "float64", "1", "upper end"),
     Column("denominator", "int64", "", "subjects counted"),
-    Column("unresolved", "int64", "", "undecided or failed subjects, counted once as no and once as yes by the interval"),
+    Column(
+        "unresolved", "int64", "", "undecided or failed subjects, counted once as no and once as yes by the interval"
+    ),
     Column("method", "text", "", "how the interval was made"),
 )

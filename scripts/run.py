@@ -7,7 +7,7 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).resolve().parent))
 
-from setup_env import call, ready  # noqa: E402
+from setup_env import call, ready
 
 if __name__ == "__main__":
     sys.exit(call([str(ready("run")), "-m", "cohort", "run", *sys.argv[1:]]))

@@ -21,7 +21,9 @@ SEEN = ("glucose_mg_dl", "insulin_mu_l", "secretion_mu_per_min", "release_mg_per
 TYPICAL, BORDERLINE, EXTREME = range(3)
 
 
-def choose(size: NDArray[np.float64], growth: NDArray[np.float64], wanted: int) -> tuple[NDArray[np.int64], NDArray[np.int8]]:
+def choose(
+    size: NDArray[np.float64], growth: NDArray[np.float64], wanted: int
+) -> tuple[NDArray[np.int64], NDArray[np.int8]]:
     """Which subjects keep their courses: (rows, why), ordered by row.
 
     size: cycle amplitude where there are cycles, else the window's range; growth: NaN where unknown. Half are those
@@ -41,7 +43,9 @@ def choose(size: NDArray[np.float64], growth: NDArray[np.float64], wanted: int) 
     known = np.flatnonzero(np.isfinite(size))
     quarter = wanted // 4 if np.isfinite(growth).any() else 0
     extreme = wanted // 4
-    by_distance = known[np.argsort(np.abs(size[known] - np.median(size[known])), kind="stable")] if len(known) else known
+    by_distance = (
+        known[np.argsort(np.abs(size[known] - np.median(size[known])), kind="stable")] if len(known) else known
+    )
     take(by_distance, wanted - quarter - extreme, TYPICAL)
     border = np.flatnonzero(np.isfinite(growth))
     take(border[np.argsort(np.abs(growth[border]), kind="stable")], quarter, BORDERLINE)

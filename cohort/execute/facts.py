@@ -8,7 +8,7 @@ import numpy as np
 
 from cohort.model.inputs import People, steady_input
 from cohort.model.protocol import Arm
-from cohort.population.recipe import REFERENCE_WEIGHT_KG
+from cohort.quantities import REFERENCE_WEIGHT_KG
 from cohort.study.arms import has_steady_input
 
 DISAGREES_NONE_BELOW = 1e-9

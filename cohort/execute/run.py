@@ -170,7 +170,7 @@ def _locked(out: Path) -> Iterator[None]:
 def _terminable() -> Iterator[None]:
     """SIGTERM ends a run as Ctrl-C does."""
 
-    def interrupt(signum: int, frame: Any) -> None:
+    def interrupt(*_: Any) -> None:
         raise KeyboardInterrupt
 
     if threading.current_thread() is not threading.main_thread():
@@ -189,7 +189,9 @@ def _check_folder(study: Study, out: Path) -> dict[str, Any]:
     if not path.exists():
         other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
         if other:
-            raise StudyError([Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))])
+            raise StudyError(
+                [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
+            )
         return {}
     try:
         before: dict[str, Any] = json.loads(path.read_text())
@@ -201,7 +203,9 @@ def _check_folder(study: Study, out: Path) -> dict[str, Any]:
     if changed:
         raise StudyError([_refusal(changed, settings, study.settings, out)])
     if identities["subjects"] != subjects_identity(study) or any(
-        identities["outcomes"].get(arm.name, now) != now for arm in study.arms for now in [arm_identity(study, arm, "outcomes")]
+        identities["outcomes"].get(arm.name, now) != now
+        for arm in study.arms
+        for now in [arm_identity(study, arm, "outcomes")]
     ):
         why = "holds results of other data files or of another version of this package"
         raise StudyError([Problem("", f"{why}; name another folder with --out", str(out))])
@@ -252,4 +256,3 @@ def _versions() -> dict[str, str]:
 def _write_record(out: Path, record: Mapping[str, Any], state: str) -> None:
     write_bytes(out / "study.toml", record["study_texts"][-1].encode())
     write_bytes(out / "run.json", (json.dumps({**record, "state": state}, indent=2) + "\n").encode())
-

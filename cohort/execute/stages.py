@@ -78,4 +78,4 @@ def constants(study: Study, table: Table) -> Mapping[str, str]:
 def times(duration_min: float, every_min: float) -> NDArray[np.float64]:
     """Points of a kept time course, from the arm's beginning to its end."""
     count = int(np.floor(duration_min / every_min + 1e-9))
-    return np.arange(count + 1) * every_min
+    return np.asarray(np.arange(count + 1) * every_min, dtype=np.float64)

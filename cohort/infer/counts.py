@@ -44,9 +44,7 @@ def share(k: int, n: int, unresolved: int = 0) -> Share:
     return Share(k, n, unresolved, (k + 0.5 * unresolved) / n if n else np.nan, low, high, "Wilson 95 %")
 
 
-def share_of_scrambles(
-    yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]
-) -> Share:
+def share_of_scrambles(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]) -> Share:
     """The share of a Sobol' cohort from its independent scrambles (one entry each), by Student's t over them.
 
     A binomial interval would be too wide: the points of a scramble are more even than independent ones.

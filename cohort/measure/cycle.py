@@ -17,10 +17,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import compile_program, jit
-from cohort.model.linear import leading_directions, solve_each
 from cohort.measure.turning import turning_points
 from cohort.model.body import Body
 from cohort.model.inputs import held
+from cohort.model.linear import leading_directions, solve_each
 from cohort.model.rest import Rest, spectrum
 from cohort.model.tangent import tangent_stepper
 from cohort.simulate.engine import DONE
@@ -84,7 +84,7 @@ def displaced(held_: Held) -> Array:
     direction = np.empty_like(held_.rest.states)
     leading_directions(held_.rest.jacobians, np.ascontiguousarray(held_.rest.eigenvalues[:, 0]), lead, direction)
     size = _FIRST_DISPLACEMENT * typical(held_.body)[lead]
-    start = held_.rest.states + size * direction
+    start: Array = held_.rest.states + size * direction
     if held_.body.card.positive:
         start = np.where(start > 0.1 * held_.rest.states, start, 0.1 * held_.rest.states)
     return start
@@ -223,8 +223,8 @@ def close(subjects: Held, state: Array, period: Array, amplitude: Array) -> Orbi
     multiplier[close_to_one] = _second_multiplier(_monodromy(some, x[close_to_one], T[close_to_one]))
     swing = _lead_swing(subjects, x, T)
     with np.errstate(invalid="ignore"):
-        good = (error <= ACCEPTED) & (multiplier < 1.0) & (swing > 0.5 * amplitude) & (T > 0.3 * period)
-        good &= T < 1.7 * period
+        good = (error <= ACCEPTED) & (multiplier < 1.0) & (swing > 0.5 * amplitude) & (0.3 * period < T)
+        good &= 1.7 * period > T
     return Orbits(good, x, T, error, multiplier)
 
 
@@ -297,7 +297,7 @@ def _second_multiplier(monodromy: Array) -> Array:
     distance[np.isnan(distance)] = np.inf
     kept = np.abs(values)
     kept[np.arange(n), distance.argmin(axis=1)] = 0.0
-    return kept.max(axis=1)
+    return np.asarray(kept.max(axis=1), dtype=np.float64)
 
 
 @jit
@@ -323,7 +323,9 @@ def _lead_swing(subjects: Held, x: Array, T: Array) -> Array:
         some = subjects.take(fine)
         for rows, found in orbit_courses(some, x[fine], T[fine], (_lead_column(subjects.body),)):
             out = np.full((len(rows), ORBIT_COLUMNS), np.nan)
-            orbit_rows(found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, out)
+            orbit_rows(
+                found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, out
+            )
             swing[fine[rows]] = out[:, 1] - out[:, 0]
     return swing
 

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import numpy as np
-
 from cohort.compiled import jit
 from cohort.measure.scan import extremes, scan, turns_between
 from cohort.measure.windows import above, baseline

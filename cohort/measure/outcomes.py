@@ -92,9 +92,7 @@ def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array) -
     return read
 
 
-def _read(
-    read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, times: Array, period: Array
-) -> None:
+def _read(read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, times: Array, period: Array) -> None:
     read.status[rows] = course.status
     some = np.full((len(rows), read.window.shape[1]), np.nan)
     window_rows(*_arrays(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)

@@ -103,9 +103,7 @@ def _keep(orbits: Orbits, rows: NDArray[np.int64], found: Orbits) -> None:
         mine[some] = theirs[found.found]
 
 
-def _search_second_attractor(
-    subjects: Held, rows: NDArray[np.int64], regime: NDArray[np.int8], orbits: Orbits
-) -> None:
+def _search_second_attractor(subjects: Held, rows: NDArray[np.int64], regime: NDArray[np.int8], orbits: Orbits) -> None:
     """Look for an orbit beside an attracting equilibrium, from glucose x 1.5 and x 0.6.
 
     Amplitudes that shrink at every cycle, and at the end at least half as fast as the equilibrium itself attracts,
@@ -143,4 +141,3 @@ def _seen_at_rest(subjects: Held) -> Array:
     seen = observe_states(subjects.body, subjects.rest.states, subjects.Gin, subjects.Iin, subjects.parameters)
     columns = list(subjects.body.traced.observed)
     return seen[:, [columns.index("glucose_mg_dl"), columns.index("insulin_mu_l")]]
-

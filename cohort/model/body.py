@@ -32,9 +32,7 @@ class Body:
         return (*self.card.parameters, *ARM_PARAMETERS)
 
     @functools.cache  # noqa: B019 - bodies live as long as the process
-    def stepper(
-        self, seen: tuple[str, ...], steady: bool, order: int = ORDER, tolerance: float = TOLERANCE
-    ) -> Stepper:
+    def stepper(self, seen: tuple[str, ...], steady: bool, order: int = ORDER, tolerance: float = TOLERANCE) -> Stepper:
         """One Taylor step that records the `seen` columns; `steady` where the inputs are constant within a step."""
         return Stepper(self.traced, seen, steady, order, tolerance, self.card.positive)
 
@@ -101,6 +99,3 @@ def body(model: str) -> Body:
         allowed = ", ".join(MODELS)
         raise StudyError([Problem("model", f"{model!r} is not a model{nearest(model, MODELS)}; one of {allowed}")])
     return make_body(MODELS[model], *_TEXTS[model])
-
-
-

@@ -108,9 +108,9 @@ class _Pieces:
             self._on_off(shape, channel, shape.rate * scale)
         elif isinstance(shape, Sine):
             self.add(CONSTANT, channel, 0.0, self.duration, shape.mean * scale)
-            rate = 2.0 * np.pi / self.period(shape.period_min)
+            angular = 2.0 * np.pi / self.period(shape.period_min)
             amplitude = shape.mean * shape.relative_amplitude * scale
-            self.add(WAVE, channel, 0.0, self.duration, amplitude, rate, shape.phase)
+            self.add(WAVE, channel, 0.0, self.duration, amplitude, angular, shape.phase)
         elif isinstance(shape, Meal):
             self._meal(shape, channel, shape.amount_mg * scale)
         else:

@@ -173,7 +173,8 @@ class Recurrences:
             return self.affine(_form(series), k)
         if series.kind == "product":
             x, y = series.parts
-            assert isinstance(x, Series) and isinstance(y, Series)
+            assert isinstance(x, Series)
+            assert isinstance(y, Series)
             return self._square(x, k) if x == y else self._convolve(lambda i: self.value(x, i), y, k, prime=False)
         if series.kind == "quotient":
             return self._quotient(series, k)
@@ -399,4 +400,3 @@ class Stepper:
         if self.positive:
             health = b.if_less(zero, lowest, health, zero)
         return b.if_less(b.constant(SHORTEST_STEP_MIN), h, health, zero)
-

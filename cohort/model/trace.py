@@ -11,7 +11,7 @@ from __future__ import annotations
 import inspect
 from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, ClassVar
 
 from cohort.program import Builder, Program
 
@@ -21,9 +21,9 @@ Number = float | int
 class Symbol:
     """One node of the graph: an operation on other nodes, a named symbol, or a number."""
 
-    __slots__ = ("operands", "op", "value")
+    __slots__ = ("op", "operands", "value")
 
-    _known: dict[tuple[str, tuple[int, ...], Any], Symbol] = {}
+    _known: ClassVar[dict[tuple[str, tuple[int, ...], Any], Symbol]] = {}
 
     op: str
     operands: tuple[Symbol, ...]

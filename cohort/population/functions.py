@@ -30,7 +30,8 @@ def exp(x: Any) -> Array:
     total = np.full_like(r, 1.0 / math.factorial(_EXP_TERMS))
     for n in range(_EXP_TERMS - 1, -1, -1):
         total = total * r + 1.0 / math.factorial(n)
-    return np.ldexp(total, np.nan_to_num(k).astype(np.int64))
+    scaled: Array = np.ldexp(total, np.nan_to_num(k).astype(np.int64))
+    return scaled
 
 
 def log(x: Any) -> Array:
@@ -90,7 +91,7 @@ def normal_quantile(u: Any) -> Array:
     """The standard normal law's quantile for 0 < u < 1 (Wichura's AS 241), to about 1e-16 relative."""
     u = np.asarray(u, dtype=np.float64)
     q = u - 0.5
-    central = _ratio(0.180625 - q * q, _CENTRE) * q
+    central: Array = _ratio(0.180625 - q * q, _CENTRE) * q
     if np.all(np.abs(q) <= 0.425):
         return central
     with np.errstate(invalid="ignore", divide="ignore"):
@@ -114,7 +115,8 @@ def normal_cdf(z: Any) -> Array:
     for n in range(80, 0, -1):
         fraction = far + n / fraction
     tail = np.where(size <= 3.0, 0.5 - density * series, density / fraction)
-    return np.where(z < 0.0, tail, 1.0 - tail)
+    share: Array = np.where(z < 0.0, tail, 1.0 - tail)
+    return share
 
 
 def log_gamma(x: float) -> float:

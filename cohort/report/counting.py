@@ -52,7 +52,7 @@ def _codes(column: Any, words: Any) -> NDArray[np.int64]:
     coded = column.combine_chunks().dictionary_encode()
     known = np.array([place.get(str(w), -1) for w in coded.dictionary.to_pylist()] or [-1])
     indices = np.asarray(coded.indices.fill_null(len(known)))
-    return np.append(known, -1)[indices]
+    return np.asarray(np.append(known, -1)[indices], dtype=np.int64)
 
 
 def count_regimes(results: Results) -> list[Count]:

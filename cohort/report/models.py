@@ -26,7 +26,9 @@ def describe_model(name: str) -> str:
     lines = [f"{card.name}: {card.title}", "", *textwrap.wrap(f"Source: {card.source}", 78), ""]
     lines += [f"States (amounts): {', '.join(card.states)}; insulin in mU, G in mg", "", *_parameters(card)]
     lines += ["", "They may vary too (properties of a person that act on meals):"]
-    lines += [f"  {q.name:22s}{q.unit:>8s}{'':11s}{_range(q.low, q.high)}  {q.meaning}" for q in INPUT_PARAMETERS.values()]
+    lines += [
+        f"  {q.name:22s}{q.unit:>8s}{'':11s}{_range(q.low, q.high)}  {q.meaning}" for q in INPUT_PARAMETERS.values()
+    ]
     lines += ["", "Known limits:"]
     for limit in card.limits:
         lines += textwrap.wrap(limit, 76, initial_indent="- ", subsequent_indent="  ")

@@ -97,7 +97,10 @@ def _quantiles(results: Results, arm: str) -> dict[str, dict[str, Any]]:
         values = np.concatenate(pieces) if pieces else np.empty(0)
         if len(values):
             marks = np.quantile(values, QUANTILES)
-            found[name] = {"n": len(values), **{f"q{q * 100:02.0f}": float(v) for q, v in zip(QUANTILES, marks, strict=True)}}
+            found[name] = {
+                "n": len(values),
+                **{f"q{q * 100:02.0f}": float(v) for q, v in zip(QUANTILES, marks, strict=True)},
+            }
     return found
 
 
@@ -124,7 +127,8 @@ def closing_words(summary: dict[str, Any]) -> str:
 def _stratum_lines(stratum: str, counts: dict[str, Any]) -> list[str]:
     yes = counts[OSCILLATES]
     who = "" if stratum == EVERYONE else f"{stratum}: "
-    head = f"  {who}in this model {_percent(yes['share'])} oscillate ({_percent(yes['low'])} to {_percent(yes['high'])}; {yes['method']})"
+    between = f"{_percent(yes['low'])} to {_percent(yes['high'])}"
+    head = f"  {who}in this model {_percent(yes['share'])} oscillate ({between}; {yes['method']})"
     parts = [f"{counts[r]['n']:,} {r}" for r in REGIMES if counts[r]["n"]]
     return [head, f"    of {yes['of']:,}: {', '.join(parts)}"]
 

@@ -48,7 +48,8 @@ def clamped_courses(body: Body, values: Array, people: People, arm: Arm, seen: t
 
     `seen` must begin with glucose_mg_dl, which is what the clamp reads.
     """
-    assert arm.clamp is not None and seen[0] == "glucose_mg_dl"
+    assert arm.clamp is not None
+    assert seen[0] == "glucose_mg_dl"
     n = len(values)
     free, held = clamp_steppers(body, seen)
     pieces = until(inputs(arm, people), arm.clamp.from_min)
@@ -112,11 +113,11 @@ def first_below(a, level):  # type: ignore[no-untyped-def]
 
 
 @jit
-def _integrate(
+def _integrate(  # type: ignore[no-untyped-def]
     free, held, exponential, circular, orders, x0, inverse_scale, free_constants, held_constants, kind, channel, on,
     off, amplitude, rate, phase, stops, bolus_time, bolus_amount, bolus_channel, enters, lead, targets, per_mg_dl,
     begins, settle, start, step_size, coefficients, summaries, n_steps, status, final, dose, off_target,
-):  # type: ignore[no-untyped-def]  # fmt: skip
+):  # fmt: skip
     n, states = x0.shape
     columns, size = coefficients.shape[2], coefficients.shape[3]
     at_inputs = 2 * states + 1

@@ -22,7 +22,8 @@ class Courses:
 
     Step i < n_steps[s] of subject s covers start[s, i] .. start[s, i] + step_size[s, i] (min); there column c is the
     polynomial with coefficients coefficients[s, i, c, :] in rising powers of x = (t - start) / step_size, 0 <= x <= 1.
-    summaries: float64[n, steps, columns, SUMMARY] (`cohort.model.taylor`). status int64[n]: -1 or an index into FAILURES; final float64[n, states].
+    summaries: float64[n, steps, columns, SUMMARY] (`cohort.model.taylor`). status int64[n]: -1 or an index into
+    FAILURES; final float64[n, states].
     """
 
     columns: tuple[str, ...]
@@ -51,7 +52,7 @@ class Courses:
             return out
 
         return Courses(
-            self.columns, *(padded(a) for a in (self.start, self.step_size, self.coefficients, self.summaries)),
+            self.columns, padded(self.start), padded(self.step_size), padded(self.coefficients), padded(self.summaries),
             self.n_steps.copy(), self.status.copy(), self.final.copy(),
         )  # fmt: skip
 

@@ -40,8 +40,10 @@ def constant_rates(source, l, at, orders, t, b, kind, channel, on, off, amplitud
 
 
 @jit
-def moving_rates(source, l, at, orders, t, left, b, kind, channel, on, off, amplitude, rate, phase,
-                 exponential, circular, held, scratch):  # type: ignore[no-untyped-def]  # fmt: skip
+def moving_rates(  # type: ignore[no-untyped-def]
+    source, l, at, orders, t, left, b, kind, channel, on, off, amplitude, rate, phase, exponential, circular, held,
+    scratch,
+):  # fmt: skip
     """Set lane l's input coefficients at time t within a stretch that ends `left` later; `held` are its constants."""
     for i in range(2 * orders):
         source[at + i, l] = 0.0
@@ -90,18 +92,19 @@ def verdict(x, h):  # type: ignore[no-untyped-def]
 
 
 @jit
-def integrate(
+def integrate(  # type: ignore[no-untyped-def]
     step, exponential, circular, orders, steady, x0, inverse_scale, constants,
     kind, channel, on, off, amplitude, rate, phase, stops, bolus_time, bolus_amount, bolus_channel, enters,
     begin, end, record_from, start, step_size, coefficients, summaries, n_steps, status, final, overflow,
-):  # type: ignore[no-untyped-def]  # fmt: skip
+):  # fmt: skip
     """Integrate subjects begin..end-1 from time 0 to their last stop.
 
     x0, inverse_scale, final: float64[n, states]; constants: float64[n, hoisted]; inputs as in
     `cohort.model.inputs.Inputs`; enters: state that each channel enters. Row s = b - begin of the record: start and
     step_size float64[rows, capacity], coefficients float64[rows, capacity, columns x (order + 1)] and summaries
-    float64[rows, capacity, columns x SUMMARY] of the steps that end after `record_from`; n_steps int64[n]; status int64[n], DONE or an index into FAILURES; overflow
-    bool[n] where the record was too small (the subject must be done again with a larger one).
+    float64[rows, capacity, columns x SUMMARY] of the steps that end after `record_from`; n_steps int64[n];
+    status int64[n], DONE or an index into FAILURES; overflow bool[n] where the record was
+    too small (the subject must be done again with a larger one).
     """
     states = x0.shape[1]
     recorded = coefficients.shape[2]

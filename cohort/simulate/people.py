@@ -27,7 +27,9 @@ def simulate(model: str | Body, parameters: Mapping[str, Any], arm: Arm, body_we
     """
     found = body(model) if isinstance(model, str) else model
     allowed = (*found.card.parameters, *INPUT_PARAMETERS)
-    wrong = [Problem(p, f"not a parameter of {found.card.name}{nearest(p, allowed)}") for p in parameters if p not in allowed]
+    wrong = [
+        Problem(p, f"not a parameter of {found.card.name}{nearest(p, allowed)}") for p in parameters if p not in allowed
+    ]
     if wrong:
         raise StudyError(wrong)
     n = max((np.size(v) for v in (*parameters.values(), body_weight_kg)), default=1)
@@ -37,7 +39,7 @@ def simulate(model: str | Body, parameters: Mapping[str, Any], arm: Arm, body_we
 
     values = np.column_stack([column(parameters.get(p), found.card.nominal[p]) for p in found.card.parameters])
     own = [column(parameters.get(p), np.nan) for p in INPUT_PARAMETERS]
-    people = People(column(body_weight_kg, np.nan), *own, np.full(n, np.nan))
+    people = People(column(body_weight_kg, np.nan), own[0], own[1], np.full(n, np.nan))
     return simulate_values(found, values, people, arm, tuple(found.traced.observed))
 
 

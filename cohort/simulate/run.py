@@ -152,7 +152,6 @@ class _Loop:
         )  # fmt: skip
 
 
-
 def advance(prepared: Prepared) -> tuple[Array, NDArray[np.int64]]:
     """Integrate every subject to its last stop, recording nothing: (final states float64[n, states], status)."""
     loop = _Loop(prepared, 1, 1)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable, Mapping
+from itertools import pairwise
 from typing import Any
 
 from cohort.errors import nearest
@@ -99,7 +100,9 @@ def _arm(tree: Tree, value: Mapping[str, Any], path: Path, card: ModelCard, name
         return None
     duration, settle = _number(value["duration"], 0.0), _number(value.get("settle"), 0.0)
     if settle >= duration:
-        tree.problem((*path, "settle"), f"{settle:g} min is not allowed; it must be shorter than duration ({duration:g} min)")
+        tree.problem(
+            (*path, "settle"), f"{settle:g} min is not allowed; it must be shorter than duration ({duration:g} min)"
+        )
         return None
     steady = value.get("steady")
     return Arm(
@@ -127,7 +130,9 @@ def _start(tree: Tree, value: Mapping[str, Any], path: Path, card: ModelCard) ->
                              f"states: {', '.join(card.states)}")  # fmt: skip
         missing = [s for s in card.states if s not in start and not _noted(tree, (*path, "start", s))]
         if missing:
-            tree.problem((*path, "start"), f"{', '.join(missing)} missing; a state names all of {', '.join(card.states)}")
+            tree.problem(
+                (*path, "start"), f"{', '.join(missing)} missing; a state names all of {', '.join(card.states)}"
+            )
         for state, number in start.items():
             if state in ("Ip", "Ii", "G") and number == 0:
                 tree.problem((*path, "start", state), "0 is not allowed; an amount in the body must be > 0")
@@ -178,7 +183,7 @@ def _per_kg(*values: Any) -> bool:
     return any(isinstance(v, Quantity) and "/kg" in v.unit for v in values)
 
 
-def _constant(tree: Tree, value: dict[str, Any], path: Path, duration: float) -> Shape:
+def _constant(_tree: Tree, value: dict[str, Any], _path: Path, _duration: float) -> Shape:
     return Constant(value["rate"].number, _per_kg(value["rate"]))
 
 
@@ -187,14 +192,16 @@ def _steps(tree: Tree, value: dict[str, Any], path: Path, duration: float) -> Sh
     if not times or len(times) != len(rates):
         tree.problem(path, f"times has {len(times)} entries, rates {len(rates)}; they must pair, at least one of each")
         return None
-    if any(b <= a for a, b in zip(times, times[1:], strict=False)):
+    if any(b <= a for a, b in pairwise(times)):
         tree.problem((*path, "times"), "must rise")
         return None
     if len({r.unit for r in rates}) > 1:
         tree.problem((*path, "rates"), "some are per kg and some are not; write all in one kind of unit")
         return None
     if times[-1] >= duration:
-        tree.problem((*path, "times"), f"the last step begins at {times[-1]:g} min, but the arm ends at {duration:g} min")
+        tree.problem(
+            (*path, "times"), f"the last step begins at {times[-1]:g} min, but the arm ends at {duration:g} min"
+        )
         return None
     return Steps(tuple(times), tuple(r.number for r in rates), _per_kg(*rates))
 

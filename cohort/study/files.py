@@ -21,6 +21,7 @@ LARGEST_FILE = 2_000_000_000
 _OPTIONAL = ("id", "stratum", "body_weight_kg", "person")
 _SHOWN = 8
 
+
 class FileError(ValueError):
     """A data file that cannot be used; the message says why, with the line where there is one."""
 
@@ -46,7 +47,9 @@ class Files:
             near = nearest(path.name, [p.name for p in path.parent.glob("*")] if path.parent.is_dir() else [])
             raise FileError(f"no file {name!r} beside the study{near}") from None
         except (OSError, ValueError) as error:
-            raise FileError(str(error) if isinstance(error, FileError) else f"{name!r} cannot be read: {error}") from None
+            raise FileError(
+                str(error) if isinstance(error, FileError) else f"{name!r} cannot be read: {error}"
+            ) from None
         self.digests[name] = hashlib.sha256(data).hexdigest()
         return _parquet(path) if path.suffix == ".parquet" else _csv(data)
 
@@ -61,7 +64,7 @@ class Files:
                 raise FileError(f"{name!r} holds {len(numbers)} values in {column!r}; at least 2 are wanted")
             return tuple(np.sort(numbers).tolist())
         except FileError as error:
-            tree.problem(path, str(error))
+            tree.problem(path, _named(name, error))
             return None
 
     def subjects(self, tree: Tree, name: str, card: ModelCard, strata: tuple[str, ...]) -> Table | None:
@@ -70,13 +73,15 @@ class Files:
         try:
             table = self.read(name)
         except FileError as error:
-            tree.problem(path, str(error))
+            tree.problem(path, _named(name, error))
             return None
         before = len(tree.problems)
         allowed = (*card.parameters, *INPUT_PARAMETERS, *_OPTIONAL)
         for column in table:
             if column not in allowed:
-                tree.problem(path, f"{name}: column {column!r} is no parameter of {card.name}{nearest(column, allowed)}")
+                tree.problem(
+                    path, f"{name}: column {column!r} is no parameter of {card.name}{nearest(column, allowed)}"
+                )
         n = len(next(iter(table.values()), []))
         if not n:
             tree.problem(path, f"{name}: holds no subjects")
@@ -100,12 +105,18 @@ class Files:
             _, person = np.unique([str(v) for v in table["person"]], return_inverse=True)
         return Table(columns, stratum, weight, person, ids)
 
-    def _column(self, tree: Tree, name: str, cells: list[object], column: str, low: float, high: float) -> NDArray[np.float64]:
+    def _column(
+        self, tree: Tree, name: str, cells: list[object], column: str, low: float, high: float
+    ) -> NDArray[np.float64]:
         try:
             return _numbers(cells, column, low, high)
         except FileError as error:
             tree.problem(("subjects", "table"), f"{name}: {error}")
             return np.full(len(cells), np.nan)
+
+
+def _named(name: str, error: FileError) -> str:
+    return str(error) if name in str(error) else f"{name}: {error}"
 
 
 def _codes(tree: Tree, name: str, table: dict[str, list[object]], strata: tuple[str, ...], n: int) -> NDArray[np.int16]:

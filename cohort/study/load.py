@@ -31,7 +31,9 @@ def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> S
     except OSError as error:
         folder = place.parent if place.parent.is_dir() else Path()
         near = nearest(place.name, [p.name for p in folder.glob("*.toml")])
-        raise StudyError([Problem("", f"cannot be read: {(error.strerror or str(error)).lower()}{near}", str(path))]) from None
+        raise StudyError(
+            [Problem("", f"cannot be read: {(error.strerror or str(error)).lower()}{near}", str(path))]
+        ) from None
     except ValueError as error:
         raise StudyError([Problem("", f"cannot be read: {error}", str(path))]) from None
     return study_from(data, place, overrides)

@@ -11,8 +11,8 @@ from cohort.model.catalogue import MODELS
 from cohort.model.inputs import People, steady_input
 from cohort.model.protocol import Arm
 from cohort.population.laws import Fixed
-from cohort.population.recipe import REFERENCE_WEIGHT_KG
 from cohort.program import run
+from cohort.quantities import REFERENCE_WEIGHT_KG
 from cohort.study.spec import Study
 from cohort.study.tree import Tree
 

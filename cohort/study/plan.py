@@ -97,12 +97,10 @@ def _arm(arm: Arm, n: int) -> ArmPlan:
 
 
 def _laws(study: Study) -> tuple[LawRow, ...]:
-    rows = []
-    for stratum in study.recipe.strata:
-        for name in study.recipe.drawn:
-            if study.recipe.table is None and (row := _law_row(study, stratum, name)):
-                rows.append(row)
-    return tuple(rows)
+    if study.recipe.table is not None:
+        return ()
+    rows = (_law_row(study, stratum, name) for stratum in study.recipe.strata for name in study.recipe.drawn)
+    return tuple(row for row in rows if row is not None)
 
 
 def _law_row(study: Study, stratum: Stratum, name: str) -> LawRow | None:
@@ -138,7 +136,9 @@ def describe(study: Study, found: Plan) -> str:
         many = len({row.stratum for row in found.laws}) > 1
         for law in found.laws:
             label = f"{law.stratum}: {law.parameter}" if many else law.parameter
-            lines.append(f"  {label[:28]:28s} {law.p5:10.4g} {law.p50:10.4g} {law.p95:10.4g}  {_unit(law.unit)}".rstrip())
+            lines.append(
+                f"  {label[:28]:28s} {law.p5:10.4g} {law.p50:10.4g} {law.p95:10.4g}  {_unit(law.unit)}".rstrip()
+            )
     elif study.recipe.table is None:
         lines += ["", "  nothing varies between subjects: every row will be the same body"]
     return "\n".join(lines)

@@ -129,7 +129,9 @@ def _within(tree: Tree, path: Path, law: Law, low: float, high: float, unit: str
     shown = "" if unit == "1" else f" {unit}"
     if isinstance(law, Fixed):
         if mass:
-            tree.problem(path, f"{law.value:g}{shown} is not allowed; physical values lie in {low:g} to {high:g}{shown}")
+            tree.problem(
+                path, f"{law.value:g}{shown} is not allowed; physical values lie in {low:g} to {high:g}{shown}"
+            )
         return not mass
     if mass > CUT_REFUSED:
         tree.problem(path, f"{mass:.1%} of this law lies outside the physical range {low:g} to {high:g}{shown}; at most "
@@ -197,7 +199,7 @@ def _law_of(kind: str, n: dict[str, Any], low: float, high: float) -> Law:
         return Triangular(low, n["mode"], high)
     if kind == "beta":
         return Beta(low, high, n["alpha"], n["beta"])
-    return {"uniform": Uniform, "loguniform": Loguniform}[kind](low, high)
+    return Uniform(low, high) if kind == "uniform" else Loguniform(low, high)
 
 
 def _strata(
@@ -257,7 +259,9 @@ def _check_correlations(tree: Tree, made: Recipe) -> None:
         names = sorted({name for c in stratum.correlations for name in c.pair})
         strange = [n for n in names if n not in made.drawn]
         for n in strange:
-            tree.problem(path, f"{n!r} does not vary between subjects, so it has no correlation{nearest(n, made.drawn)}")
+            tree.problem(
+                path, f"{n!r} does not vary between subjects, so it has no correlation{nearest(n, made.drawn)}"
+            )
         if strange:
             continue
         matrix = latent_matrix(names, [(c.pair, c.spearman) for c in stratum.correlations])

@@ -75,8 +75,8 @@ def read_toml(data: bytes, file: str) -> tuple[dict[str, Any], str]:
         return tomllib.loads(text.replace("\r\n", "\n")), text
     except tomllib.TOMLDecodeError as error:
         message, _, place = str(error).partition(" (at ")
-        line = place.removeprefix("line ").split(",")[0]
-        number = int(line) if line.isdigit() else text.count("\n") + 1
+        found = place.removeprefix("line ").split(",")[0]
+        number = int(found) if found.isdigit() else text.count("\n") + 1
         raise StudyError([Problem("", f"is not TOML: {message[0].lower()}{message[1:]}", file, number)]) from None
     except (RecursionError, ValueError) as error:
         why = "is nested too deeply" if isinstance(error, RecursionError) else f"is not TOML: {error}"
@@ -185,7 +185,7 @@ def _quantity(out: Tree, value: Any, path: Path, key: Key) -> Quantity | str | N
     if units == ("parameter",):
         symbol = next((str(p) for p in path if p in PARAMETERS or p in INPUT_PARAMETERS), None)
         if symbol is None:
-            return None  # the symbol itself is unknown and has its own problem
+            return Quantity(float("nan"), "")  # the symbol itself is unknown, which has its own problem
         units = (parameter_unit(symbol),)
     try:
         number, unit = parse(value, *units)

@@ -96,7 +96,7 @@ def parse(value: object, *units: str) -> tuple[float, str]:
     """
     wanted = DIMENSIONS[units[0]].meaning
     if isinstance(value, bool) or not isinstance(value, int | float | str):
-        raise UnitError(f"{value!r} is not {wanted}; write a number or a text such as \"1 {units[0]}\"")
+        raise UnitError(f'{value!r} is not {wanted}; write a number or a text such as "1 {units[0]}"')
     if not isinstance(value, str):
         return _number(value), units[0]
     found = _QUANTITY.fullmatch(value) if len(value) < 100 else None

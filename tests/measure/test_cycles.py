@@ -146,7 +146,7 @@ def test_the_orbit_closes_under_an_independent_integrator_for_every_body() -> No
     orbits = find_orbits(subjects, displaced(subjects))
     assert orbits.found.all()
     assert len(rows) >= 200
-    for i in range(0, len(rows)):
+    for i in range(len(rows)):
         out = solve_ivp(
             rates_of(subjects.parameters[i], 216.0), (0, orbits.period[i]), orbits.state[i],
             method="DOP853", rtol=1e-11, atol=1e-9,

@@ -86,7 +86,9 @@ def test_traced_derivatives_are_the_hand_derived_slopes(G: float, Ii: float, x3:
 def test_jacobian_against_finite_differences(model: str) -> None:
     found = body(model)
     rng = np.random.default_rng(5)
-    states = np.array([found.card.typical[s] for s in found.card.states]) * rng.uniform(0.6, 1.6, len(found.card.states))
+    states = np.array([found.card.typical[s] for s in found.card.states]) * rng.uniform(
+        0.6, 1.6, len(found.card.states)
+    )
     rest = [216.0, 1.0, *found.card.nominal.values(), 1.0]
     n = len(states)
     exact = np.array(run(found.jacobian, [*states, *rest])).reshape(n, n)

@@ -78,7 +78,7 @@ def test_the_compiled_step_is_its_plain_twin_bit_for_bit() -> None:
     values = bodies(1, seed=8)
     arm = Arm("short", 5.0, start=start, glucose=(Constant(216.0),))
     prepared = prepare(BODY, values, people(1), arm, SEEN)
-    (_, found), = courses(prepared, 5.0)
+    ((_, found),) = courses(prepared, 5.0)
     assert found.n_steps[0] >= 1
     constants = run(prepared.stepper.hoisted, [*values[0], 1.0])
     np.testing.assert_array_equal(prepared.constants[0], constants)
