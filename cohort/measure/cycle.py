@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import compile_program, jit
-from cohort.measure.turning import turning_points
+from cohort.measure.turning import NEAR, turning_points
 from cohort.model.body import Body
 from cohort.model.inputs import held
 from cohort.model.linear import leading_directions, solve_each
@@ -31,7 +31,10 @@ Bools = NDArray[np.bool_]
 
 ORDER = 16
 TOLERANCE = 1e-12
-ROUNDS = (5, 8, 12, 20, 40, 60)
+ROUGH, FINE = (8, 1e-5), (12, 1e-9)
+"""Order and tolerance of tangents: those that steer Newton, and those that a multiplier next to 1 is judged by."""
+
+ROUNDS = (12, 20, 40, 60)
 """Cycles integrated before each attempt to close the orbit: the stated horizon is their sum."""
 
 NEWTON_ROUNDS = 4
@@ -182,7 +185,7 @@ def _marks(start, step_size, coefficients, summaries, n_steps, status, out):  # 
             continue
         n = n_steps[s]
         count = turning_points(
-            start[s, :n], step_size[s, :n], coefficients[s, :n, 0], summaries[s, :n, 0], times, values
+            start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n], NEAR, times, values
         )
         peaks = 0
         for i in range(1, count - 1):
@@ -210,17 +213,17 @@ def close(subjects: Held, state: Array, period: Array, amplitude: Array) -> Orbi
     error = np.full(n, np.inf)
     monodromy = np.full((n, size, size), np.nan)
     going = np.arange(n)
-    for _ in range(NEWTON_ROUNDS):
+    for attempt in range(NEWTON_ROUNDS):
         if not len(going):
             break
         some = subjects.take(going)
-        monodromy[going] = _monodromy(some, x[going], T[going])
+        monodromy[going] = _monodromy(some, x[going], T[going], FINE if attempt else ROUGH)
         x[going], T[going], error[going] = _chords(some, x[going], T[going], monodromy[going])
         going = going[np.isfinite(error[going]) & (error[going] > CONVERGED)]
     multiplier = _second_multiplier(monodromy)
     close_to_one = np.flatnonzero((multiplier > 0.98) & (error <= ACCEPTED))  # the first point's tangents are too rough
     some = subjects.take(close_to_one)
-    multiplier[close_to_one] = _second_multiplier(_monodromy(some, x[close_to_one], T[close_to_one]))
+    multiplier[close_to_one] = _second_multiplier(_monodromy(some, x[close_to_one], T[close_to_one], FINE))
     swing = _lead_swing(subjects, x, T)
     with np.errstate(invalid="ignore"):
         good = (error <= ACCEPTED) & (multiplier < 1.0) & (swing > 0.5 * amplitude) & (0.3 * period < T)
@@ -273,7 +276,7 @@ def _rates(subjects: Held, x: Array) -> Array:
     return out
 
 
-def _monodromy(subjects: Held, x: Array, T: Array) -> Array:
+def _monodromy(subjects: Held, x: Array, T: Array, accuracy: tuple[int, float] = ROUGH) -> Array:
     """The derivative of flow(x, T) with respect to x: float64[n, states, states]."""
     n, size = x.shape
     scale = typical(subjects.body)
@@ -283,7 +286,7 @@ def _monodromy(subjects: Held, x: Array, T: Array) -> Array:
     wide = np.concatenate([scale, np.full(size, np.inf)])
     pieces = held(*(np.repeat(v, size) for v in (subjects.Gin, subjects.Iin, T)))
     parameters = np.repeat(subjects.parameters, size, axis=0)
-    final, _ = advance(assemble(tangent_stepper(subjects.body), parameters, starts, wide, pieces, (0, 0)))
+    final, _ = advance(assemble(tangent_stepper(subjects.body, *accuracy), parameters, starts, wide, pieces, (0, 0)))
     columns = final[:, size:].reshape(n, size, size) / scale[None, :, None]
     return np.ascontiguousarray(columns.transpose(0, 2, 1))
 
@@ -337,7 +340,7 @@ ORBIT_COLUMNS = 4
 @jit
 def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
     """Lowest, highest, mean and time of the highest of every column over one turn: out float64[n, 4 x columns]."""
-    columns = coefficients.shape[2]
+    columns = coefficients.shape[1]
     room = start.shape[1] + 8
     times, values = np.empty(room), np.empty(room)
     for s in range(n_steps.shape[0]):
@@ -346,8 +349,8 @@ def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):
         n = n_steps[s]
         end = start[s, n - 1] + step_size[s, n - 1]
         for c in range(columns):
-            a = coefficients[s, :n, c]
-            count = turning_points(start[s, :n], step_size[s, :n], a, summaries[s, :n, c], times, values)
+            a = coefficients[s, c, :n]
+            count = turning_points(start[s, :n], step_size[s, :n], a, summaries[s, c, :n], NEAR, times, values)
             low = high = a[0, 0]
             when = 0.0
             for i in range(count):
@@ -356,5 +359,5 @@ def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):
                 low = min(low, values[i])
             total = 0.0
             for i in range(n):
-                total += summaries[s, i, c, 4] * step_size[s, i]
+                total += summaries[s, c, i, 4] * step_size[s, i]
             out[s, 4 * c], out[s, 4 * c + 1], out[s, 4 * c + 2], out[s, 4 * c + 3] = low, high, total / end, when

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from cohort.compiled import jit
-from cohort.measure.scan import extremes, scan, turns_between
+from cohort.measure.scan import extremes, polished, scan, turns_between
 from cohort.measure.windows import above, baseline
 
 MEAL_COLUMNS = ("baseline_mg_dl", "peak_mg_dl", "time_to_peak_min", "iauc_mg_dl_min", "ringing_cycles")
@@ -26,13 +26,13 @@ def meal_rows(start, step_size, coefficients, summaries, n_steps, status, times,
         if status[s] != -1:
             continue
         n = n_steps[s]
-        course = scan(start[s, :n], step_size[s, :n], coefficients[s, :n, 0], summaries[s, :n, 0])
+        course = scan(start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n])
         for m in range(meals):
             begin = times[m]
             until = times[m + 1] if m + 1 < meals else end
             before = baseline(course, begin, periods[s])
             peak, when, _ = extremes(course, begin, until)
-            out[s, m, 0], out[s, m, 1], out[s, m, 2] = before, peak, when - begin
+            out[s, m, 0], out[s, m, 1], out[s, m, 2] = before, peak, polished(course, when) - begin
             _, out[s, m, 3] = above(course, begin, min(begin + IAUC_MIN, until), before)
             first, last = turns_between(course, when, until)
             out[s, m, 4] = ringing(course.values[first:last])

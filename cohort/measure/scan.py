@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import jit
-from cohort.measure.turning import integral, turning_points, value
+from cohort.measure.turning import ROUGHLY, integral, slope_and_bend, turning_points, value
 
 Array = NDArray[np.float64]
 
@@ -46,7 +46,7 @@ def scan(start, step_size, a, summaries):  # type: ignore[no-untyped-def]
         square[i + 1] = square[i] + part * step_size[i]
     room = n + 64
     times, values = np.empty(room), np.empty(room)
-    count = turning_points(start, step_size, a, summaries, times, values)
+    count = turning_points(start, step_size, a, summaries, ROUGHLY, times, values)
     return Scan(start, step_size, a, summaries, centre, area, square, times[:count], values[:count])
 
 
@@ -76,14 +76,14 @@ def step_at(s, t):  # type: ignore[no-untyped-def]
 def value_at(s, t):  # type: ignore[no-untyped-def]
     """The column at time t."""
     i = step_at(s, t)
-    return value(s.a[i], min((t - s.start[i]) / s.step_size[i], 1.0))
+    return value(s.a, i, min((t - s.start[i]) / s.step_size[i], 1.0))
 
 
 @jit
 def area_to(s, t):  # type: ignore[no-untyped-def]
     """The column's integral from the course's beginning to t."""
     i = step_at(s, t)
-    return s.area[i] + integral(s.a[i], 0.0, min((t - s.start[i]) / s.step_size[i], 1.0)) * s.step_size[i]
+    return s.area[i] + integral(s.a, i, 0.0, min((t - s.start[i]) / s.step_size[i], 1.0)) * s.step_size[i]
 
 
 @jit
@@ -136,3 +136,15 @@ def extremes(s, begin, end):  # type: ignore[no-untyped-def]
     if x > highest:
         highest, when = x, end
     return highest, when, min(lowest, x)
+
+
+@jit
+def polished(s, t):  # type: ignore[no-untyped-def]
+    """A turning point's time to full accuracy; corners and ends stay where they are."""
+    i = step_at(s, t)
+    begin = (t - s.start[i]) / s.step_size[i]
+    x = begin
+    for _ in range(3):
+        f, g = slope_and_bend(s.a, i, x)
+        x -= f / g
+    return s.start[i] + x * s.step_size[i] if abs(x - begin) < 1e-3 and 0.0 < x < 1.0 else t

@@ -13,13 +13,14 @@ from cohort.measure.scan import (
     area_to,
     extremes,
     mean_between,
+    polished,
     scan,
     sd_between,
     step_at,
     turns_between,
     value_at,
 )
-from cohort.measure.turning import integral, level_root, turns_in_step, value
+from cohort.measure.turning import ROUGHLY, integral, level_root, turns_in_step, value
 
 LEVELS_MG_DL = (54.0, 70.0, 140.0, 180.0, 250.0)
 DAY_MIN = 1440.0
@@ -43,30 +44,30 @@ def above(s, begin, end, level):  # type: ignore[no-untyped-def]
         h = s.step_size[i]
         if s.start[i] >= end:
             break
-        a = s.a[i]
-        if a[0] + s.summaries[i, 3] < level:
+        a = s.a
+        if a[i, 0] + s.summaries[i, 3] < level:
             continue
         low = max((begin - s.start[i]) / h, 0.0)
         high = min((end - s.start[i]) / h, 1.0)
         if not high > low:
             continue
-        if a[0] - s.summaries[i, 3] > level:
+        if a[i, 0] - s.summaries[i, 3] > level:
             time += (high - low) * h
-            area += (integral(a, low, high) - level * (high - low)) * h
+            area += (integral(a, i, low, high) - level * (high - low)) * h
             continue
-        pieces = turns_in_step(a, s.summaries[i], places) + 1
+        pieces = turns_in_step(a, s.summaries, i, places, ROUGHLY) + 1
         previous = low
         for p in range(pieces):
             following = high if p == pieces - 1 else min(max(places[p], low), high)
             if following > previous:
-                first, last = value(a, previous) > level, value(a, following) > level
+                first, last = value(a, i, previous) > level, value(a, i, following) > level
                 left, right = previous, following
                 if first != last:
-                    x = level_root(a, level, previous, following)
+                    x = level_root(a, i, level, previous, following)
                     left, right = (previous, x) if first else (x, following)
                 if first or last:
                     time += (right - left) * h
-                    area += (integral(a, left, right) - level * (right - left)) * h
+                    area += (integral(a, i, left, right) - level * (right - left)) * h
             previous = following
     return time, area
 
@@ -142,7 +143,7 @@ def glucose_window(s, settle, end, period, levels, out):  # type: ignore[no-unty
     """Write one subject's GLUCOSE_WINDOW columns into out."""
     out[0], out[1] = mean_between(s, settle, end), sd_between(s, settle, end)
     out[2], when, out[3] = extremes(s, settle, end)
-    out[4] = when - settle
+    out[4] = polished(s, when) - settle
     for q in range(levels.shape[0]):
         if levels[q] > out[2]:
             time = 0.0
@@ -174,9 +175,9 @@ def window_rows(start, step_size, coefficients, summaries, n_steps, status, sett
         if status[b] != -1:
             continue
         n = n_steps[b]
-        glucose = scan(start[b, :n], step_size[b, :n], coefficients[b, :n, 0], summaries[b, :n, 0])
+        glucose = scan(start[b, :n], step_size[b, :n], coefficients[b, 0, :n], summaries[b, 0, :n])
         glucose_window(glucose, settle, end, periods[b], levels, out[b])
-        insulin = scan(start[b, :n], step_size[b, :n], coefficients[b, :n, 1], summaries[b, :n, 1])
+        insulin = scan(start[b, :n], step_size[b, :n], coefficients[b, 1, :n], summaries[b, 1, :n])
         insulin_window(insulin, settle, end, out[b, 14:])
 
 
@@ -186,5 +187,5 @@ def column_means(start, step_size, coefficients, summaries, n_steps, status, col
     for b in range(n_steps.shape[0]):
         if status[b] == -1:
             n = n_steps[b]
-            read = scan(start[b, :n], step_size[b, :n], coefficients[b, :n, column], summaries[b, :n, column])
+            read = scan(start[b, :n], step_size[b, :n], coefficients[b, column, :n], summaries[b, column, :n])
             out[b] = mean_between(read, begin, end)

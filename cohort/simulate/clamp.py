@@ -62,7 +62,7 @@ def clamped_courses(body: Body, values: Array, people: People, arm: Arm, seen: t
     capacity = int(arm.duration_min / _MEAN_STEP_MIN) + _SPARE_STEPS + 2 * pieces.stops.shape[1]
     columns, size = len(seen) + 1, free.order + 1
     start, step_size = np.empty((n, capacity)), np.empty((n, capacity))
-    coefficients, summaries = np.empty((n, capacity, columns, size)), np.empty((n, capacity, columns, len(SUMMARY)))
+    coefficients, summaries = np.empty((n, columns, capacity, size)), np.empty((n, columns, capacity, len(SUMMARY)))
     n_steps, status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
     final, dose, off = np.full(x0.shape, np.nan), np.zeros(n), np.zeros(n)
     i = pieces
@@ -119,7 +119,7 @@ def _integrate(  # type: ignore[no-untyped-def]
     begins, settle, start, step_size, coefficients, summaries, n_steps, status, final, dose, off_target,
 ):  # fmt: skip
     n, states = x0.shape
-    columns, size = coefficients.shape[2], coefficients.shape[3]
+    columns, size = coefficients.shape[1], coefficients.shape[3]
     at_inputs = 2 * states + 1
     at_constants = at_inputs + 2 * orders
     sources = (
@@ -198,11 +198,11 @@ def _integrate(  # type: ignore[no-untyped-def]
 def _record(b, i, time, h, result, states, start, step_size, coefficients, summaries):  # type: ignore[no-untyped-def]
     start[b, i], step_size[b, i] = time, h
     at = states + 2
-    for c in range(coefficients.shape[2]):
+    for c in range(coefficients.shape[1]):
         for k in range(coefficients.shape[3]):
-            coefficients[b, i, c, k] = result[at]
+            coefficients[b, c, i, k] = result[at]
             at += 1
-    for c in range(summaries.shape[2]):
+    for c in range(summaries.shape[1]):
         for k in range(summaries.shape[3]):
-            summaries[b, i, c, k] = result[at]
+            summaries[b, c, i, k] = result[at]
             at += 1

@@ -21,8 +21,8 @@ class Courses:
     """Recorded courses of n subjects of one arm.
 
     Step i < n_steps[s] of subject s covers start[s, i] .. start[s, i] + step_size[s, i] (min); there column c is the
-    polynomial with coefficients coefficients[s, i, c, :] in rising powers of x = (t - start) / step_size, 0 <= x <= 1.
-    summaries: float64[n, steps, columns, SUMMARY] (`cohort.model.taylor`). status int64[n]: -1 or an index into
+    polynomial with coefficients coefficients[s, c, i, :] in rising powers of x = (t - start) / step_size, 0 <= x <= 1.
+    summaries: float64[n, columns, steps, SUMMARY] (`cohort.model.taylor`). status int64[n]: -1 or an index into
     FAILURES; final float64[n, states].
     """
 
@@ -45,14 +45,16 @@ class Courses:
     def copied(self, capacity: int) -> Courses:
         """Return the same courses in memory of their own, with room for `capacity` steps."""
 
-        def padded(array: Array) -> Array:
-            out = np.full((array.shape[0], capacity, *array.shape[2:]), np.nan)
-            kept = min(capacity, array.shape[1])
-            out[:, :kept] = array[:, :kept]
+        def padded(array: Array, axis: int) -> Array:
+            shape = (*array.shape[:axis], capacity, *array.shape[axis + 1 :])
+            out = np.full(shape, np.nan)
+            kept = (slice(None),) * axis + (slice(min(capacity, array.shape[axis])),)
+            out[kept] = array[kept]
             return out
 
         return Courses(
-            self.columns, padded(self.start), padded(self.step_size), padded(self.coefficients), padded(self.summaries),
+            self.columns, padded(self.start, 1), padded(self.step_size, 1), padded(self.coefficients, 2),
+            padded(self.summaries, 2),
             self.n_steps.copy(), self.status.copy(), self.final.copy(),
         )  # fmt: skip
 
@@ -67,17 +69,30 @@ class Courses:
 def _sample(start, step_size, coefficients, n_steps, times, out):  # type: ignore[no-untyped-def]
     n, columns, wanted = out.shape
     highest = coefficients.shape[3] - 1
+    x = np.empty(wanted)
     for s in range(n):
-        i = 0
-        for w in range(wanted):
-            t = times[w]
-            while i + 1 < n_steps[s] and start[s, i + 1] <= t:
-                i += 1
-            if n_steps[s] == 0 or t < start[s, 0] or t > start[s, i] + step_size[s, i]:
-                continue
-            x = (t - start[s, i]) / step_size[s, i]
+        w = 0
+        for i in range(n_steps[s]):
+            last = i + 1 == n_steps[s]
+            end = start[s, i] + step_size[s, i] if last else start[s, i + 1]
+            while w < wanted and times[w] < start[s, i]:
+                w += 1
+            first = w
+            while w < wanted and (times[w] < end or (last and times[w] == end)):
+                x[w] = (times[w] - start[s, i]) / step_size[s, i]
+                w += 1
             for c in range(columns):
-                value = coefficients[s, i, c, highest]
-                for k in range(highest - 1, -1, -1):
-                    value = value * x + coefficients[s, i, c, k]
-                out[s, c, w] = value
+                a = coefficients[s, c, i]
+                q = first
+                while q + 4 <= w:  # four times together: their sums do not wait for each other
+                    x0, x1, x2, x3 = x[q], x[q + 1], x[q + 2], x[q + 3]
+                    y0 = y1 = y2 = y3 = a[highest]
+                    for k in range(highest - 1, -1, -1):
+                        y0, y1, y2, y3 = y0 * x0 + a[k], y1 * x1 + a[k], y2 * x2 + a[k], y3 * x3 + a[k]
+                    out[s, c, q], out[s, c, q + 1], out[s, c, q + 2], out[s, c, q + 3] = y0, y1, y2, y3
+                    q += 4
+                for r in range(q, w):
+                    y = a[highest]
+                    for k in range(highest - 1, -1, -1):
+                        y = y * x[r] + a[k]
+                    out[s, c, r] = y

@@ -101,19 +101,18 @@ def integrate(  # type: ignore[no-untyped-def]
 
     x0, inverse_scale, final: float64[n, states]; constants: float64[n, hoisted]; inputs as in
     `cohort.model.inputs.Inputs`; enters: state that each channel enters. Row s = b - begin of the record: start and
-    step_size float64[rows, capacity], coefficients float64[rows, capacity, columns x (order + 1)] and summaries
-    float64[rows, capacity, columns x SUMMARY] of the steps that end after `record_from`; n_steps int64[n];
+    step_size float64[rows, capacity], coefficients float64[rows, columns, capacity, order + 1] and summaries
+    float64[rows, columns, capacity, SUMMARY] of the steps that end after `record_from`; n_steps int64[n];
     status int64[n], DONE or an index into FAILURES; overflow bool[n] where the record was
     too small (the subject must be done again with a larger one).
     """
     states = x0.shape[1]
-    recorded = coefficients.shape[2]
-    summarised = summaries.shape[2]
+    columns, size, marks = coefficients.shape[1], coefficients.shape[3], summaries.shape[3]
     capacity = start.shape[1]
     at_inputs = 2 * states + 1
     at_constants = at_inputs + 2 * orders
     source = np.zeros((at_constants + constants.shape[1], LANES))
-    result = np.zeros((states + 2 + recorded + summarised, LANES))
+    result = np.zeros((states + 2 + columns * (size + marks), LANES))
     subject = np.full(LANES, -1, dtype=np.int64)
     time = np.zeros(LANES)
     stop = np.zeros(LANES, dtype=np.int64)
@@ -170,10 +169,15 @@ def integrate(  # type: ignore[no-untyped-def]
                     if i < capacity:
                         start[s, i] = time[l]
                         step_size[s, i] = h
-                        for j in range(recorded):
-                            coefficients[s, i, j] = result[states + 2 + j, l]
-                        for j in range(summarised):
-                            summaries[s, i, j] = result[states + 2 + recorded + j, l]
+                        at = states + 2
+                        for c in range(columns):
+                            for j in range(size):
+                                coefficients[s, c, i, j] = result[at + j, l]
+                            at += size
+                        for c in range(columns):
+                            for j in range(marks):
+                                summaries[s, c, i, j] = result[at + j, l]
+                            at += marks
                         n_steps[b] = i + 1
                     else:
                         status[b] = OUT_OF_BUDGET

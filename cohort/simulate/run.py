@@ -123,10 +123,10 @@ class _Loop:
     def __init__(self, prepared: Prepared, rows: int, capacity: int) -> None:
         stepper, n = prepared.stepper, prepared.count
         self.prepared = prepared
-        self.shape = (rows, capacity, len(stepper.seen), stepper.order + 1)
+        columns = len(stepper.seen)
         self.start, self.step_size = np.empty((rows, capacity)), np.empty((rows, capacity))
-        self.coefficients = np.empty((rows, capacity, len(stepper.seen) * (stepper.order + 1)))
-        self.summaries = np.empty((rows, capacity, len(stepper.seen) * len(SUMMARY)))
+        self.coefficients = np.empty((rows, columns, capacity, stepper.order + 1))
+        self.summaries = np.empty((rows, columns, capacity, len(SUMMARY)))
         self.n_steps, self.status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
         self.final, self.overflow = np.full(prepared.x0.shape, np.nan), np.zeros(n, np.bool_)
         self.programs = (
@@ -146,8 +146,8 @@ class _Loop:
         )  # fmt: skip
         rows = min(end - begin, len(self.start))
         return Courses(
-            p.stepper.seen, self.start[:rows], self.step_size[:rows], self.coefficients.reshape(self.shape)[:rows],
-            self.summaries.reshape((*self.shape[:3], len(SUMMARY)))[:rows],
+            p.stepper.seen, self.start[:rows], self.step_size[:rows], self.coefficients[:rows],
+            self.summaries[:rows],
             self.n_steps[begin:end], self.status[begin:end], self.final[begin:end],
         )  # fmt: skip
 

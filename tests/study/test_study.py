@@ -159,7 +159,10 @@ def test_the_plan_speaks_and_starts_no_compiler() -> None:
     assert max(map(len, text.splitlines())) <= 80
     row = next(r for r in found.laws if r.parameter == "td")
     assert row.p50 == pytest.approx(36.0) and row.p5 < row.p50 < row.p95
-    code = "import sys; from cohort.study import *; s = load_study(sys.argv[1]); describe(s, plan(s)); print([m for m in ('numba','scipy','pyarrow','dask') if m in sys.modules])"
+    code = (
+        "import sys; from cohort.study import *; s = load_study(sys.argv[1]); describe(s, plan(s)); "
+        "print([m for m in ('numba', 'scipy', 'pyarrow', 'dask') if m in sys.modules])"
+    )
     words = [sys.executable, "-c", code, str(HERE / "contract.toml")]
     assert subprocess.run(words, capture_output=True, text=True, check=True).stdout.strip() == "[]"
 
@@ -301,7 +304,7 @@ def test_all_problems_come_at_once_in_the_files_order() -> None:
 def test_not_utf8_and_missing_files() -> None:
     with pytest.raises(StudyError, match="is not UTF-8 text"):
         study_from(b"seed = 1\n\xff\xfe", HERE / "x.toml")
-    with pytest.raises(StudyError, match="cannot be read: no such file .*did you mean 'contract.toml'"):
+    with pytest.raises(StudyError, match=r"cannot be read: no such file .*did you mean 'contract.toml'"):
         load_study(HERE / "contrat.toml")
 
 
@@ -395,7 +398,7 @@ def test_what_is_legal_but_odd_is_said(text: str, expected: str) -> None:
 
 # ---- properties --------------------------------------------------------------------------------------------------
 
-CHARACTERS = st.sampled_from(list("[]{}=.,'\"#\n 0123456789eE+-_") + ["seed", "arms", "td", "rate", "min", "\\"])
+CHARACTERS = st.sampled_from([*"[]{}=.,'\"#\n 0123456789eE+-_", "seed", "arms", "td", "rate", "min", "\\"])
 
 
 @settings(max_examples=300)
@@ -409,7 +412,7 @@ def test_no_mutation_of_a_study_brings_anything_but_a_study_or_its_problems(data
     try:
         study_from(text.encode(), HERE / "x.toml")
     except StudyError as error:
-        assert error.problems and all(p.message for p in error.problems)
+        assert error.problems and all(p.message for p in error.problems)  # noqa: PT017
 
 
 @settings(max_examples=300)
