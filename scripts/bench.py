@@ -158,7 +158,9 @@ def whole_run(count: int) -> dict[str, Any]:
     with tempfile.TemporaryDirectory() as folder:
         text = study_file.read_text().split("[[arms]]")[0]
         path = Path(folder) / "bench.toml"
-        path.write_text(text + '[[arms]]\nname = "a"\nduration = "48 h"\nglucose = [{ shape = "constant", rate = 216 }]\n')
+        path.write_text(
+            text + '[[arms]]\nname = "a"\nduration = "48 h"\nglucose = [{ shape = "constant", rate = 216 }]\n'
+        )
         for workers in (1, 2):
             study = load_study(path, [f"subjects.count={count}"])
             done = run_study(study, Path(folder) / f"out{workers}", workers, quiet=True)

@@ -122,20 +122,28 @@ def turns_between(s, begin, end):  # type: ignore[no-untyped-def]
     return first, max(np.searchsorted(s.times, end, side="left"), first)
 
 
+EQUAL = 1e-6
+"""Peaks this close to the highest, relatively, count as it: less than that is not promised."""
+
+
 @jit
 def extremes(s, begin, end):  # type: ignore[no-untyped-def]
-    """(highest, its time, lowest) over begin..end, both ends included."""
-    highest = value_at(s, begin)
-    lowest, when = highest, begin
+    """(highest, when it is first reached, lowest) over begin..end, both ends included.
+
+    On a settled rhythm every peak is as high as any other to the last digits: the first within EQUAL of it counts.
+    """
+    at_begin, at_end = value_at(s, begin), value_at(s, end)
+    highest, lowest = max(at_begin, at_end), min(at_begin, at_end)
     first, last = turns_between(s, begin, end)
     for i in range(first, last):
-        if s.values[i] > highest:
-            highest, when = s.values[i], s.times[i]
-        lowest = min(lowest, s.values[i])
-    x = value_at(s, end)
-    if x > highest:
-        highest, when = x, end
-    return highest, when, min(lowest, x)
+        highest, lowest = max(highest, s.values[i]), min(lowest, s.values[i])
+    enough = highest - EQUAL * abs(highest)
+    if at_begin >= enough:
+        return highest, begin, lowest
+    for i in range(first, last):
+        if s.values[i] >= enough:
+            return highest, s.times[i], lowest
+    return highest, end, lowest
 
 
 @jit

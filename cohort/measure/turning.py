@@ -16,6 +16,7 @@ from cohort.compiled import jit
 
 _PARTS = 8
 NEAR = 2e-5
+JUMP = 1e-9
 ROUGHLY = 3e-3
 """How small Newton's last change of x must be: the place is then exact to about its square, a turning point's value to
 that squared again."""
@@ -143,7 +144,9 @@ def turns_in_step(a, summaries, i, found, near):  # type: ignore[no-untyped-def]
             continue
         after = slope(a, i, (part + 1) / _PARTS)
         if before != 0.0 and (before > 0.0) != (after > 0.0):
-            found[count] = _slope_root(a, i, part / _PARTS, (part + 1) / _PARTS, slope(a, i, part / _PARTS), after, near)
+            found[count] = _slope_root(
+                a, i, part / _PARTS, (part + 1) / _PARTS, slope(a, i, part / _PARTS), after, near
+            )
             count += 1
         if after != 0.0:
             before = after
@@ -155,16 +158,21 @@ def turning_points(start, step_size, a, summaries, near, times, values):  # type
     """Write the turning points of one column of one course; return how many.
 
     start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries: float64[steps, SUMMARY]; times, values:
-    room for them; near: NEAR or ROUGHLY. Where an input jumps the slope may change sign between steps: such a corner is one as well.
+    room for them; near: NEAR or ROUGHLY. Where an input jumps the slope may change sign between steps: such a corner is
+    one as well, and where a dose moves the column at once both its values are.
     """
     found = np.empty(_PARTS)
     count = 0
-    last = 0.0
     for i in range(start.shape[0]):
-        if last * a[i, 1] < 0.0 and count < times.shape[0]:
-            times[count], values[count] = start[i], a[i, 0]
-            count += 1
-        last = summaries[i, 0]
+        if i > 0 and count + 1 < times.shape[0]:
+            before = summaries[i - 1, 6]
+            if abs(a[i, 0] - before) > JUMP * (abs(before) + abs(a[i, 0])):
+                times[count], values[count] = start[i], before
+                times[count + 1], values[count + 1] = start[i], a[i, 0]
+                count += 2
+            elif summaries[i - 1, 0] * a[i, 1] < 0.0:
+                times[count], values[count] = start[i], a[i, 0]
+                count += 1
         if abs(a[i, 1]) > summaries[i, 1]:  # most steps; the call would cost more than the answer
             continue
         for r in range(turns_in_step(a, summaries, i, found, near)):

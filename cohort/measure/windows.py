@@ -162,10 +162,37 @@ def glucose_window(s, settle, end, period, levels, out):  # type: ignore[no-unty
 
 
 @jit
-def insulin_window(s, settle, end, out):  # type: ignore[no-untyped-def]
-    """Write one subject's INSULIN_WINDOW columns into out."""
-    out[0] = mean_between(s, settle, end)
-    out[1], _, out[2] = extremes(s, settle, end)
+def insulin_window(start, step_size, a, summaries, settle, end, out):  # type: ignore[no-untyped-def]
+    """Write one subject's INSULIN_WINDOW columns into out: mean, highest, lowest over settle..end.
+
+    Only steps that could hold a new extreme, by how far the column can move within them, are searched for one.
+    """
+    places = np.empty(12)
+    n = start.shape[0]
+    first = max(np.searchsorted(start, settle, side="right") - 1, 0)
+    highest = lowest = value(a, first, (settle - start[first]) / step_size[first])
+    area = 0.0
+    for i in range(first, n):
+        low = max((settle - start[i]) / step_size[i], 0.0)
+        high = min((end - start[i]) / step_size[i], 1.0)
+        if low == 0.0 and high == 1.0:
+            area += summaries[i, 4] * step_size[i]
+            last = summaries[i, 6]
+            highest, lowest = max(highest, a[i, 0]), min(lowest, a[i, 0])  # a dose may have come between
+        elif high > low:
+            area += integral(a, i, low, high) * step_size[i]
+            last = value(a, i, high)
+        else:
+            continue
+        highest, lowest = max(highest, last), min(lowest, last)
+    for i in range(first, n):
+        if a[i, 0] + summaries[i, 3] <= highest and a[i, 0] - summaries[i, 3] >= lowest:
+            continue
+        for r in range(turns_in_step(a, summaries, i, places, ROUGHLY)):
+            if settle < start[i] + places[r] * step_size[i] < end:
+                x = value(a, i, places[r])
+                highest, lowest = max(highest, x), min(lowest, x)
+    out[0], out[1], out[2] = area / (end - settle), highest, lowest
 
 
 @jit
@@ -177,8 +204,8 @@ def window_rows(start, step_size, coefficients, summaries, n_steps, status, sett
         n = n_steps[b]
         glucose = scan(start[b, :n], step_size[b, :n], coefficients[b, 0, :n], summaries[b, 0, :n])
         glucose_window(glucose, settle, end, periods[b], levels, out[b])
-        insulin = scan(start[b, :n], step_size[b, :n], coefficients[b, 1, :n], summaries[b, 1, :n])
-        insulin_window(insulin, settle, end, out[b, 14:])
+        insulin, marks = coefficients[b, 1, :n], summaries[b, 1, :n]
+        insulin_window(start[b, :n], step_size[b, :n], insulin, marks, settle, end, out[b, 14:])
 
 
 @jit

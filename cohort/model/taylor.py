@@ -26,9 +26,9 @@ SHORTEST_STEP_MIN = 1e-7
 LARGEST = 1e6
 """A state beyond this multiple of its scale has left the physical range."""
 
-SUMMARY = ("end_slope", "slope_rest", "bend_rest", "spread", "area", "square")
+SUMMARY = ("end_slope", "slope_rest", "bend_rest", "spread", "area", "square", "end")
 """Of each recorded polynomial a over 0 <= x <= 1: a'(1); sum k |a_k| from k = 2; sum k (k-1) |a_k| from k = 3;
-sum |a_k| from k = 1; the integral of a; the integral of (a - a_0)^2 without products beyond order + 2."""
+sum |a_k| from k = 1; the integral of a; the integral of (a - a_0)^2 without products beyond order + 2; a(1)."""
 
 ZERO, ONE = Symbol("const", value=0.0), Symbol("const", value=1.0)
 
@@ -348,7 +348,7 @@ class Stepper:
 
     def _summary(self, b: Builder, a: Sequence[int]) -> list[int]:
         end_slope, slope_rest, bend_rest, spread = a[1], b.constant(0.0), b.constant(0.0), b.absolute(a[1])
-        area = b.fma(b.constant(0.5), a[1], a[0])
+        area, end = b.fma(b.constant(0.5), a[1], a[0]), a[len(a) - 1]
         for k in range(2, len(a)):
             size = b.absolute(a[k])
             end_slope = b.fma(b.constant(float(k)), a[k], end_slope)
@@ -366,7 +366,9 @@ class Stepper:
             if m % 2 == 0:
                 half = b.fma(a[m // 2], a[m // 2], half)
             square = b.fma(b.constant(1.0 / (m + 1)), half, square)
-        return [end_slope, slope_rest, bend_rest, spread, area, square]
+        for k in range(len(a) - 2, -1, -1):
+            end = b.add(end, a[k])
+        return [end_slope, slope_rest, bend_rest, spread, area, square, end]
 
     def _step_size(self, b: Builder, recurrences: Recurrences, states: Sequence[Series], left: int) -> int:
         """min over the last two orders k of (tolerance / |x_k|)^(1/k), x in units of its scale, at most to the stop."""
