@@ -31,8 +31,9 @@ from numba.extending import intrinsic
 
 from cohort.program import Program
 
-LANES = 4
-"""How many subjects one vector holds. More than this runs out of registers on common processors."""
+LANES = 8 if llvm.get_host_cpu_features().get("avx512f", False) else 4
+"""How many subjects one vector holds: eight where the processor has 32 wide registers, else four; more would not fit
+the registers. A subject's bits do not depend on it."""
 
 _I64 = ir.IntType(64)
 _F64 = ir.DoubleType()
@@ -60,7 +61,7 @@ def _cache_parent() -> Path | None:
     if stated:
         return Path(stated)
     home = os.environ.get("HOME")
-    return Path(home) / ".cache" if home else None
+    return Path(home) / ".cache" if home and Path(home).is_dir() else None
 
 
 def _is_private(folder: Path) -> bool:
@@ -212,18 +213,23 @@ _LOADED: dict[tuple[str, int], tuple[int, Any]] = {}
 def compile_program(program: Program, lanes: int = 1) -> int:
     """Return the address of `void f(const double *inputs, double *outputs)`, value i of lane l at [i * lanes + l]."""
     key = (program.key, lanes)
-    if key in _LOADED:
-        return _LOADED[key][0]
-    with global_compiler_lock:  # LLVM is not for two threads at once
-        _start_llvm()
-        empty = llvm.parse_assembly("")
-        empty.triple = llvm.get_process_triple()
-        machine = llvm.Target.from_triple(empty.triple).create_target_machine()
-        engine = llvm.create_mcjit_compiler(empty, machine)
-        engine.add_object_file(llvm.ObjectFileRef.from_data(_machine_code(program, lanes)))
-        engine.finalize_object()
-        _LOADED[key] = (engine.get_function_address("program"), engine)
+    if key not in _LOADED:
+        with global_compiler_lock:  # LLVM is not for two threads at once
+            if key not in _LOADED:  # a second load would free the code that the first thread is running
+                _LOADED[key] = _load(program, lanes)
     return _LOADED[key][0]
+
+
+def _load(program: Program, lanes: int) -> tuple[int, Any]:
+    """Machine code in memory: its address, and the engine that keeps it there."""
+    _start_llvm()
+    empty = llvm.parse_assembly("")
+    empty.triple = llvm.get_process_triple()
+    machine = llvm.Target.from_triple(empty.triple).create_target_machine()
+    engine = llvm.create_mcjit_compiler(empty, machine)
+    engine.add_object_file(llvm.ObjectFileRef.from_data(_machine_code(program, lanes)))
+    engine.finalize_object()
+    return engine.get_function_address("program"), engine
 
 
 @intrinsic  # type: ignore[untyped-decorator]
@@ -242,6 +248,20 @@ def call_program(typing: Any, address: Any, inputs: Any, outputs: Any) -> Any:  
         return context.get_dummy_value()
 
     return types.void(types.int64, inputs, outputs), generate
+
+
+@intrinsic  # type: ignore[untyped-decorator]
+def fma(typing: Any, a: Any, b: Any, c: Any) -> Any:  # noqa: ARG001 - numba's signature
+    """Inside `jit` code: a b + c with one rounding, on doubles."""
+
+    def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        reals = [
+            context.cast(builder, value, kind, types.float64)
+            for value, kind in zip(arguments, signature.args, strict=True)
+        ]
+        return builder.fma(*reals)
+
+    return types.float64(a, b, c), generate
 
 
 def run_compiled(program: Program, inputs: Any, outputs: Any, lanes: int = 1) -> None:

@@ -11,6 +11,7 @@ from cohort.errors import Problem, StudyError
 from cohort.model.body import Body, body
 from cohort.model.inputs import People, inputs
 from cohort.model.protocol import Arm
+from cohort.model.taylor import ORDER, TOLERANCE
 from cohort.population import draw
 from cohort.simulate.engine import DONE
 from cohort.simulate.run import assemble, courses, start_states, typical, with_secretion
@@ -89,7 +90,7 @@ def _errors(found: Body, own: Array, people: People, arm: Arm) -> Array:
 
 def _glucose(found: Body, own: Array, people: People, arm: Arm, accuracy: tuple[int, float] | tuple[()]) -> Array:
     pieces = inputs(arm, people)
-    stepper = found.stepper(SEEN, pieces.steady, *accuracy)
+    stepper = found.stepper(SEEN, pieces.steady, *(accuracy or (ORDER, TOLERANCE)), summarised=False)
     x0 = start_states(found, own, people, arm)
     prepared = assemble(stepper, with_secretion(own, arm.secretion), x0, typical(found), pieces, found.enters)
     grid = np.arange(0.0, arm.duration_min + 0.5 * EVERY_MIN, EVERY_MIN)

@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from cohort.compiled import jit
+from cohort.compiled import fma, jit
 
 _PARTS = 8
 NEAR = 2e-5
@@ -27,7 +27,7 @@ def value(a, i, x):  # type: ignore[no-untyped-def]
     """The polynomial with coefficients a at x."""
     total = a[i, a.shape[1] - 1]
     for k in range(a.shape[1] - 2, -1, -1):
-        total = total * x + a[i, k]
+        total = fma(total, x, a[i, k])
     return total
 
 
@@ -37,7 +37,7 @@ def slope(a, i, x):  # type: ignore[no-untyped-def]
     n = a.shape[1] - 1
     total = n * a[i, n]
     for k in range(n - 1, 0, -1):
-        total = total * x + k * a[i, k]
+        total = fma(total, x, k * a[i, k])
     return total
 
 
@@ -60,8 +60,8 @@ def slope_and_bend(a, i, x):  # type: ignore[no-untyped-def]
     first = n * a[i, n]
     second = 0.0
     for k in range(n - 1, 0, -1):
-        second = second * x + first
-        first = first * x + k * a[i, k]
+        second = fma(second, x, first)
+        first = fma(first, x, k * a[i, k])
     return first, second
 
 
@@ -70,8 +70,8 @@ def _value_and_slope(a, i, x):  # type: ignore[no-untyped-def]
     total = a[i, a.shape[1] - 1]
     first = 0.0
     for k in range(a.shape[1] - 2, -1, -1):
-        first = first * x + total
-        total = total * x + a[i, k]
+        first = fma(first, x, total)
+        total = fma(total, x, a[i, k])
     return total, first
 
 

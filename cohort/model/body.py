@@ -32,9 +32,16 @@ class Body:
         return (*self.card.parameters, *ARM_PARAMETERS)
 
     @functools.cache  # noqa: B019 - bodies live as long as the process
-    def stepper(self, seen: tuple[str, ...], steady: bool, order: int = ORDER, tolerance: float = TOLERANCE) -> Stepper:
+    def stepper(
+        self,
+        seen: tuple[str, ...],
+        steady: bool,
+        order: int = ORDER,
+        tolerance: float = TOLERANCE,
+        summarised: bool = True,
+    ) -> Stepper:
         """One Taylor step that records the `seen` columns; `steady` where the inputs are constant within a step."""
-        return Stepper(self.traced, seen, steady, order, tolerance, self.card.positive)
+        return Stepper(self.traced, seen, steady, order, tolerance, positive=self.card.positive, summarised=summarised)
 
     @cached_property
     def rates(self) -> Program:

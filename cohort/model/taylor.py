@@ -273,7 +273,8 @@ class Stepper:
           outputs x after the step[n], step, health (1 where all is well), coefficients[seen][order + 1],
           summaries[seen][SUMMARY].
     Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`. Coefficients are of
-    powers of (time since the step began) / step. The first `watched` states set the step size and the health.
+    powers of (time since the step began) / step. The first `watched` states set the step size and the health. Summaries
+    are what measures need; who only samples leaves them out.
     """
 
     traced: Traced
@@ -283,6 +284,7 @@ class Stepper:
     tolerance: float = TOLERANCE
     positive: bool = True
     watched: int | None = None
+    summarised: bool = True
 
     @cached_property
     def _affine(self) -> tuple[dict[str, Affine], dict[str, Affine]]:
@@ -343,7 +345,8 @@ class Stepper:
             builder.mul(recurrences.affine(observed[c], k), powers[k]) for c in self.seen for k in range(self.order + 1)
         ]
         size = self.order + 1
-        summaries = [self._summary(builder, seen[c * size : (c + 1) * size]) for c in range(len(self.seen))]
+        columns = range(len(self.seen)) if self.summarised else ()
+        summaries = [self._summary(builder, seen[c * size : (c + 1) * size]) for c in columns]
         return builder.finish([*after, h, health, *seen, *(x for row in summaries for x in row)])
 
     def _summary(self, b: Builder, a: Sequence[int]) -> list[int]:

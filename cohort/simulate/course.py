@@ -11,7 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.compiled import jit
+from cohort.compiled import fma, jit
 
 Array = NDArray[np.float64]
 
@@ -58,9 +58,13 @@ class Courses:
             self.n_steps.copy(), self.status.copy(), self.final.copy(),
         )  # fmt: skip
 
-    def sample(self, times_min: Array) -> Array:
-        """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded."""
-        out = np.full((len(self.n_steps), len(self.columns), len(times_min)), np.nan)
+    def sample(self, times_min: Array, out: Array | None = None) -> Array:
+        """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded.
+
+        `out`, where given, is filled and returned instead of a new array; places outside keep what they held.
+        """
+        if out is None:
+            out = np.full((len(self.n_steps), len(self.columns), len(times_min)), np.nan)
         _sample(self.start, self.step_size, self.coefficients, self.n_steps, np.asarray(times_min, float), out)
         return out
 
@@ -77,22 +81,28 @@ def _sample(start, step_size, coefficients, n_steps, times, out):  # type: ignor
             end = start[s, i] + step_size[s, i] if last else start[s, i + 1]
             while w < wanted and times[w] < start[s, i]:
                 w += 1
-            first = w
+            first, inverse = w, 1.0 / step_size[s, i]
             while w < wanted and (times[w] < end or (last and times[w] == end)):
-                x[w] = (times[w] - start[s, i]) / step_size[s, i]
+                x[w] = (times[w] - start[s, i]) * inverse
                 w += 1
-            for c in range(columns):
-                a = coefficients[s, c, i]
+            # four times of two columns together: eight sums that do not wait for each other
+            for c in range(0, columns, 2):
+                d = min(c + 1, columns - 1)
+                a, b = coefficients[s, c, i], coefficients[s, d, i]
                 q = first
-                while q + 4 <= w:  # four times together: their sums do not wait for each other
+                while q < w and w - first >= 4:
+                    q = min(q, w - 4)
                     x0, x1, x2, x3 = x[q], x[q + 1], x[q + 2], x[q + 3]
                     y0 = y1 = y2 = y3 = a[highest]
+                    z0 = z1 = z2 = z3 = b[highest]
                     for k in range(highest - 1, -1, -1):
-                        y0, y1, y2, y3 = y0 * x0 + a[k], y1 * x1 + a[k], y2 * x2 + a[k], y3 * x3 + a[k]
+                        y0, y1, y2, y3 = fma(y0, x0, a[k]), fma(y1, x1, a[k]), fma(y2, x2, a[k]), fma(y3, x3, a[k])
+                        z0, z1, z2, z3 = fma(z0, x0, b[k]), fma(z1, x1, b[k]), fma(z2, x2, b[k]), fma(z3, x3, b[k])
                     out[s, c, q], out[s, c, q + 1], out[s, c, q + 2], out[s, c, q + 3] = y0, y1, y2, y3
+                    out[s, d, q], out[s, d, q + 1], out[s, d, q + 2], out[s, d, q + 3] = z0, z1, z2, z3
                     q += 4
                 for r in range(q, w):
-                    y = a[highest]
+                    y, z = a[highest], b[highest]
                     for k in range(highest - 1, -1, -1):
-                        y = y * x[r] + a[k]
-                    out[s, c, r] = y
+                        y, z = fma(y, x[r], a[k]), fma(z, x[r], b[k])
+                    out[s, c, r], out[s, d, r] = y, z

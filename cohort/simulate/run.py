@@ -19,7 +19,7 @@ from cohort.simulate.engine import OUT_OF_BUDGET, elementary, integrate
 
 Array = NDArray[np.float64]
 
-BLOCK = 64
+BLOCK = 128
 """Subjects whose courses are in memory together: enough to keep every lane busy, few enough for the cache."""
 
 _MEAN_STEP_MIN = 3.5
@@ -69,12 +69,16 @@ def start_states(body: Body, values: Array, people: People, arm: Arm) -> Array:
     return at_rest(body, with_secretion(values, 1.0), np.zeros(n), np.zeros(n)).states
 
 
-def prepare(body: Body, values: Array, people: People, arm: Arm, seen: tuple[str, ...]) -> Prepared:
+def prepare(
+    body: Body, values: Array, people: People, arm: Arm, seen: tuple[str, ...], summarised: bool = True
+) -> Prepared:
     """Gather what `courses` needs. values: float64[n, len(card.parameters)] in canonical order."""
     pieces = inputs(arm, people)
     x0 = start_states(body, values, people, arm)
     parameters = with_secretion(values, arm.secretion)
-    return assemble(body.stepper(seen, pieces.steady), parameters, x0, typical(body), pieces, body.enters)
+    return assemble(
+        body.stepper(seen, pieces.steady, summarised=summarised), parameters, x0, typical(body), pieces, body.enters
+    )
 
 
 def typical(body: Body) -> Array:
@@ -126,7 +130,7 @@ class _Loop:
         columns = len(stepper.seen)
         self.start, self.step_size = np.empty((rows, capacity)), np.empty((rows, capacity))
         self.coefficients = np.empty((rows, columns, capacity, stepper.order + 1))
-        self.summaries = np.empty((rows, columns, capacity, len(SUMMARY)))
+        self.summaries = np.empty((rows, columns, capacity, len(SUMMARY) if stepper.summarised else 0))
         self.n_steps, self.status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
         self.final, self.overflow = np.full(prepared.x0.shape, np.nan), np.zeros(n, np.bool_)
         self.programs = (

@@ -87,8 +87,8 @@ def test_the_compiled_step_is_its_plain_twin_bit_for_bit() -> None:
     states = len(BODY.card.states)
     assert result[states] == found.step_size[0, 0]
     size = len(SEEN) * (prepared.stepper.order + 1)
-    np.testing.assert_array_equal(found.coefficients[0, 0].ravel(), result[states + 2 : states + 2 + size])
-    np.testing.assert_array_equal(found.summaries[0, 0].ravel(), result[states + 2 + size :])
+    np.testing.assert_array_equal(found.coefficients[0, :, 0].ravel(), result[states + 2 : states + 2 + size])
+    np.testing.assert_array_equal(found.summaries[0, :, 0].ravel(), result[states + 2 + size :])
 
 
 def test_more_lanes_than_subjects_is_fine() -> None:
