@@ -1,0 +1,77 @@
+"""README is held to what the code does: its examples run, its tables match, its studies give the stated answers."""
+
+import re
+import subprocess
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from cohort.execute.run import run_study
+from cohort.report.summary import rebuild
+from cohort.study import load_study
+from cohort.tables import numbers
+
+ROOT = Path(__file__).resolve().parents[2]
+README = (ROOT / "README.md").read_text()
+
+
+def test_the_table_of_keys_is_the_codes() -> None:
+    made = subprocess.run([sys.executable, ROOT / "scripts" / "keys.py"], capture_output=True, text=True, check=True)
+    assert made.stdout.strip() in README, "python3 scripts/keys.py prints what README should hold"
+
+
+def test_the_study_read_line_by_line_is_the_shipped_one() -> None:
+    def bare(text: str) -> list[str]:
+        lines = (re.sub(r"\s+#.*", "", line).rstrip() for line in text.splitlines())
+        return [line for line in lines if line and not line.startswith("#")]
+
+    block = re.search(r"```toml\n(.*?)```", README, re.DOTALL)
+    assert block is not None
+    assert bare(block[1]) == bare((ROOT / "studies" / "steady-infusion.toml").read_text())
+
+
+def test_python_examples_run(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    blocks = re.findall(r"```python\n(.*?)```", README, re.DOTALL)
+    assert len(blocks) == 2
+    (tmp_path / "studies").symlink_to(ROOT / "studies")
+    monkeypatch.chdir(tmp_path)
+    names: dict[str, object] = {}
+    for block in blocks:
+        exec(block, names)
+    assert names["course"].sample([0.0]).shape == (3, 4, 1)  # type: ignore[attr-defined]
+
+
+ROWS = re.findall(r"(?m)^\| ([a-z-]+) \| [^|]+\? \| ([^|]+) \|$", README)
+PROMISE = re.compile(r"`([^`]+)`: (?:(oscillates) ([\d.]+)-([\d.]+) %|median (\w+) ([\d.]+)-([\d.]+))")
+
+
+def test_every_study_that_ships_is_in_the_table() -> None:
+    assert {name for name, _ in ROWS} == {path.stem for path in (ROOT / "studies").glob("*.toml")}
+
+
+@pytest.mark.parametrize(("name", "expected"), ROWS, ids=[name for name, _ in ROWS])
+def test_a_shipped_study_gives_its_stated_answer(name: str, expected: str, tmp_path: Path) -> None:
+    fewer = [] if name == "from-a-table" else ["subjects.count=768"]
+    study = load_study(ROOT / "studies" / f"{name}.toml", [*fewer, "output.time_courses=2"])
+    run_study(study, tmp_path / "out", quiet=True)
+    results, summary = rebuild(tmp_path / "out")
+    promises = PROMISE.findall(expected)
+    assert len(promises) == expected.count("`") // 2
+    for arm, oscillates, low, high, column, least, most in promises:
+        if oscillates:
+            counted = summary["arms"][arm]["strata"]["everyone"]["oscillates"]
+            assert counted["high"] * 100 >= float(low) and counted["low"] * 100 <= float(high), (arm, counted)
+        else:
+            middle = np.nanmedian(numbers(results.outcomes(arm), column))
+            assert float(least) <= middle <= float(most), (arm, column, middle)
+
+
+def test_commands_named_are_the_ones_there_are() -> None:
+    said = subprocess.run(
+        [sys.executable, "-m", "cohort", "--help"], capture_output=True, text=True, check=True, cwd=ROOT
+    )
+    there = set(re.findall(r"(?m)^    ([a-z]+) ", said.stdout))
+    assert set(re.findall(r"`cohort ([a-z]+)", README)) <= there
+    assert there <= set(re.findall(r"(?m)^\| `cohort ([a-z]+)", README))
