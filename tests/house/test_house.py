@@ -23,6 +23,7 @@ MAY_IMPORT: dict[str, set[str]] = {
     "simulate": {"errors", "quantities", "program", "compiled", "model"},
     "measure": {"errors", "quantities", "program", "compiled", "model", "simulate"},
     "population": {"errors", "quantities"},
+    "observe": {"errors", "quantities", "compiled", "measure", "population"},
     "infer": {"errors", "quantities"},
     "study": {"errors", "quantities", "program", "model", "population", "tables"},
     "execute": {*FOUNDATION, "model", "simulate", "measure", "population", "infer", "study"},
