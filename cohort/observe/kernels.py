@@ -412,6 +412,22 @@ def pulses(y, swing):  # type: ignore[no-untyped-def]
 
 
 @jit
+def detrended(y, present):  # type: ignore[no-untyped-def]
+    """The evenly spaced samples present about their own least-squares quadratic; 0 where missing."""
+    n = y.size
+    work = np.zeros((n, TREND))
+    out = np.zeros(n)
+    for i in range(n):
+        if present[i]:
+            x = 2.0 * i / (n - 1.0) - 1.0
+            work[i, 0], work[i, 1], work[i, 2] = 1.0, x, x * x
+            out[i] = y[i]
+    _orthonormal(work, 0)
+    _remove(out, work)
+    return out
+
+
+@jit
 def correlogram(y, present, first, last):  # type: ignore[no-untyped-def]
     """The highest local maximum of the autocorrelation of y (evenly spaced, detrended) at lags first..last.
 
