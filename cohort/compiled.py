@@ -43,17 +43,25 @@ _ROUNDER = 6755399441055744.0
 # ---- where compiled code is kept ---------------------------------------------------------------------------------
 
 
-@functools.cache
-def kernel_identity() -> str:
-    """A digest of every source in the package that numbers can depend on, and of the compilers' versions."""
+def _digest_of(rooms: tuple[str, ...]) -> str:
     digest = hashlib.blake2b(digest_size=16)
     root = Path(__file__).parent
-    names = [root / "program.py", root / "compiled.py"]
-    for room in ("model", "simulate", "measure", "observe", "population"):
-        names += sorted((root / room).rglob("*.py"))
-    for path in names:
-        digest.update(path.relative_to(root).as_posix().encode() + b"\0" + path.read_bytes())
+    for room in rooms:
+        place = root / room
+        for path in sorted(place.rglob("*.py")) if place.is_dir() else [place]:
+            digest.update(path.relative_to(root).as_posix().encode() + b"\0" + path.read_bytes())
     return digest.hexdigest()
+
+
+@functools.cache
+def kernel_identity() -> str:
+    """A digest of every source that a subject's numbers can depend on."""
+    return _digest_of(("program.py", "compiled.py", "model", "simulate", "measure", "population"))
+
+
+@functools.cache
+def _all_kernels() -> str:
+    return _digest_of(("program.py", "compiled.py", "model", "simulate", "measure", "observe"))
 
 
 def _cache_parent() -> Path | None:
@@ -76,7 +84,7 @@ def cache_folder() -> Path | None:
     if parent is None:
         return None
     versions = f"{sys.version_info[:2]}{numba.__version__}{llvmlite.__version__}{_cpu()}{platform.machine()}"
-    key = hashlib.blake2b((kernel_identity() + versions).encode(), digest_size=12).hexdigest()
+    key = hashlib.blake2b((_all_kernels() + versions).encode(), digest_size=12).hexdigest()
     folder = parent / "ultradian-cohort" / key
     try:
         folder.parent.mkdir(mode=0o700, parents=True, exist_ok=True)

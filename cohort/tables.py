@@ -10,7 +10,7 @@ from __future__ import annotations
 import hashlib
 import io
 import os
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -190,17 +190,25 @@ def write_bytes(path: Path, data: bytes) -> None:
         os.close(folder)
 
 
-def verify_part(path: Path, stamp: Stamp) -> bool:
-    """Whether the part exists, is readable, carries this stamp, and holds the values its digest was made of."""
+def verify_part(path: Path, schema: Schema, stamp: Stamp) -> bool:
+    """Whether the part can be trusted: readable, of this schema and stamp, its values those its digest was made of, and,
+    where this very writer made it, its bytes those that writing it again gives (statistics and padding too)."""
     try:
-        table = pq.read_table(path, use_threads=False)
+        data = path.read_bytes()
+        table = pq.read_table(pa.BufferReader(data), use_threads=False)
+        writer = pq.ParquetFile(pa.BufferReader(data)).metadata.created_by
     except (OSError, pa.ArrowException, ValueError):
+        return False
+    if not table.schema.remove_metadata().equals(schema.arrow, check_metadata=True):
         return False
     marks = table.schema.metadata or {}
     expected = {b"identity": stamp.identity, b"first": str(stamp.first), b"last": str(stamp.last)}
     if any(marks.get(key, b"").decode(errors="replace") != value for key, value in expected.items()):
         return False
-    return bool(marks.get(b"format") == FORMAT and marks.get(b"digest", b"").decode() == digest(table))
+    if marks.get(b"format") != FORMAT or marks.get(b"digest", b"").decode(errors="replace") != digest(table):
+        return False
+    again = _parquet(table)
+    return again == data or pq.ParquetFile(pa.BufferReader(again)).metadata.created_by != writer
 
 
 def part_name(number: int) -> str:
@@ -223,11 +231,14 @@ def read_parts(folder: Path, columns: Sequence[str] | None = None) -> pa.Table:
     return pa.concat_tables([t.replace_schema_metadata(None) for t in tables])
 
 
-def iter_parts(folder: Path, columns: Sequence[str]) -> Iterable[pa.Table]:
-    """The parts of a table one by one, with the chosen columns that they have."""
-    for path in part_paths(folder):
+def read_part(folder: Path, number: int, columns: Sequence[str]) -> pa.Table:
+    """One part of a table, with the chosen columns that it has. Raises ValueError where it cannot be read."""
+    path = folder / part_name(number)
+    try:
         known = set(pq.read_schema(path).names)
-        yield pq.read_table(path, columns=[c for c in columns if c in known], use_threads=False)
+        return pq.read_table(path, columns=[c for c in columns if c in known], use_threads=False)
+    except (OSError, pa.ArrowException) as error:
+        raise ValueError(f"{path}: {str(error).splitlines()[0]}") from None
 
 
 def read_table(path: Path) -> pa.Table:

@@ -14,7 +14,10 @@ from cohort.compiled import kernel_identity
 from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
 from cohort.population.laws import Empirical
+from cohort.quantities import CLAMP_OUTCOMES, COURSE_COLUMNS, CYCLE_OUTCOMES, MEAL_OUTCOMES, WINDOW_OUTCOMES
 from cohort.study import Study
+
+COLUMNS = (CYCLE_OUTCOMES, WINDOW_OUTCOMES, CLAMP_OUTCOMES, MEAL_OUTCOMES, COURSE_COLUMNS)
 
 GROWING = ("subjects.count",)
 """Keys that may grow in a folder that holds results; arms may be added."""
@@ -53,18 +56,27 @@ def subjects_identity(study: Study) -> str:
 
 def arm_identity(study: Study, arm: Arm, table: str) -> str:
     """Of an arm's table: its subjects, the protocol, kernels and accuracy. Other arms are not in it."""
-    return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE])
+    return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE, plain(COLUMNS)])
 
 
-def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: set[str]) -> str | None:
-    """The first key of two studies' settings that differs and may not, or None. `arms`: names that were there before."""
+def _arm_of(key: str, settings: Mapping[str, str]) -> str:
+    """The name of the arm a key belongs to; names may hold dots, so the arms' own name keys decide."""
+    names = [value for k, value in settings.items() if k.startswith("arms.") and k == f"arms.{value}.name"]
+    return max((name for name in names if key.startswith(f"arms.{name}.")), key=len, default="")
+
+
+def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: set[str], draw: str) -> str | None:
+    """The first key of two studies' settings that differs and may not, or None.
+
+    arms: names that were there before; draw: how people are drawn (a Latin hypercube cannot grow).
+    """
     for key in dict.fromkeys((*before, *now)):
         if key.startswith(UNSEEN) or before.get(key) == now.get(key):
             continue
-        if key in GROWING and int(now.get(key, 0)) >= int(before.get(key, 0)):
+        grown = key in GROWING and int(now.get(key, 0)) >= int(before.get(key, 0))
+        if grown and draw != "latin-hypercube":
             continue
-        new_arm = key.startswith("arms.") and not any(key.startswith(f"arms.{name}.") for name in arms)
-        if new_arm and key not in before:
+        if key.startswith("arms.") and key not in before and _arm_of(key, now) not in arms:
             continue
         return key
     return None

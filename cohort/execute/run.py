@@ -21,7 +21,7 @@ from cohort.execute.courses import keep_courses
 from cohort.execute.facts import arm_facts
 from cohort.execute.identity import arm_identity, first_difference, subjects_identity
 from cohort.execute.progress import Progress
-from cohort.execute.shards import Work, commit, missing, strays
+from cohort.execute.shards import Work, commit, missing, shards, strays
 from cohort.execute.stages import rows
 from cohort.study import Study, plan
 from cohort.study.plan import SHARD
@@ -54,24 +54,35 @@ def run_study(
         raise RunError(f"{out}: cannot be made: {_why(error)}") from None
     with _locked(out), _terminable():
         before = _check_folder(study, out)
-        record = _record(study, workers, before)
-        _write_record(out, record, "running")
-        try:
+        record = _record(study, workers, shard_size, before)
+        with _recorded(out, record):
+            _write_record(out, record, "running")
             for path in strays(study, out, shard_size):
                 path.unlink()
             done, kept = _simulate(study, out, workers, shard_size, quiet)
             keep_courses(study, out)
-        except KeyboardInterrupt:
-            _write_record(out, record, "interrupted")
-            raise
-        except OSError as error:
-            with contextlib.suppress(OSError):
-                _write_record(out, record, "stopped")
-            raise RunError(f"{out}: {_why(error)}; what was finished is kept, run again to carry on") from None
-        seconds = time.monotonic() - began
-        record["timings"] = {"seconds": round(seconds, 3), "runs": done}
-        _write_record(out, record, "done")
+            seconds = time.monotonic() - began
+            record["timings"] = {"seconds": round(seconds, 3), "runs": done}
+            _write_record(out, record, "done")
     return Finished(out, done, kept, seconds)
+
+
+@contextlib.contextmanager
+def _recorded(out: Path, record: Mapping[str, Any]) -> Iterator[None]:
+    """Whatever ends a run, its record says so as far as the disk allows, and a user reads one line."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        with contextlib.suppress(OSError):
+            _write_record(out, record, "interrupted")
+        raise
+    except Exception as error:
+        with contextlib.suppress(OSError):
+            _write_record(out, record, "stopped")
+        if isinstance(error, StudyError):
+            raise
+        why = _why(error) if isinstance(error, OSError) else f"{type(error).__name__}: {error}"
+        raise RunError(f"{out}: {why}; what was finished is kept, run again to carry on") from error
 
 
 def _why(error: OSError) -> str:
@@ -111,6 +122,8 @@ def _windows(left: Sequence[Work]) -> Iterator[list[Work]]:
 
 def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, progress: Progress | None) -> None:
     """One graph: a task a sub-batch, and for each shard one that writes its parts when the last is home."""
+    from concurrent.futures import ThreadPoolExecutor
+
     from dask.threaded import get
 
     stop = threading.Event()
@@ -124,6 +137,8 @@ def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, p
         return found
 
     def write(work_index: int, *pieces: dict[str, Any]) -> int:
+        if stop.is_set():
+            raise KeyboardInterrupt
         return commit(study, out, window[work_index], pieces)
 
     graph: dict[Any, Any] = {}
@@ -136,11 +151,12 @@ def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, p
             keys.append(key)
         graph[f"shard-{work.shard.number}"] = (write, i, *keys)
         ends.append(f"shard-{work.shard.number}")
-    try:
-        get(graph, ends, num_workers=workers)
-    except KeyboardInterrupt:
-        stop.set()
-        raise
+    with ThreadPoolExecutor(workers) as pool:  # its end waits: no thread writes once the folder is let go
+        try:
+            get(graph, ends, pool=pool)
+        except BaseException:
+            stop.set()
+            raise
 
 
 # ---- the folder --------------------------------------------------------------------------------------------------
@@ -152,7 +168,18 @@ def _locked(out: Path) -> Iterator[None]:
     run holds it."""
     import fcntl
 
-    with (out / ".lock").open("a+") as file:
+    path = out / "run.json"
+    if not path.exists():
+        other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
+        if other:
+            raise StudyError(
+                [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
+            )
+    try:
+        opened = (out / ".lock").open("a+")
+    except OSError as error:
+        raise RunError(f"{out}: {_why(error)}") from None
+    with opened as file:
         try:
             fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except OSError:
@@ -199,7 +226,7 @@ def _check_folder(study: Study, out: Path) -> dict[str, Any]:
         identities = before["identities"]
     except (ValueError, KeyError, TypeError, OSError):
         raise StudyError([Problem("", "is not a run's record; name another folder with --out", str(path))]) from None
-    changed = first_difference(settings, study.settings, arms)
+    changed = first_difference(settings, study.settings, arms, study.recipe.draw)
     if changed:
         raise StudyError([_refusal(changed, settings, study.settings, out)])
     if identities["subjects"] != subjects_identity(study) or any(
@@ -219,7 +246,7 @@ def _refusal(key: str, before: Mapping[str, str], now: Mapping[str, str], out: P
                    "folder with --out, or put it back")  # fmt: skip
 
 
-def _record(study: Study, workers: int, before: Mapping[str, Any]) -> dict[str, Any]:
+def _record(study: Study, workers: int, shard_size: int, before: Mapping[str, Any]) -> dict[str, Any]:
     texts = [t for t in before.get("study_texts", []) if t != study.text.decode("utf-8", "replace")]
     found = plan(study, workers)
     return {
@@ -227,6 +254,7 @@ def _record(study: Study, workers: int, before: Mapping[str, Any]) -> dict[str, 
         "model": study.model,
         "seed": study.seed,
         "count": study.recipe.count,
+        "shards": len(shards(study.recipe.count, shard_size)),
         "draw": study.recipe.draw if study.recipe.table is None else "table",
         "arms": [arm.name for arm in study.arms],
         "strata": list(study.recipe.stratum_names),
@@ -254,5 +282,6 @@ def _versions() -> dict[str, str]:
 
 
 def _write_record(out: Path, record: Mapping[str, Any], state: str) -> None:
-    write_bytes(out / "study.toml", record["study_texts"][-1].encode())
+    """run.json first: a folder that has it can be carried on, whatever else is missing."""
     write_bytes(out / "run.json", (json.dumps({**record, "state": state}, indent=2) + "\n").encode())
+    write_bytes(out / "study.toml", record["study_texts"][-1].encode())

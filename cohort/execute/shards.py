@@ -61,7 +61,7 @@ def missing(study: Study, out: Path, size: int = SHARD) -> list[Work]:
         absent = tuple(
             table
             for table in tables(study)
-            if not verify_part(out / table.folder / part_name(shard.number), stamp(study, table, shard))
+            if not verify_part(out / table.folder / part_name(shard.number), table.schema, stamp(study, table, shard))
         )
         if absent:
             found.append(Work(shard, absent))

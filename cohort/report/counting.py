@@ -13,7 +13,7 @@ from cohort.infer.counts import Share, share, share_of_scrambles
 from cohort.population.designs import SCRAMBLES
 from cohort.quantities import REGIMES
 from cohort.report.results import Results
-from cohort.tables import INCIDENCE, iter_parts, write_table
+from cohort.tables import INCIDENCE, read_part, write_table
 
 EVERYONE = "everyone"
 OSCILLATES = "oscillates"
@@ -36,9 +36,9 @@ def regime_counts(results: Results, arm: str) -> NDArray[np.int64]:
     counts those without one (no steady input)."""
     strata, scrambles = results.record["strata"], SCRAMBLES if results.record["draw"] == "sobol" else 1
     counts = np.zeros((len(strata), scrambles, len(REGIMES) + 1), np.int64)
-    people = iter_parts(results.folder / "subjects", ["subject", "stratum"])
-    outcomes = iter_parts(results.folder / "outcomes" / arm, ["subject", "regime"])
-    for who, what in zip(people, outcomes, strict=True):
+    for number in results.whole_shards:
+        who = read_part(results.folder / "subjects", number, ["subject", "stratum"])
+        what = read_part(results.folder / "outcomes" / arm, number, ["subject", "regime"])
         subject = np.asarray(who.column("subject"))
         stratum = _codes(who.column("stratum"), strata)
         regime = _codes(what.column("regime"), REGIMES)

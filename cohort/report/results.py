@@ -30,7 +30,7 @@ class Results:
         path = self.folder / "run.json"
         try:
             found: dict[str, Any] = json.loads(path.read_text())
-            found["arms"], found["strata"], found["arm_facts"]
+            found["arms"], found["strata"], found["arm_facts"], found["shards"]
         except (OSError, ValueError, KeyError, TypeError):
             raise StudyError([Problem("", "is not a result folder (no readable run.json)", str(self.folder))]) from None
         return found
@@ -39,6 +39,13 @@ class Results:
     def arms(self) -> tuple[str, ...]:
         """Names of the arms."""
         return tuple(self.record["arms"])
+
+    @cached_property
+    def whole_shards(self) -> tuple[int, ...]:
+        """Numbers of the shards of which every table has its part, outcomes last."""
+        tables = ["subjects", *(f"outcomes/{arm}" for arm in self.arms)]
+        names = [{path.name for path in (self.folder / table).glob("part-*.parquet")} for table in tables]
+        return tuple(int(name[5:11]) for name in sorted(set.intersection(*names)))
 
     def subjects(self, columns: Sequence[str] | None = None) -> pa.Table:
         """subjects/: a row a subject."""

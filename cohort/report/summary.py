@@ -9,10 +9,11 @@ from typing import Any
 
 import numpy as np
 
+from cohort.errors import Problem, RunError, StudyError
 from cohort.quantities import REGIMES
 from cohort.report.counting import EVERYONE, OSCILLATES, Count, count_regimes, write_incidence
 from cohort.report.results import Results
-from cohort.tables import iter_parts, numbers, write_bytes
+from cohort.tables import numbers, read_part, write_bytes
 
 QUANTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
 DESCRIBED = (
@@ -30,8 +31,21 @@ CAUTION = (
 
 
 def rebuild(folder: Path) -> tuple[Results, dict[str, Any]]:
-    """Make incidence.parquet and summary.json anew from the result files; returns (results, summary)."""
+    """Make incidence.parquet and summary.json anew from the result files; returns (results, summary).
+
+    Only shards of which every table is there are counted, and the summary says how many of how many. Raises StudyError
+    for a folder without results, RunError where a part cannot be read or the disk refuses.
+    """
     results = Results(folder)
+    if not results.whole_shards:
+        raise StudyError([Problem("", "holds no finished shard; run the study again to carry on", str(folder))])
+    try:
+        return results, _rebuild(folder, results)
+    except (OSError, ValueError) as error:
+        raise RunError(f"{error}; run the study again to make it anew") from None
+
+
+def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
     counts = count_regimes(results)
     write_incidence(results, counts)
     summary = {
@@ -39,11 +53,13 @@ def rebuild(folder: Path) -> tuple[Results, dict[str, Any]]:
         "model": results.record["model"],
         "state": results.record["state"],
         "subjects": results.record["count"],
+        "shards": len(results.whole_shards),
+        "shards_planned": results.record["shards"],
         "caution": CAUTION,
         "arms": {arm: _arm(results, arm, [c for c in counts if c.arm == arm]) for arm in results.arms},
     }
     write_bytes(folder / "summary.json", (json.dumps(summary, indent=2) + "\n").encode())
-    return results, summary
+    return summary
 
 
 def _arm(results: Results, arm: str, counts: list[Count]) -> dict[str, Any]:
@@ -75,7 +91,8 @@ def _numbers(count: Count) -> dict[str, Any]:
 
 def _failures(results: Results, arm: str) -> dict[str, int]:
     counts: dict[str, int] = {}
-    for part in iter_parts(results.folder / "outcomes" / arm, ["failure"]):
+    for number in results.whole_shards:
+        part = read_part(results.folder / "outcomes" / arm, number, ["failure"])
         for word in part.column("failure").drop_null().to_pylist():
             counts[word] = counts.get(word, 0) + 1
     return counts
@@ -87,7 +104,8 @@ def _quantiles(results: Results, arm: str) -> dict[str, dict[str, Any]]:
     for name in DESCRIBED:
         columns = [name, "oscillates"] if name in AMONG_OSCILLATORS else [name]
         pieces = []
-        for part in iter_parts(results.folder / "outcomes" / arm, columns):
+        for number in results.whole_shards:
+            part = read_part(results.folder / "outcomes" / arm, number, columns)
             if name not in part.column_names:
                 break
             values = numbers(part, name)
@@ -110,6 +128,9 @@ def _quantiles(results: Results, arm: str) -> dict[str, dict[str, Any]]:
 def closing_words(summary: dict[str, Any]) -> str:
     """The run in lines of at most 80 characters."""
     lines = [summary["title"]]
+    if summary["shards"] < summary["shards_planned"]:
+        done = f"{summary['shards']:,} of {summary['shards_planned']:,} shards"
+        lines.append(f"NOTE: unfinished; counted are {done} only")
     for arm, facts in summary["arms"].items():
         lines += ["", f"{arm}  ({facts['hours']:g} h, last {facts['window_hours']:g} h measured)"]
         if "heading" in facts:

@@ -143,25 +143,80 @@ def test_a_run_that_dies_between_any_two_parts_carries_on_to_the_same_bytes(
     assert part_bytes(tmp_path / "out") == part_bytes(whole)
 
 
-def test_kill_9_loses_nothing_that_was_finished(whole: Path, tmp_path: Path) -> None:
-    study(tmp_path)
+def test_kill_9_loses_nothing_that_was_finished(tmp_path: Path) -> None:
+    text = STUDY.replace("count = 2500", "count = 20000")
+    path = tmp_path / "killed.toml"
+    path.write_text(text)
     code = (
         "import sys; from pathlib import Path; from cohort.study import load_study; "
         "from cohort.execute.run import run_study; "
         f"run_study(load_study(sys.argv[1]), Path(sys.argv[2]), 2, {SMALL}, True)"
     )
-    words = [sys.executable, "-c", code, str(tmp_path / "small.toml"), str(tmp_path / "out")]
-    for wait in (0.9, 1.1, 1.3):
+    words = [sys.executable, "-c", code, str(path), str(tmp_path / "out")]
+    kept: dict[str, bytes] = {}
+    for wanted in (3, 20, 45):  # killed as soon as so many parts are there
         process = subprocess.Popen(words, cwd=ROOT)
-        time.sleep(wait)
+        while len(found := part_bytes(tmp_path / "out")) < wanted and process.poll() is None:
+            time.sleep(0.02)
         process.send_signal(signal.SIGKILL)
         process.wait()
-    before = part_bytes(tmp_path / "out")
+        assert all(found[name] == data for name, data in kept.items())
+        kept = part_bytes(tmp_path / "out")
+        assert len(kept) >= wanted
     subprocess.run(words, cwd=ROOT, check=True)
-    after = part_bytes(tmp_path / "out")
-    assert after == part_bytes(whole)
-    kept = {name for name in before if not name.startswith("time_courses")}
-    assert all(after[name] == before[name] for name in kept)
+    run_study(load_study(path), tmp_path / "whole", 1, SMALL, True)
+    assert part_bytes(tmp_path / "out") == part_bytes(tmp_path / "whole")
+
+
+def test_a_first_run_that_dies_while_it_writes_its_record_can_be_carried_on(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    real, calls = running.write_bytes, 0
+
+    def dying(*words) -> None:  # type: ignore[no-untyped-def]
+        nonlocal calls
+        calls += 1
+        if calls == 2:
+            raise Crash
+        real(*words)
+
+    monkeypatch.setattr(running, "write_bytes", dying)
+    with pytest.raises(Crash):
+        run_study(study(tmp_path), tmp_path / "out", quiet=True)
+    monkeypatch.undo()
+    assert run_study(study(tmp_path), tmp_path / "out", quiet=True).simulated == 5000
+
+
+@pytest.mark.parametrize("error", [ValueError("odd"), MemoryError(), OSError(5, "Input/output error")])
+def test_whatever_a_worker_meets_is_one_line(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, error: Exception, capsys: pytest.CaptureFixture[str]
+) -> None:
+    def failing(*_: object) -> None:
+        raise error
+
+    monkeypatch.setattr(running, "commit", failing)
+    path = tmp_path / "small.toml"
+    path.write_text(STUDY)
+    assert main(["run", str(path), "--out", str(tmp_path / "out"), "--set", "subjects.count=50"]) == 3
+    assert "what was finished is kept" in capsys.readouterr().err
+    assert json.loads((tmp_path / "out/run.json").read_text())["state"] == "stopped"
+
+
+def test_a_report_counts_whole_shards_only_and_says_so(
+    whole: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    out = tmp_path / "out"
+    shutil.copytree(whole, out)
+    (out / "outcomes/lunch/part-000001.parquet").unlink()
+    assert main(["report", str(out)]) == 0
+    assert "counted are 2 of 3 shards only" in capsys.readouterr().out
+    (out / "outcomes/lunch/part-000000.parquet").write_bytes(b"short")
+    assert main(["report", str(out)]) == 3
+    assert "run the study again to make it anew" in capsys.readouterr().err
+    for part in out.glob("subjects/*"):
+        part.unlink()
+    assert main(["report", str(out)]) == 2
+    assert "holds no finished shard" in capsys.readouterr().err
 
 
 @pytest.mark.parametrize("harm", ["truncate", "flip", "remove", "foreign", "empty"])
@@ -242,6 +297,20 @@ def test_a_changed_study_is_refused_by_its_first_changed_key(
     with pytest.raises(StudyError, match=rf"{key}: was .* cannot change there"):
         run_study(changed, out, shard_size=SMALL, quiet=True)
     assert part_bytes(out) == part_bytes(whole)
+
+
+def test_an_arm_named_like_another_with_a_dot_is_new(whole: Path, tmp_path: Path) -> None:
+    out = tmp_path / "out"
+    shutil.copytree(whole, out)
+    longer = study(tmp_path, text=STUDY.replace("[output]", ARM.replace("fasting", "steady.2") + "[output]"))
+    assert run_study(longer, out, shard_size=SMALL, quiet=True).simulated == 2500
+
+
+def test_a_latin_hypercube_cannot_grow(tmp_path: Path) -> None:
+    text = STUDY.replace("count = 2500", 'count = 50\ndraw = "latin-hypercube"')
+    run_study(study(tmp_path, text=text), tmp_path / "out", quiet=True)
+    with pytest.raises(StudyError, match=r"subjects\.count: was 50"):
+        run_study(study(tmp_path, "subjects.count=60", text=text), tmp_path / "out", quiet=True)
 
 
 def test_foreign_folders_and_records_are_refused(tmp_path: Path) -> None:

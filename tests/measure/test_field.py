@@ -86,7 +86,9 @@ def test_counting_peaks_in_a_day_is_wrong_for_tens_and_two_hundred_hours_side_wi
         long = solve_ivp(rates, (0, 12000), [200, 200, 12000, 60, 60, 60], method="DOP853", rtol=1e-9, atol=1e-6,
                          t_eval=np.arange(0, 12001, 5.0)).y[2]  # fmt: skip
         early, late = np.ptp(long[800:1400]), np.ptp(long[1800:])
-        sides += (late > 0.5 * early) == (found["oscillates"][i] == 1)
+        swing = found["glucose_amplitude_mg_dl"][i]
+        settled = late / (10 * own[i][2])
+        sides += settled > 0.75 * swing if found["oscillates"][i] == 1 else late < max(0.5 * early, 0.01)  # mg: gone
     assert sides == len(disagree[:: max(len(disagree) // 10, 1)])
 
 

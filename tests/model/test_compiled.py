@@ -84,7 +84,7 @@ def test_another_version_of_a_kernel_has_another_folder(monkeypatch: pytest.Monk
     compiled.cache_folder.cache_clear()
     here = compiled.cache_folder()
     compiled.cache_folder.cache_clear()
-    monkeypatch.setattr(compiled, "kernel_identity", lambda: "other")
+    monkeypatch.setattr(compiled, "_all_kernels", lambda: "other")
     there = compiled.cache_folder()
     compiled.cache_folder.cache_clear()
     assert here != there
