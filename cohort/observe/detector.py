@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from cohort.errors import nearest
 from cohort.observe.design import BAND_MIN, FEWEST_SAMPLES, Design, make_design, steps_kept
-from cohort.observe.null import SIMULATED, counted_missing, null_table
+from cohort.observe.null import counted_missing, null_table
 from cohort.observe.sampling import Reading, Schedule, observe
 from cohort.observe.scan import Scan, scan_series
 from cohort.observe.white import baluev_p, baluev_width
@@ -97,12 +97,13 @@ def search(
     assay_cv: float,
     forcing_period_min: Array | None = None,
     folder: Path | None = None,
-    simulated: int = SIMULATED,
+    null_design: Design | None = None,
 ) -> Columns:
     """Search series of one analyte, float64[n, times] with NaN where a sample is missing, for a rhythm.
 
     Returns the columns of DETECTION_COLUMNS but for `detected`, `rule_p_value` and `decaying`, one number a series.
-    `folder` keeps null tables between runs. Raises ValueError where the schedule can see no period of the band.
+    `folder` keeps null tables between runs; `null_design`, a schedule much like this one with tables at hand, lends its
+    own. Raises ValueError where the schedule can see no period of the band.
     """
     design = make_design(times_min, rule.band_min)
     samples = (~np.isnan(values)).sum(axis=1)
@@ -116,7 +117,7 @@ def search(
         scan = scan_series(design, kept)
         forcing = np.full(len(kept), np.nan) if forcing_period_min is None else forcing_period_min[usable]
         columns = {
-            "p_value": _p_values(design, scan, len(design.times_min) - samples[usable], folder, simulated),
+            "p_value": _p_values(null_design or design, scan, len(design.times_min) - samples[usable], folder),
             **_white(design, scan, kept),
             **_shapes(design, scan, kept, rule, assay_cv, forcing),
         }
@@ -174,12 +175,12 @@ def _notes(values: Array, samples: NDArray[np.int64]) -> NDArray[np.int8]:
     return np.where(samples < FEWEST_SAMPLES, 0, np.where(flat, 1, -1)).astype(np.int8)
 
 
-def _p_values(design: Design, scan: Scan, missing: NDArray[np.int64], folder: Path | None, simulated: int) -> Array:
+def _p_values(design: Design, scan: Scan, missing: NDArray[np.int64], folder: Path | None) -> Array:
     p = np.empty(len(missing))
     served = np.array([_serving(design, int(m)) for m in missing])
     for m in np.unique(served):
         mine = served == m
-        p[mine] = null_table(design, int(m), folder, simulated).p_values(scan.statistic[mine], scan.fitted[mine])
+        p[mine] = null_table(design, int(m), folder).p_values(scan.statistic[mine], scan.fitted[mine])
     return p
 
 
