@@ -5,8 +5,11 @@ import ctypes
 import numpy as np
 import pytest
 from scipy.integrate import solve_ivp
+from scipy.optimize import brentq
+from sksundae.cvode import CVODE
 
 from cohort.compiled import compile_program
+from cohort.measure.cycle import Held, displaced, find_orbits
 from cohort.measure.regime import BISTABLE, DAMPED, FAILED, QUIET, SUSTAINED, UNDECIDED, cycles
 from cohort.model.body import body
 from cohort.model.rest import at_rest
@@ -102,56 +105,111 @@ def random_parameters(n: int, cv: float, seed: int) -> np.ndarray:
     return values
 
 
-def settled_extremes(parameters: np.ndarray, Gin: float, orbit, period: float):  # type: ignore[no-untyped-def]
-    """Period and glucose extremes by DOP853 with events, from 60 cycles out."""
-    field = rates_of(parameters, Gin)
-
-    def peak(t, x):  # type: ignore[no-untyped-def]
-        return field(t, x)[2]
-
-    peak.direction = -1.0
-    out = solve_ivp(field, (0, 14 * period), orbit, method="DOP853", rtol=1e-12, atol=1e-9, events=peak)
-    times, states = out.t_events[0], np.array(out.y_events[0])
-    return np.diff(times)[-1], states[-1, 2] / (10 * parameters[2]), times, states
-
-
-def test_periods_of_two_hundred_random_bodies_against_dop853_with_events() -> None:
-    parameters = random_parameters(520, 0.15, 21)
-    Gin = np.full(len(parameters), 216.0)
-    found = cycles(BODY, parameters, Gin, np.zeros(len(parameters)))
-    rest = at_rest(BODY, parameters, Gin, np.zeros(len(parameters)))
-    strong = np.flatnonzero((found.regime == SUSTAINED) & (found.growth > 1e-3))[:200]
-    assert len(strong) >= 100
-    for i in strong[:40]:
-        start = rest.states[i].copy()
-        start[2] *= 1.08
-        cycles_needed = 12.0 / found.growth[i] / found.period[i] / 2
-        field = rates_of(parameters[i], 216.0)
-        settle = min(max(cycles_needed, 12.0), 60.0) * found.period[i]
-        near = solve_ivp(field, (0, settle), start, method="DOP853", rtol=1e-12, atol=1e-9).y[:, -1]
-        period, high, _, _ = settled_extremes(parameters[i], 216.0, near, found.period[i])
-        assert found.period[i] == pytest.approx(period, rel=1e-6)
-        assert found.turn[i, 0, 1] == pytest.approx(high, rel=1e-6)
-
-
-def test_the_orbit_closes_under_an_independent_integrator_for_every_body() -> None:
-    """One turn of the orbit by DOP853 comes back to where it began, near the border and far from it."""
-    from cohort.measure.cycle import Held, displaced, find_orbits
-
-    parameters = random_parameters(700, 0.15, 22)
-    Gin = np.full(len(parameters), 216.0)
-    rest = at_rest(BODY, parameters, Gin, np.zeros(len(parameters)))
+def orbits_of_random_bodies(n: int, seed: int):  # type: ignore[no-untyped-def]
+    """(subjects, their orbits, their cycles) of the oscillators among n random bodies."""
+    parameters = random_parameters(n, 0.15, seed)
+    Gin, none = np.full(n, 216.0), np.zeros(n)
+    rest = at_rest(BODY, parameters, Gin, none)
     rows = np.flatnonzero(rest.eigenvalues[:, 0].real > 1e-7)
-    subjects = Held(BODY, parameters, Gin, np.zeros(len(parameters)), rest).take(rows)
+    subjects = Held(BODY, parameters, Gin, none, rest).take(rows)
     orbits = find_orbits(subjects, displaced(subjects))
     assert orbits.found.all()
-    assert len(rows) >= 200
-    for i in range(len(rows)):
-        out = solve_ivp(
-            rates_of(subjects.parameters[i], 216.0), (0, orbits.period[i]), orbits.state[i],
-            method="DOP853", rtol=1e-11, atol=1e-9,
-        )  # fmt: skip
-        np.testing.assert_allclose(out.y[:, -1], orbits.state[i], rtol=2e-8)
+    return subjects, orbits, cycles(BODY, subjects.parameters, subjects.Gin, subjects.Iin)
+
+
+def by_events(subjects, orbits, i: int):  # type: ignore[no-untyped-def]
+    """From a state of the orbit, two turns by DOP853: period, glucose extremes, insulin extremes, lag."""
+    field = rates_of(subjects.parameters[i], 216.0)
+
+    def flat(state: int, direction: float):  # type: ignore[no-untyped-def]
+        def event(t, x):  # type: ignore[no-untyped-def]
+            return field(t, x)[state]
+
+        event.direction = direction
+        return event
+
+    events = [flat(2, -1.0), flat(2, 1.0), flat(0, -1.0), flat(0, 1.0)]
+    out = solve_ivp(field, (0, 2.3 * orbits.period[i]), orbits.state[i], method="DOP853", rtol=1e-12, atol=1e-9,
+                    events=events)  # fmt: skip
+    highs, lows, crests, troughs = out.t_events
+    Vp, Vg = subjects.parameters[i, 0], subjects.parameters[i, 2]
+    return (
+        highs[1] - highs[0], out.y_events[1][0][2] / (10 * Vg), out.y_events[0][0][2] / (10 * Vg),
+        out.y_events[3][0][0] / Vp, out.y_events[2][0][0] / Vp, (crests[0] - highs[0]) % (highs[1] - highs[0]),
+    )  # fmt: skip
+
+
+def test_two_hundred_random_orbits_against_dop853_with_events() -> None:
+    subjects, orbits, found = orbits_of_random_bodies(560, 21)
+    assert len(found.period) >= 200
+    for i in range(len(found.period)):
+        period, low, high, trough, crest, lag = by_events(subjects, orbits, i)
+        if found.growth[i] > 1e-5:
+            assert found.period[i] == pytest.approx(period, rel=1e-6)
+        assert found.turn[i, 0, :2] == pytest.approx([low, high], rel=1e-6)
+        assert found.turn[i, 1, :2] == pytest.approx([trough, crest], rel=1e-6)
+        assert (found.turn[i, 1, 3] - found.turn[i, 0, 3]) % found.period[i] == pytest.approx(lag, abs=1e-3)
+        swing = found.turn[i, 0, 1] - found.turn[i, 0, 0]
+        assert swing == pytest.approx(high - low, rel=1e-5, abs=1e-6)
+
+
+def test_fifty_orbits_close_under_sundials() -> None:
+    subjects, orbits, _ = orbits_of_random_bodies(160, 22)
+    assert len(orbits.period) >= 50
+    for i in range(50):
+        field = rates_of(subjects.parameters[i], 216.0)
+        solver = CVODE(into(field), method="Adams", rtol=1e-11, atol=1e-8, max_num_steps=100_000)
+        out = solver.solve(np.array([0.0, orbits.period[i]]), orbits.state[i])
+        np.testing.assert_allclose(out.y[-1], orbits.state[i], rtol=1e-6)
+
+
+def into(field):  # type: ignore[no-untyped-def]
+    """A field as SUNDIALS takes it: f(t, x, out)."""
+
+    def write(t, x, out):  # type: ignore[no-untyped-def]
+        out[:] = field(t, x)
+
+    return write
+
+
+def test_a_settled_integration_ends_on_the_orbit() -> None:
+    """Brute force: from far off, integrate until the transient is gone; the orbit found is where one ends."""
+    subjects, _, found = orbits_of_random_bodies(120, 23)
+    strong = np.flatnonzero(found.growth > 2e-3)[:8]
+    assert len(strong) == 8
+    for i in strong:
+        start = subjects.rest.states[i].copy()
+        start[2] *= 1.3
+        field = rates_of(subjects.parameters[i], 216.0)
+        settle = 40.0 * found.period[i]
+        out = solve_ivp(field, (0, settle), start, method="DOP853", rtol=1e-11, atol=1e-8, dense_output=True)
+        late = out.sol(np.linspace(settle - 2 * found.period[i], settle, 40_001))[2] / (10 * subjects.parameters[i, 2])
+        assert found.turn[i, 0, :2] == pytest.approx([late.min(), late.max()], rel=1e-6)
+
+
+def test_a_second_attractor_is_found_beside_a_stable_equilibrium() -> None:
+    # r' = mu r + r^3 - r^5 about (2, 0), mu just below 0: stable at rest, and an orbit of radius^2 = 1/2 + sqrt(1/4 + mu)
+    mu = -5e-4
+    found = toys.cycles_of(toys.toy("shifted", toys.shifted_subcritical, mu=mu))
+    assert REGIMES[found.regime[0]] == "bistable"
+    assert found.bistable_searched[0]
+    radius = np.sqrt(0.5 + np.sqrt(0.25 + mu))
+    assert found.turn[0, 0, :2] == pytest.approx([2 - radius, 2 + radius], rel=1e-8)
+    assert found.period[0] == pytest.approx(2 * np.pi, rel=1e-8)
+    supercritical = toys.cycles_of(toys.toy("shifted", toys.shifted_supercritical, mu=mu))
+    assert REGIMES[supercritical.regime[0]] == "damped"
+    assert supercritical.bistable_searched[0]
+
+
+def test_the_subcritical_orbit_at_its_published_radius() -> None:
+    # exact: at mu = -0.1 the stable orbit has r = .9420, the unstable one .3357
+    body_ = toys.toy("subcritical", toys.subcritical, mu=-0.1)
+    parameters = np.array([[-0.1, 1.0]] * 2)
+    none = np.zeros(2)
+    subjects = Held(body_, parameters, none, none, at_rest(body_, parameters, none, none))
+    orbits = find_orbits(subjects, np.array([[0.5, 0.0], [0.3, 0.0]]), (6,))
+    assert orbits.found.tolist() == [True, False]
+    assert np.hypot(*orbits.state[0]) == pytest.approx(0.9420, abs=5e-5)
 
 
 def test_amplitude_grows_as_the_square_root_next_to_the_border() -> None:
@@ -174,8 +232,6 @@ def test_regimes_at_the_ends_of_the_window() -> None:
 
 
 def test_a_body_on_the_border_is_undecided_and_a_broken_one_failed() -> None:
-    from scipy.optimize import brentq
-
     edge = brentq(lambda g: nominal_cycles(g).growth[0], 98.0, 100.0, xtol=1e-12)
     assert REGIMES[nominal_cycles(edge).regime[0]] == "undecided"
     broken = NOMINAL.copy()

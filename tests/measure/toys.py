@@ -32,6 +32,21 @@ def subcritical(x, y, Gin, Iin, secretion, mu):  # type: ignore[no-untyped-def]
     return {"x": pull * x - y + Gin, "y": pull * y + x + Iin}, seen(x, y)
 
 
+def shifted_subcritical(x, y, Gin, Iin, secretion, mu):  # type: ignore[no-untyped-def]
+    """The same about (2, 0), so that a factor on x moves it off its equilibrium."""
+    u = x - 2
+    r2 = u * u + y * y
+    pull = mu + r2 - r2 * r2
+    return {"x": pull * u - y + Gin, "y": pull * y + u + Iin}, seen(x, y)
+
+
+def shifted_supercritical(x, y, Gin, Iin, secretion, mu):  # type: ignore[no-untyped-def]
+    """r' = mu r - r^3 about (2, 0): no orbit while mu < 0."""
+    u = x - 2
+    pull = mu - u * u - y * y
+    return {"x": pull * u - y + Gin, "y": pull * y + u + Iin}, seen(x, y)
+
+
 def toy(name: str, text: Callable[..., Any], **parameters: float) -> Body:
     """A body from a toy's equations; its states may have either sign."""
     card = ModelCard(

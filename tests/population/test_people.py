@@ -9,7 +9,9 @@ from hypothesis import strategies as st
 from scipy import special, stats
 from scipy.stats import qmc
 
+from cohort.measure.outcomes import outcomes
 from cohort.model.catalogue import MODELS
+from cohort.model.protocol import Arm, Constant, Meal
 from cohort.population import Recipe, Stratum, draw, population_draw
 from cohort.population.copula import is_possible, latent, latent_matrix, nearest_correlation
 from cohort.population.designs import sobol_points, sobol_uniforms, stratified_uniforms
@@ -279,3 +281,16 @@ def test_population_draws_move_medians_and_spreads_and_keep_the_uniforms() -> No
     assert normal.strata[0].laws["tp"] != Normal(6.0, 1.0)
     u = normal_cdf(np.log(column(draw(population_draw(r, 1), 0, 256), "Rm", r) / medians[0]) / drawn[0].sigma)
     np.testing.assert_allclose(u, uniforms(41, "parameter", "Rm", 0, 256), atol=1e-9)
+
+
+def test_size_scaling_and_infusion_per_kg_leave_concentrations_alone() -> None:
+    """Under per-kg scaling and rates per kg a heavy body is the light one with every amount larger (exact)."""
+    arm = Arm("i", 1440.0, glucose=(Constant(3.0, per_kg=True), Meal(300.0, 800.0, 40.0, per_kg=True)), steady=3.0,
+              steady_per_kg=True)  # fmt: skip
+    found = []
+    for kg in (70.0, 105.0):
+        r = recipe({}, strata=(Stratum("all", 1.0, {}, Fixed(kg)),), scaling="per-kg", count=1)
+        made = draw(r, 0, 1)
+        found.append(outcomes("hepatic-lag", made.values, made.body_weight_kg, arm).outcomes)
+    for name in ("period_min", "glucose_amplitude_mg_dl", "glucose_peak_mg_dl", "insulin_mean_mu_l", "iauc_mg_dl_min"):
+        np.testing.assert_allclose(found[0][name], found[1][name], rtol=2e-7)
