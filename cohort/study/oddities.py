@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import functools
 import math
 
 import numpy as np
 
 from cohort.errors import Problem
+from cohort.model.body import body
 from cohort.model.catalogue import MODELS
 from cohort.model.inputs import People, steady_input
 from cohort.model.protocol import Arm
@@ -54,21 +56,30 @@ def _of_arm(study: Study, arm: Arm, tree: Tree, i: int) -> list[Problem]:
 def e_folding_min(model: str, arm: Arm) -> float | None:
     """How long the published body's slowest transient takes to change by a factor e under the arm's steady input (min).
 
+    None where the arm has no steady input or the body no equilibrium.
+    """
+    growth = published_growth(model, arm)
+    return None if growth is None else 1.0 / max(abs(growth), 1e-9)
+
+
+def published_growth(model: str, arm: Arm) -> float | None:
+    """Largest real part of the published body's eigenvalues under the arm's steady input, per min.
+
     None where the arm has no steady input or the body no equilibrium. Plain Python: no compiler is started for it.
     """
-    from cohort.model.body import body
-
-    card = MODELS[model]
     nobody = np.array([REFERENCE_WEIGHT_KG]), *(np.array([math.nan]) for _ in range(3))
     steady = steady_input(arm, People(*nobody))
-    if steady is None:
-        return None
-    found = body(model)
-    inputs = [float(steady[0][0]), float(steady[1][0]), *card.nominal.values(), arm.secretion]
+    return None if steady is None else _growth(model, float(steady[0][0]), float(steady[1][0]), arm.secretion)
+
+
+@functools.lru_cache(maxsize=256)
+def _growth(model: str, Gin: float, Iin: float, secretion: float) -> float | None:
+    card, found = MODELS[model], body(model)
+    inputs = [Gin, Iin, *card.nominal.values(), secretion]
     low, high = 0.0, 100.0 * card.typical["G"]
     if not run(found.balance, [high, *inputs])[0] < 0.0:
         return None
-    for _ in range(60):
+    for _ in range(40):
         middle = 0.5 * (low + high)
         low, high = (middle, high) if run(found.balance, [middle, *inputs])[0] > 0.0 else (low, middle)
     states = run(found.balance, [low, *inputs])[2:]
@@ -76,4 +87,4 @@ def e_folding_min(model: str, arm: Arm) -> float | None:
     slopes = np.array(run(found.jacobian, [*states, *inputs])).reshape(len(states), -1)
     if not np.isfinite(slopes).all():
         return None
-    return 1.0 / max(abs(float(np.linalg.eigvals(slopes).real.max())), 1e-9)
+    return float(np.linalg.eigvals(slopes).real.max())

@@ -2,28 +2,34 @@
 
 from __future__ import annotations
 
+import math
 import os
 from dataclasses import dataclass
 
 import numpy as np
 
+from cohort.model.catalogue import MODELS
 from cohort.model.protocol import Arm, Meal, OnOff, Sine
 from cohort.population.laws import Fixed
 from cohort.population.recipe import WEIGHT, Stratum
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 from cohort.study.arms import has_steady_input
+from cohort.study.oddities import published_growth
 from cohort.study.spec import Study
 
 SHARD = 16_384
 """Consecutive subjects that are simulated, stored and resumed together."""
 
 # Costs on the machine the figures in the README were measured on; `cohort check` says that times are estimates.
-US_PER_HOUR = 2.3
-US_PER_HOUR_MEALS = 4.6
-US_PER_CYCLE_SEARCH = 55.0
-US_PER_SUBJECT_WRITTEN = 12.0
+US_PER_HOUR = 1.9
+US_PER_HOUR_MOVING = 4.0
+US_PER_HOUR_CLAMP = 5.0
+US_PER_REST = 10.0
+US_PER_ORBIT = 80.0
+US_PER_SUBJECT_WRITTEN = 8.0
+STATES_TIMED = 6
 SECONDS_AT_START = 1.2
-BYTES_PER_OUTCOME = 8.5
+BYTES_PER_OUTCOME = 4.4
 OUTCOME_COLUMNS = 48
 BASE_MEMORY_MB = 230.0
 MEMORY_PER_WORKER_MB = 90.0
@@ -71,7 +77,7 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     """Return what running the study takes; nothing is drawn or simulated."""
     workers = workers or os.cpu_count() or 1
     n = study.recipe.count
-    arms = tuple(_arm(arm, n) for arm in study.arms)
+    arms = tuple(_arm(study, arm) for arm in study.arms)
     core = sum(a.core_seconds for a in arms) + n * US_PER_SUBJECT_WRITTEN * 1e-6 * (len(arms) + 1)
     subject_columns = len(study.recipe.varied) + 3
     rows_mb = n * (len(arms) * OUTCOME_COLUMNS + subject_columns) * BYTES_PER_OUTCOME / 1e6
@@ -83,7 +89,7 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     )  # fmt: skip
 
 
-def _arm(arm: Arm, n: int) -> ArmPlan:
+def _arm(study: Study, arm: Arm) -> ArmPlan:
     hours = arm.duration_min / 60.0
     stops = 1
     eating = False
@@ -91,9 +97,14 @@ def _arm(arm: Arm, n: int) -> ArmPlan:
         if isinstance(shape, OnOff) and isinstance(shape.period_min, float):
             stops += 2 * int(arm.duration_min / shape.period_min)
         eating |= isinstance(shape, Meal | Sine)
-    per_subject = hours * (US_PER_HOUR_MEALS if eating or arm.clamp else US_PER_HOUR) + 0.15 * stops
-    per_subject += US_PER_CYCLE_SEARCH if has_steady_input(arm) else 0.0
-    return ArmPlan(arm.name, hours, stops, per_subject * n * 1e-6)
+    hourly = US_PER_HOUR_CLAMP if arm.clamp else US_PER_HOUR_MOVING if eating else US_PER_HOUR
+    per_subject = hours * hourly + 0.15 * stops
+    if has_steady_input(arm):
+        growth = published_growth(study.model, arm)
+        share = 0.0 if growth is None else 1.0 / (1.0 + math.exp(-min(max(growth * 800.0, -30.0), 30.0)))
+        per_subject += US_PER_REST + US_PER_ORBIT * share
+    size = 0.4 + 0.6 * len(MODELS[study.model].states) / STATES_TIMED
+    return ArmPlan(arm.name, hours, stops, per_subject * size * study.recipe.count * 1e-6)
 
 
 def _laws(study: Study) -> tuple[LawRow, ...]:
