@@ -16,6 +16,7 @@ Array = NDArray[np.float64]
 BAND_MIN = (60.0, 240.0)
 FEWEST_SAMPLES = 8
 MOST_SAMPLES = 1000
+_COMMON_PERIOD = 110.0
 CUT = 2.05
 """The shortest period that is searched, in sampling steps."""
 PER_RESOLUTION = 5
@@ -57,10 +58,8 @@ def searched_band(times_min: Array, band_min: tuple[float, float] = BAND_MIN) ->
         )
     said = []
     if short > low:
-        period = _hidden_period(low, short, step)
         said.append(
-            f"sampled every {step:g} min, {period:g} min appears as {alias_min(period, step):.0f} min; "
-            f"periods below {short:.3g} min are not searched"
+            f"sampled every {step:g} min, {_alias_words(low, step)}periods below {short:.3g} min are not searched"
         )
     elif step > low / 3.0:
         said.append(f"sampled every {step:g} min, fewer than three samples a period at {low:g} min")
@@ -69,9 +68,14 @@ def searched_band(times_min: Array, band_min: tuple[float, float] = BAND_MIN) ->
     return (short, long), "; ".join(said)
 
 
-def _hidden_period(low: float, short: float, step: float) -> float:
-    """A period that will be met in people and that the schedule cannot see: 110 min, or the nearest that it hides."""
-    return min(max(110.0, low), 10.0 * np.ceil(short / 10.0 - 1.0) if short > 20.0 else low, 2.0 * step)
+def _alias_words(low: float, step: float) -> str:
+    """What becomes of a rhythm that the schedule hides: 110 min, as people have it, or the band's shortest."""
+    period = _COMMON_PERIOD if low <= _COMMON_PERIOD < 2.0 * step else low
+    if period >= 2.0 * step:
+        return ""
+    alias = alias_min(period, step)
+    seems = f"appears as {alias:.0f} min" if alias < float("inf") else "does not appear at all"
+    return f"{period:g} min {seems}; "
 
 
 @dataclass(frozen=True, eq=False)

@@ -373,7 +373,8 @@ def refine(y, times, phi, rho, frequency, step, low, high, out):  # type: ignore
         information += column[i] * column[i]
     freedom = max(n - TREND - 3, 1)
     out[1] = np.sqrt(rest / freedom / information) if information > 0.0 else np.inf
-    found = _fit(y, times, centre, half, f, phi, rho, True)[2]
+    # unweighted: a background fitted beside a steady rhythm takes what a decaying one leaves for its own
+    found = _fit(y, times, centre, half, f, np.zeros(n), 0.0, True)[2]
     first = np.sqrt(found[0] * found[0] + found[1] * found[1])
     second = np.sqrt(found[2] * found[2] + found[3] * found[3])
     out[3] = second / first if first > 0.0 else np.inf
