@@ -164,7 +164,7 @@ class Builder:
         return self.scale2(total, k)
 
     def log(self, x: int) -> int:
-        """ln x to about 1 ulp for normal x > 0, NaN otherwise: x = m 2^e, ln m = 2 artanh((m-1)/(m+1))."""
+        """ln x to about 1 ulp for normal x > 0, -inf at 0, NaN below: x = m 2^e, ln m = 2 artanh((m-1)/(m+1))."""
         m, e = self._push("mantissa", x), self._push("exponent", x)
         half_root = self.constant(math.sqrt(0.5))
         one, zero = self.constant(1.0), self.constant(0.0)
@@ -179,7 +179,8 @@ class Builder:
             total = self.fma(total, z, self.constant(2.0 / (2 * n + 1)))
         tail = self.fma(self.mul(total, z), s, self.mul(e, self.constant(_LN2_REST)))
         value = self.fma(e, self.constant(_LN2), self.add(self.add(s, s), tail))
-        return self.if_less(zero, x, value, self.constant(math.nan))
+        nothing = self.if_less(x, zero, self.constant(math.nan), self.add(x, self.constant(-math.inf)))
+        return self.if_less(zero, x, value, nothing)
 
     def logistic(self, v: int) -> int:
         """1/(1 + e^-v), never overflowing."""

@@ -14,7 +14,7 @@ from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
 from cohort.population import draw
 from cohort.simulate.engine import DONE
-from cohort.simulate.run import assemble, courses, start_states, typical, with_secretion
+from cohort.simulate.run import assemble, courses, fades, start_states, typical, with_secretion
 from cohort.study import Study
 
 Array = NDArray[np.float64]
@@ -90,7 +90,9 @@ def _errors(found: Body, own: Array, people: People, arm: Arm) -> Array:
 
 def _glucose(found: Body, own: Array, people: People, arm: Arm, accuracy: tuple[int, float] | tuple[()]) -> Array:
     pieces = inputs(arm, people)
-    stepper = found.stepper(SEEN, pieces.steady, *(accuracy or (ORDER, TOLERANCE)), summarised=False)
+    stepper = found.stepper(
+        SEEN, pieces.steady, *(accuracy or (ORDER, TOLERANCE)), summarised=False, relative=fades(arm)
+    )
     x0 = start_states(found, own, people, arm)
     prepared = assemble(stepper, with_secretion(own, arm.secretion), x0, typical(found), pieces, found.enters)
     grid = np.arange(0.0, arm.duration_min + 0.5 * EVERY_MIN, EVERY_MIN)

@@ -39,9 +39,19 @@ class Body:
         order: int = ORDER,
         tolerance: float = TOLERANCE,
         summarised: bool = True,
+        relative: bool = False,
     ) -> Stepper:
         """One Taylor step that records the `seen` columns; `steady` where the inputs are constant within a step."""
-        return Stepper(self.traced, seen, steady, order, tolerance, positive=self.card.positive, summarised=summarised)
+        return Stepper(
+            self.traced,
+            seen,
+            steady,
+            order,
+            tolerance,
+            positive=self.card.positive,
+            summarised=summarised,
+            relative=relative,
+        )
 
     @cached_property
     def rates(self) -> Program:

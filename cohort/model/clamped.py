@@ -18,7 +18,7 @@ CLAMP_RATE = "clamp_rate_mg_per_min"
 
 
 @functools.cache
-def clamp_steppers(body: Body, seen: tuple[str, ...]) -> tuple[Stepper, Stepper]:
+def clamp_steppers(body: Body, seen: tuple[str, ...], relative: bool = False) -> tuple[Stepper, Stepper]:
     """(free, held): steps of the body left to itself and of the body whose glucose is held.
 
     Both record `seen` and then CLAMP_RATE: zero in the free body; in the held one the balance of glucose, what use
@@ -31,7 +31,10 @@ def clamp_steppers(body: Body, seen: tuple[str, ...]) -> tuple[Stepper, Stepper]
     held = replace(traced, rates={**traced.rates, lead: ZERO}, observed={**traced.observed, CLAMP_RATE: needed})
     columns = (*seen, CLAMP_RATE)
     positive = body.card.positive
-    return Stepper(free, columns, False, positive=positive), Stepper(held, columns, False, positive=positive)
+    return (
+        Stepper(free, columns, False, positive=positive, relative=relative),
+        Stepper(held, columns, False, positive=positive, relative=relative),
+    )
 
 
 def until(inputs: Inputs, from_min: float) -> Inputs:

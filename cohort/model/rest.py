@@ -20,6 +20,10 @@ from cohort.model.linear import solve_each
 Array = NDArray[np.float64]
 
 
+TRACE_MU_PER_MIN = 1e-9
+"""Insulin that enters where none is secreted: with none at all the equations have no slope at rest."""
+
+
 @dataclass(frozen=True)
 class Rest:
     """Equilibria of n subjects: states float64[n, states], eigenvalues complex128[n, states] with the leading one
@@ -36,6 +40,7 @@ def at_rest(body: Body, parameters: Array, Gin: Array, Iin: Array) -> Rest:
     parameters: float64[n, len(body.parameters)]; Gin mg/min and Iin mU/min: float64[n].
     """
     n, states = len(parameters), len(body.card.states)
+    Iin = np.where(parameters[:, body.parameters.index("secretion")] == 0.0, np.maximum(Iin, TRACE_MU_PER_MIN), Iin)
     inputs = np.column_stack([Gin, Iin, parameters])
     found = np.full((n, states), np.nan)
     jacobians = np.full((n, states, states), np.nan)

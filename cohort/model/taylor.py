@@ -274,7 +274,8 @@ class Stepper:
           summaries[seen][SUMMARY].
     Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`. Coefficients are of
     powers of (time since the step began) / step. The first `watched` states set the step size and the health. Summaries
-    are what measures need; who only samples leaves them out.
+    are what measures need; who only samples leaves them out. `relative` measures each state by its own present size in
+    place of the given scale: for arms in which one may fade away.
     """
 
     traced: Traced
@@ -285,6 +286,7 @@ class Stepper:
     positive: bool = True
     watched: int | None = None
     summarised: bool = True
+    relative: bool = False
 
     @cached_property
     def _affine(self) -> tuple[dict[str, Affine], dict[str, Affine]]:
@@ -380,7 +382,11 @@ class Stepper:
         for k in (self.order - 1, self.order):
             largest = b.constant(1e-290)
             for i, state in enumerate(states):
-                term = b.mul(b.absolute(recurrences.value(state, k)), n + i)
+                size = b.absolute(recurrences.value(state, k))
+                if self.relative:
+                    term = b.div(size, b.absolute(recurrences.value(state, 0)))
+                else:
+                    term = b.mul(size, n + i)
                 largest = b.larger(largest, term)
             exponent = b.mul(b.log(b.mul(largest, b.constant(1.0 / self.tolerance))), b.constant(-1.0 / k))
             shortest = exponent if shortest is None else b.smaller(shortest, exponent)

@@ -60,9 +60,9 @@ def count_regimes(results: Results) -> list[Count]:
     found: list[Count] = []
     strata = results.record["strata"]
     for arm in results.arms:
-        counts = regime_counts(results, arm)
-        if counts[..., : len(REGIMES)].sum() == 0:
+        if results.record["arm_facts"][arm]["steady_mg_per_min"] is None:
             continue
+        counts = regime_counts(results, arm)
         groups = [(EVERYONE, counts.sum(axis=0))]
         if len(strata) > 1:
             groups += [(name, counts[i]) for i, name in enumerate(strata)]

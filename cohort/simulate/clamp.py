@@ -21,7 +21,7 @@ from cohort.model.rest import at_rest
 from cohort.model.taylor import SUMMARY
 from cohort.simulate.course import Courses
 from cohort.simulate.engine import DONE, OUT_OF_BUDGET, constant_rates, elementary, moving_rates, verdict
-from cohort.simulate.run import assemble, start_states, typical, with_secretion
+from cohort.simulate.run import assemble, fades, start_states, typical, with_secretion
 
 Array = NDArray[np.float64]
 
@@ -51,7 +51,7 @@ def clamped_courses(body: Body, values: Array, people: People, arm: Arm, seen: t
     assert arm.clamp is not None
     assert seen[0] == "glucose_mg_dl"
     n = len(values)
-    free, held = clamp_steppers(body, seen)
+    free, held = clamp_steppers(body, seen, fades(arm))
     pieces = until(inputs(arm, people), arm.clamp.from_min)
     x0 = start_states(body, values, people, arm)
     parameters = with_secretion(values, arm.secretion)

@@ -26,6 +26,9 @@ _MEAN_STEP_MIN = 3.5
 _SPARE_STEPS = 64
 _LARGER = 16
 
+FADING_BELOW = 0.1
+"""Factors on secretion below this are taken as suppression."""
+
 
 @dataclass(frozen=True)
 class Prepared:
@@ -76,9 +79,13 @@ def prepare(
     pieces = inputs(arm, people)
     x0 = start_states(body, values, people, arm)
     parameters = with_secretion(values, arm.secretion)
-    return assemble(
-        body.stepper(seen, pieces.steady, summarised=summarised), parameters, x0, typical(body), pieces, body.enters
-    )
+    stepper = body.stepper(seen, pieces.steady, summarised=summarised, relative=fades(arm))
+    return assemble(stepper, parameters, x0, typical(body), pieces, body.enters)
+
+
+def fades(arm: Arm) -> bool:
+    """Whether insulin may fade away in an arm, so that errors must be measured by what is left of it."""
+    return arm.secretion < FADING_BELOW
 
 
 def typical(body: Body) -> Array:

@@ -434,6 +434,39 @@ def test_results_open_in_python(whole: Path) -> None:
         results.meals("steady")
 
 
+def test_odd_corners_run_to_their_end(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    path = tmp_path / "odd.toml"
+    path.write_text(ODD)
+    assert main(["run", str(path), "--out", str(tmp_path / "out")]) == 0
+    said = capsys.readouterr().out
+    late = said.split("clamp late")[1]
+    assert "no steady input" in late and "oscillate" not in late
+    assert "failed" not in said.split("suppressed")[1].split("clamp late")[0]
+
+
+ODD = """
+seed = 0
+[subjects]
+count = 5
+[subjects.parameters]
+td.loguniform = { low = "1 min", high = "900 min" }
+[[arms]]
+name = "a minute"
+duration = "1 min"
+[[arms]]
+name = "suppressed"
+duration = "30 h"
+secretion = 0
+glucose = [ { shape = "constant", rate = 100 } ]
+[[arms]]
+name = "clamp late"
+duration = "20 h"
+settle = "19 h"
+clamp = { glucose = "400 mg/dL", from = "19.5 h" }
+insulin = [ { shape = "constant", rate = "100 mU/min" } ]
+"""
+
+
 def test_a_sobol_cohort_counts_by_its_scrambles(tmp_path: Path) -> None:
     text = STUDY.replace("count = 2500", 'count = 1024\ndraw = "sobol"')
     run_study(study(tmp_path, text=text), tmp_path / "out", quiet=True)

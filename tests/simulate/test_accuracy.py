@@ -38,9 +38,9 @@ def ours(values: np.ndarray, arm: Arm, grid: np.ndarray) -> np.ndarray:
     return out
 
 
-def rates_function():  # type: ignore[no-untyped-def]
+def rates_function(secretion: float = 1.0):  # type: ignore[no-untyped-def]
     """The body's rates as a fast Python call: f(states, Gin, Iin, parameters) -> rates."""
-    source = np.ones(29)
+    source = np.full(29, secretion)
     call = ctypes.CFUNCTYPE(None, ctypes.c_void_p, ctypes.c_void_p)(compile_program(BODY.rates))
 
     def rates(x: np.ndarray, Gin: float, Iin: float, parameters: np.ndarray) -> np.ndarray:
@@ -170,3 +170,20 @@ def test_boluses_and_insulin_infusion() -> None:
             here = np.searchsorted(grid, inside)
             np.testing.assert_allclose(found[i, 0, here], reference.y[2, :-1] / (10 * parameters[VG]), rtol=1e-6)
             x = reference.y[:, -1]
+
+
+def test_insulin_that_fades_away_is_followed_to_the_end() -> None:
+    """Secretion suppressed and no insulin given: amounts fall by dozens of orders of magnitude, use tends to U0."""
+    arm = Arm("suppressed", 2880.0, glucose=(Constant(50.0),), secretion=0.0)
+    values, grid = random_bodies(12, 0.2, 15), np.arange(0.0, 2881.0, 60.0)
+    found, x0 = ours(values, arm, grid), state_at_start(values, arm)
+    rates = rates_function(secretion=0.0)
+    for i, parameters in enumerate(values):
+        reference = solve_ivp(
+            lambda t, x, p=parameters: rates(x, 50.0, 0.0, p),
+            (0, 1440), x0[i], method="DOP853", rtol=1e-12, atol=1e-30, t_eval=grid[grid <= 1440],
+        )  # fmt: skip
+        n = len(reference.t)
+        np.testing.assert_allclose(found[i, 0, :n], reference.y[2] / (10 * parameters[VG]), rtol=1e-6)
+        np.testing.assert_allclose(found[i, 1, :n], reference.y[0] / parameters[0], rtol=1e-5)
+    assert (found[:, 1, -1] > 0).all() and (found[:, 1, -1] < 1e-6).all()
