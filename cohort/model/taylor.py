@@ -383,10 +383,8 @@ class Stepper:
             largest = b.constant(1e-290)
             for i, state in enumerate(states):
                 size = b.absolute(recurrences.value(state, k))
-                if self.relative:
-                    term = b.div(size, b.absolute(recurrences.value(state, 0)))
-                else:
-                    term = b.mul(size, n + i)
+                own = b.absolute(recurrences.value(state, 0))
+                term = b.div(size, own) if self.relative else b.mul(size, n + i)
                 largest = b.larger(largest, term)
             exponent = b.mul(b.log(b.mul(largest, b.constant(1.0 / self.tolerance))), b.constant(-1.0 / k))
             shortest = exponent if shortest is None else b.smaller(shortest, exponent)

@@ -131,7 +131,7 @@ def by_events(subjects, orbits, i: int):  # type: ignore[no-untyped-def]
     events = [flat(2, -1.0), flat(2, 1.0), flat(0, -1.0), flat(0, 1.0)]
     out = solve_ivp(field, (0, 2.3 * orbits.period[i]), orbits.state[i], method="DOP853", rtol=1e-12, atol=1e-9,
                     events=events)  # fmt: skip
-    highs, lows, crests, troughs = out.t_events
+    highs, _, crests, _ = out.t_events
     Vp, Vg = subjects.parameters[i, 0], subjects.parameters[i, 2]
     return (
         highs[1] - highs[0], out.y_events[1][0][2] / (10 * Vg), out.y_events[0][0][2] / (10 * Vg),
