@@ -12,6 +12,9 @@ from pathlib import Path
 from cohort.errors import CohortError, Problem, StudyError
 
 INTERRUPTED = 130
+ASSAY_CV = {"glucose": 0.02, "insulin": 0.06}
+"""Usual assay errors (common practice), which the nadir-to-peak rule counts in."""
+
 DESCRIPTION = """In-silico cohorts and sensitivity studies of ultradian insulin-glucose oscillations.
 
 For research planning. Virtual subjects are not patients; not for diagnosis, dosing or care."""
@@ -82,6 +85,23 @@ def certify(words: argparse.Namespace) -> int:
     return 0 if found.kept else 3
 
 
+def detect(words: argparse.Namespace) -> int:
+    """Look for a rhythm in a clinic's own sampled series."""
+    from cohort.observe.detector import Rule
+    from cohort.observe.series import detect_series, lines
+    from cohort.observe.table import read_series
+
+    units = {k: v for k, v in (("time", words.time), ("glucose", words.glucose), ("insulin", words.insulin)) if v}
+    rule = Rule(false_alarm=words.false_alarm, detect_in=words.detect_in)
+    found = detect_series(read_series(Path(words.series), units), rule, ASSAY_CV)
+    for warning in found.warnings:
+        print(f"note: {warning}", file=sys.stderr)
+    print("\n".join(lines(found, rule)))
+    print("\nDetection is a statement about a sampled, noisy series; it is not proof of a limit cycle. For research only;\n"
+          "not for diagnosis, dosing or care.")  # fmt: skip
+    return 0
+
+
 def _warn(warnings: Sequence[Problem]) -> None:
     for warning in warnings:
         print(f"note: {warning}", file=sys.stderr)
@@ -117,10 +137,28 @@ def _parser() -> argparse.ArgumentParser:
     certifying = command("certify", certify, "integrate some subjects again at high order; print the worst differences")
     with_study(certifying)
     certifying.add_argument("n", nargs="?", type=_positive, default=200, metavar="N", help="how many (default 200)")
+    looking = command("detect", detect, "look for a rhythm in a clinic's own sampled series")
+    looking.add_argument("series", metavar="SERIES.csv", help="long (a row a sample) or wide (a column a subject)")
+    for name in ("time", "glucose", "insulin"):
+        looking.add_argument(f"--{name}", metavar="UNIT", help=f"unit of {name} where the header does not give it")
+    looking.add_argument(
+        "--false-alarm", type=_share, default=0.05, metavar="P", help="of the whole rule (default 0.05)"
+    )
+    looking.add_argument("--detect-in", choices=("glucose", "insulin", "either", "both"), default="glucose")
     listing = command("models", models, "models, parameters, units, published values, sources")
     listing.add_argument("name", nargs="?", metavar="NAME")
     command("schema", schema, "JSON Schema of the study file, for editors")
     return parser
+
+
+def _share(text: str) -> float:
+    try:
+        share = float(text)
+    except ValueError:
+        share = 0.0
+    if not 0.0 < share < 0.5:
+        raise argparse.ArgumentTypeError(f"{text!r} is not a share above 0 and below 0.5")
+    return share
 
 
 def _positive(text: str) -> int:

@@ -28,7 +28,7 @@ MAY_IMPORT: dict[str, set[str]] = {
     "study": {"errors", "quantities", "program", "model", "population", "tables"},
     "execute": {*FOUNDATION, "model", "simulate", "measure", "population", "infer", "study"},
     "report": {"errors", "quantities", "tables", "infer", "population", "model"},
-    "cli": {"errors", "study", "execute", "report"},
+    "cli": {"errors", "study", "execute", "report", "observe"},
     "__init__": {"errors", "simulate", "study", "execute", "report"},
     "__main__": {"cli"},
 }
