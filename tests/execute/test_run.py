@@ -352,12 +352,17 @@ def test_a_full_disk_stops_the_run_and_keeps_what_is_done(
     assert part_bytes(tmp_path / "out") == part_bytes(whole)
 
 
+def heed_interrupts() -> None:
+    """What a terminal gives a program; a test run in the background would hand down ignored interrupts."""
+    signal.signal(signal.SIGINT, signal.SIG_DFL)
+
+
 def test_ctrl_c_and_sigterm_end_with_130_and_can_be_carried_on(tmp_path: Path) -> None:
     path = tmp_path / "big.toml"
     path.write_text(STUDY.replace("count = 2500", "count = 300000"))
     words = [sys.executable, "-m", "cohort", "run", str(path), "--out", str(tmp_path / "out")]
     for number in (signal.SIGINT, signal.SIGTERM):
-        process = subprocess.Popen(words, cwd=ROOT, stderr=subprocess.PIPE, text=True)
+        process = subprocess.Popen(words, cwd=ROOT, stderr=subprocess.PIPE, text=True, preexec_fn=heed_interrupts)
         time.sleep(3.5)
         process.send_signal(number)
         _, said = process.communicate(timeout=60)
