@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.errors import nearest
-from cohort.observe.design import BAND_MIN, FEWEST_SAMPLES, Design, make_design, steps_kept
+from cohort.observe.design import BAND_MIN, FEWEST_SAMPLES, Design, make_design
 from cohort.observe.null import counted_missing, null_table
 from cohort.observe.sampling import Reading, Schedule, observe
 from cohort.observe.scan import Scan, scan_series
@@ -201,53 +201,34 @@ def _white(design: Design, scan: Scan, values: Array) -> dict[str, Array]:
     }
 
 
-def _shapes(design: Design, scan: Scan, values: Array, rule: Rule, assay_cv: float, forcing: Array) -> dict[str, Array]:
+def _shapes(design: Design, scan: Scan, values: Array, rule: Rule, assay_cv: float, forcing: Array) -> Columns:
     """What takes each series by itself: the refined harmonic, pulses, autocorrelation and power at the forcing."""
-    from cohort.observe.kernels import pulses, refine, share_at
+    from cohort.observe.kernels import describe
 
-    n = len(values)
-    harmonic, counted, shares = np.empty((n, 4)), np.empty(n), np.full(n, np.nan)
-    mean = np.empty(n)
-    low, high, step = design.frequencies[0], design.frequencies[-1], design.frequencies[1] - design.frequencies[0]
-    for i, row in enumerate(values):
-        present = ~np.isnan(row)
-        whole = bool(present.all())
-        y, times = (row, design.times_min) if whole else (row[present], design.times_min[present])
-        mean[i] = np.add.accumulate(y)[-1] / len(y)
-        b = design.backgrounds[scan.fitted_with[i]]
-        phi = b.phi if whole else steps_kept(times, b.tau_min)
-        y = y - mean[i]
-        refine(y, times, phi, b.rho, design.frequencies[scan.frequency[i]], step, low, high, harmonic[i])
-        counted[i] = pulses(y, rule.swing_sds * assay_cv * mean[i])
-        if np.isfinite(forcing[i]):
-            shares[i] = share_at(y, times, 1.0 / forcing[i])
-    correlation, lag = _autocorrelations(design, values)
+    phi = np.stack([b.phi for b in design.backgrounds])
+    rho = np.array([b.rho for b in design.backgrounds])
+    step = float(design.times_min[1] - design.times_min[0])
+    out = np.empty((len(values), 9))
+    describe(
+        values, design.times_min, phi, rho, scan.fitted_with, scan.frequency, design.frequencies,
+        rule.swing_sds * assay_cv, 1.0 / forcing, _lags(design, step), out,
+    )  # fmt: skip
     return {
-        "period_min": 1.0 / harmonic[:, 0],
-        "period_se_min": harmonic[:, 1] / harmonic[:, 0] ** 2,
-        "amplitude": 2.0 * harmonic[:, 2],
-        "relative_amplitude": harmonic[:, 2] / mean,
-        "half_ratio": harmonic[:, 3],
-        "pulses": counted,
-        "power_at_forcing": shares,
-        "autocorrelation": correlation,
-        "autocorrelation_period_min": lag,
+        "period_min": 1.0 / out[:, 0],
+        "period_se_min": out[:, 1] / (out[:, 0] * out[:, 0]),
+        "amplitude": 2.0 * out[:, 2],
+        "relative_amplitude": out[:, 2] / out[:, 4],
+        "half_ratio": out[:, 3],
+        "pulses": out[:, 5],
+        "power_at_forcing": out[:, 6],
+        "autocorrelation": out[:, 7],
+        "autocorrelation_period_min": out[:, 8] * step,
     }
 
 
-def _autocorrelations(design: Design, values: Array) -> tuple[Array, Array]:
-    """Highest peak in the band and its lag, min: float64[n] each; NaN where samples are not evenly spaced."""
-    from cohort.observe.kernels import correlogram, detrended
-
-    n = len(values)
-    found = np.full((2, n), np.nan)
-    step = design.times_min[1] - design.times_min[0]
+def _lags(design: Design, step: float) -> tuple[int, int]:
+    """First and last lag of the autocorrelation in samples; (0, 0) where samples are not evenly spaced."""
     if np.ptp(np.diff(design.times_min)) > 1e-9 * step:
-        return found[0], found[1]
-    first = max(int(np.ceil(design.band_min[0] / step)), 1)
-    last = min(int(design.band_min[1] / step), len(design.times_min) // 2)
-    for i, row in enumerate(values):
-        present = ~np.isnan(row)
-        found[0, i], lag = correlogram(detrended(row, present), present, first, last)
-        found[1, i] = lag * step
-    return found[0], found[1]
+        return 0, 0
+    longest = min(int(design.band_min[1] / step), len(design.times_min) // 2)
+    return max(int(np.ceil(design.band_min[0] / step)), 1), longest

@@ -456,3 +456,40 @@ def correlogram(y, present, first, last):  # type: ignore[no-untyped-def]
             bend = a - 2.0 * b + c
             best, where = b, lag + (0.5 * (a - c) / bend if bend < 0.0 else 0.0)
     return best, where
+
+
+@jit
+def describe(  # type: ignore[no-untyped-def]
+    values, times, phi, rho, fitted, place, frequencies, swing, forcing, lags, out
+):
+    """What takes each series by itself: float64[n, times] with NaN where missing.
+
+    phi float64[backgrounds, times] and rho of the grid; `fitted` and `place` the background and frequency of each
+    best rhythm; swing relative to the mean; forcing frequency, NaN for none; lags (first, last), last 0 for no
+    autocorrelation. Fills out[n, 9]: frequency, its standard error, amplitude, half ratio, mean, pulses, power at the
+    forcing, autocorrelation, its lag in samples.
+    """
+    n = values.shape[1]
+    step = frequencies[1] - frequencies[0]
+    low, high = frequencies[0], frequencies[frequencies.size - 1]
+    for s in range(values.shape[0]):
+        present = ~np.isnan(values[s])
+        m = present.sum()
+        y, at, kept = np.empty(m), np.empty(m), np.empty(m)
+        j, ahead, total = 0, 1.0, 0.0
+        for i in range(n):
+            ahead *= phi[fitted[s], i]
+            if present[i]:
+                y[j], at[j], kept[j] = values[s, i], times[i], ahead
+                total += y[j]
+                j, ahead = j + 1, 1.0
+        kept[0] = 0.0
+        mean = total / m
+        y -= mean
+        refine(y, at, kept, rho[fitted[s]], frequencies[place[s]], step, low, high, out[s])
+        out[s, 4] = mean
+        out[s, 5] = pulses(y, swing * mean)
+        out[s, 6] = share_at(y, at, forcing[s]) if forcing[s] > 0.0 else np.nan
+        out[s, 7] = out[s, 8] = np.nan
+        if lags[1] > 0:
+            out[s, 7], out[s, 8] = correlogram(detrended(values[s], present), present, lags[0], lags[1])
