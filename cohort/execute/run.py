@@ -162,19 +162,22 @@ def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, p
 # ---- the folder --------------------------------------------------------------------------------------------------
 
 
+def _refuse_foreign(out: Path) -> None:
+    """Before anything is written: a folder with other things in it and no record is somebody else's."""
+    other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
+    if other and not (out / "run.json").exists():
+        raise StudyError(
+            [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
+        )
+
+
 @contextlib.contextmanager
 def _locked(out: Path) -> Iterator[None]:
     """Hold the folder for this process; the kernel lets go of it if the process dies. Raises RunError where another
     run holds it."""
     import fcntl
 
-    path = out / "run.json"
-    if not path.exists():
-        other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
-        if other:
-            raise StudyError(
-                [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
-            )
+    _refuse_foreign(out)
     try:
         opened = (out / ".lock").open("a+")
     except OSError as error:
@@ -214,11 +217,6 @@ def _check_folder(study: Study, out: Path) -> dict[str, Any]:
     """Refuse a folder that holds something else; returns the record that was there, or {}."""
     path = out / "run.json"
     if not path.exists():
-        other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
-        if other:
-            raise StudyError(
-                [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
-            )
         return {}
     try:
         before: dict[str, Any] = json.loads(path.read_text())
