@@ -27,6 +27,9 @@ def check(words: argparse.Namespace) -> int:
     study = load_study(words.study, words.set)
     print(describe(study, plan(study, words.workers)))
     _warn(study.warnings)
+    if study.later:
+        print("note: checked, but `cohort run` refuses these until they are available:", file=sys.stderr)
+    _warn(study.later)
     return 0
 
 

@@ -46,6 +46,8 @@ def run_study(
 ) -> Finished:
     """Simulate what is missing in `out` and write it there. Raises StudyError where the folder holds another study,
     RunError where it cannot finish, KeyboardInterrupt when interrupted (also by SIGTERM); what is done stays."""
+    if study.later:
+        raise StudyError(study.later)
     workers = workers or os.cpu_count() or 1
     began = time.monotonic()
     try:

@@ -6,6 +6,7 @@ import copy
 import os
 import tomllib
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -61,7 +62,7 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study
         dict(_settings(tree.values)),
     )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))
-    return Study(**{**study.__dict__, "warnings": tuple(warnings)})
+    return replace(study, warnings=tuple(warnings), later=tuple(tree.later))
 
 
 def _settings(value: Any, path: str = "") -> Iterator[tuple[str, str]]:

@@ -18,7 +18,7 @@ _LEAVES: dict[str, dict[str, Any]] = {
 
 
 def json_schema() -> dict[str, Any]:
-    """JSON Schema (draft 2020-12) of every key that is available."""
+    """JSON Schema (draft 2020-12) of every key; those of later versions say so."""
     found = _table("")
     found["properties"]["model"]["enum"] = list(MODELS)
     return {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "cohort study", **found}
@@ -26,7 +26,7 @@ def json_schema() -> dict[str, Any]:
 
 def _table(pattern: str) -> dict[str, Any]:
     base = f"{pattern}." if pattern else ""
-    names = [n for n in children(pattern) if KEYS[base + n].available]
+    names = children(pattern)
     made: dict[str, Any] = {
         "type": "object",
         "properties": {n: _key(KEYS[base + n]) for n in names if n != "*"},
@@ -38,7 +38,8 @@ def _table(pattern: str) -> dict[str, Any]:
 
 
 def _key(key: Key) -> dict[str, Any]:
-    described = {"description": key.meaning + (f" (default: {key.default})" if key.default else "")}
+    default = f" (default: {key.default})" if key.default else ""
+    described = {"description": key.meaning + default + ("" if key.available else "; not available yet")}
     if key.kind == "tables":
         return {"type": "array", "items": _table(f"{key.path}[]"), **described}
     if key.kind == "table":
@@ -54,7 +55,6 @@ def _key(key: Key) -> dict[str, Any]:
             leaf["exclusiveMinimum" if key.above else "minimum"] = key.low
         if key.high < float("inf"):
             leaf["maximum"] = key.high
-    inner = [n for n in children(key.path) if KEYS[f"{key.path}.{n}"].available]
-    if inner:
+    if children(key.path):
         return {"anyOf": [leaf, _table(key.path)], **described}
     return {**leaf, **described}

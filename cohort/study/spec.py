@@ -25,7 +25,8 @@ class Study:
 
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
     file order; files: SHA-256 of every data file by the name the study gives it; settings: every key as it counts
-    (overrides applied, arms and strata by name), for telling what changed; warnings: legal but odd.
+    (overrides applied, arms and strata by name), for telling what changed; warnings: legal but odd; later: blocks that are
+    checked and that no run carries out yet.
     """
 
     path: Path
@@ -40,3 +41,4 @@ class Study:
     files: Mapping[str, str] = field(default_factory=dict)
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
+    later: tuple[Problem, ...] = ()

@@ -15,6 +15,8 @@ from cohort.study.units import UnitError, parse
 
 LARGEST_TEXT = 2_000_000
 _ANY = "*"
+UNREAD = ("map", "subjects.eligible", "subjects.match")
+"""Blocks whose keys are not settled yet: only their name is known."""
 
 
 @dataclass(frozen=True)
@@ -29,7 +31,8 @@ class Quantity:
 class Tree:
     """A study's values by path, converted, and every problem found on the way.
 
-    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out.
+    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out; later: blocks
+    that are checked but that no run carries out yet.
     """
 
     file: str
@@ -38,6 +41,8 @@ class Tree:
     values: dict[str, Any]
     problems: list[Problem] = field(default_factory=list)
     warnings: list[Problem] = field(default_factory=list)
+    later: list[Problem] = field(default_factory=list)
+    inside_later: bool = False
 
     def problem(self, path: Sequence[str | int], message: str) -> None:
         """Note a problem at a path."""
@@ -109,8 +114,15 @@ def _table(out: Tree, table: dict[str, Any], path: Path, pattern: str) -> dict[s
             out.problem(here, f"no such key{near}{listed}")
             continue
         key = KEYS[found]
-        if not key.available:
-            out.problem(here, "not available yet")
+        if not key.available and not out.inside_later:
+            out.later.append(out.place(here, "not available yet"))
+            if key.path in UNREAD:
+                continue
+            out.inside_later = True
+            good = _value(out, value, here, key)
+            out.inside_later = False
+            if good is not None:
+                converted[name] = good
             continue
         good = _value(out, value, here, key)
         if good is not None:
