@@ -8,6 +8,8 @@ from collections.abc import Sequence
 import numpy as np
 from numpy.typing import NDArray
 
+from cohort.population.functions import sine
+
 Array = NDArray[np.float64]
 Pairs = Sequence[tuple[tuple[str, str], float]]
 
@@ -16,7 +18,7 @@ _PSD = -1e-12
 
 def latent(spearman: float) -> float:
     """The normal scores' correlation that gives this rank correlation: 2 sin(pi rho / 6), exact for the normal law."""
-    return 2.0 * math.sin(math.pi * spearman / 6.0)
+    return 2.0 * sine(math.pi * spearman / 6.0)
 
 
 def latent_matrix(names: Sequence[str], pairs: Pairs) -> Array:

@@ -9,7 +9,8 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.population.functions import beta_cdf, beta_density, exp, log, normal_cdf, normal_quantile
+from cohort.population.beta import beta_quantile
+from cohort.population.functions import beta_cdf, exp, log, normal_cdf, normal_quantile
 
 Array = NDArray[np.float64]
 
@@ -133,14 +134,6 @@ class Triangular:
         return np.where(x < self.mode, left, np.where(x >= self.high, 1.0, right))
 
 
-@functools.lru_cache(maxsize=32)
-def _beta_table(a: float, b: float) -> tuple[Array, Array]:
-    """Places, dense towards both ends, and the share of the beta law below each."""
-    half = np.concatenate([[0.0], 2.0 ** -np.arange(60.0, 8.0, -1.0), np.arange(1, 129) / 256.0])
-    x = np.concatenate([half, 1.0 - half[-2::-1]])
-    return x, beta_cdf(x, a, b)
-
-
 @dataclass(frozen=True)
 class Beta:
     """Beta law with shapes alpha and beta, stretched over low..high."""
@@ -151,21 +144,8 @@ class Beta:
     beta: float
 
     def quantile(self, u: Array) -> Array:
-        """The inverse of I_x(alpha, beta): a bracket from a table, halved, then Newton kept inside it."""
-        u = np.asarray(u, dtype=np.float64)
-        x, share = _beta_table(self.alpha, self.beta)
-        place = np.clip(np.searchsorted(share, u), 1, len(x) - 1)
-        low, high = x[place - 1], x[place]
-        at = 0.5 * (low + high)
-        for step in range(12):
-            off = beta_cdf(at, self.alpha, self.beta) - u
-            low, high = np.where(off < 0.0, at, low), np.where(off < 0.0, high, at)
-            middle = 0.5 * (low + high)
-            with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-                newton = at - off / beta_density(at, self.alpha, self.beta)
-            inside = (newton >= low) & (newton <= high) & (step >= 4)
-            at = np.where(inside, newton, middle)
-        return self.low + at * (self.high - self.low)
+        """low + (high - low) times the inverse of I_x(alpha, beta)."""
+        return self.low + beta_quantile(u, self.alpha, self.beta) * (self.high - self.low)
 
     def cdf(self, x: Any) -> Array:
         """The distribution function."""
@@ -188,15 +168,22 @@ class Empirical:
     def high(self) -> float:
         return self.values[-1]
 
+    def __hash__(self) -> int:
+        return hash((len(self.values), self.values[0], self.values[-1], self.source))  # a file may hold a million
+
+    @functools.cached_property
+    def _sorted(self) -> Array:
+        return np.array(self.values)
+
     def quantile(self, u: Array) -> Array:
         """The smallest value that at least a share u of them does not exceed."""
         n = len(self.values)
         place = np.clip(np.ceil(np.asarray(u) * n).astype(np.int64) - 1, 0, n - 1)
-        return np.array(self.values)[place]
+        return self._sorted[place]
 
     def cdf(self, x: Any) -> Array:
         """The share of values not above x."""
-        return np.searchsorted(np.array(self.values), np.asarray(x, dtype=np.float64), side="right") / len(self.values)
+        return np.searchsorted(self._sorted, np.asarray(x, dtype=np.float64), side="right") / len(self.values)
 
 
 Law = Fixed | Lognormal | Normal | Uniform | Loguniform | Triangular | Beta | Empirical
@@ -221,11 +208,17 @@ class Cut:
         inner = bottom + np.asarray(u) * (self.top - bottom)
         return np.clip(self.law.quantile(np.clip(inner, 2.0**-60, 1.0 - 2.0**-53)), least, self.high)
 
+    def share(self, x: Array) -> Array:
+        """The cut law's distribution function."""
+        if isinstance(self.law, Fixed):
+            return self.law.cdf(x)
+        return np.clip((self.law.cdf(x) - self.bottom) / (self.top - self.bottom), 0.0, 1.0)
+
 
 def _share_below(law: Law, x: Any) -> Array:
     """The mass strictly below x."""
     if isinstance(law, Empirical):
-        return np.searchsorted(np.array(law.values), np.asarray(x), side="left") / len(law.values)
+        return np.searchsorted(law._sorted, np.asarray(x), side="left") / len(law.values)
     return law.cdf(x)
 
 
