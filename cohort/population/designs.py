@@ -8,7 +8,7 @@ import warnings
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.population.uniforms import generator, key, uniforms
+from cohort.population.uniforms import key, uniforms
 
 Array = NDArray[np.float64]
 
@@ -17,8 +17,9 @@ SCRAMBLES = 8
 
 
 @functools.lru_cache(maxsize=64)
-def _cells(seed: int, name: str, count: int) -> NDArray[np.int64]:
-    return generator(seed, "latin-hypercube", name).permutation(count)
+def _cells(seed: int, name: str, count: int) -> NDArray[np.int32]:
+    # the order of keyed uniforms, since numpy may change how it shuffles from version to version
+    return np.argsort(uniforms(seed, "latin-hypercube cells", name, 0, count), kind="stable").astype(np.int32)
 
 
 def stratified_uniforms(seed: int, name: str, count: int, start: int, stop: int) -> Array:

@@ -9,7 +9,7 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.population.copula import latent_factor
+from cohort.population.copula import latent, latent_factor
 from cohort.population.designs import sobol_uniforms, stratified_uniforms
 from cohort.population.functions import exp, log, normal_cdf, normal_quantile, power
 from cohort.population.laws import Cut, Fixed, Law, Lognormal, Normal, cut
@@ -129,7 +129,30 @@ class Recipe:
         """A stratum's law of a parameter within its physical range, and the mass that cuts off."""
         law = stratum.weight if name == WEIGHT else stratum.laws.get(name)
         assert law is not None
-        return cut(law, *self.range_of(name))
+        low, high = self.range_of(name)
+        if name == "U0" and "Um" in self.names:
+            high = min(high, float(np.nextafter(self._within_range(stratum, "Um").high, 0.0)))
+        return cut(law, low, high)
+
+    def order_cut(self, stratum: Stratum) -> float:
+        """The share of a stratum's people with Um <= U0, were the two drawn within their physical ranges alone.
+
+        It is what keeping Um > U0 cuts off: U0's law at the highest Um, then Um's law at the subject's U0.
+        """
+        if not {"U0", "Um"} <= set(self.names):
+            return 0.0
+        least, most = self._within_range(stratum, "U0"), self._within_range(stratum, "Um")
+        score = np.arange(-8.25, 8.25, 1.0 / 512.0)
+        weight = exp(-0.5 * score * score)
+        share = most.share(least.quantile(normal_cdf(score)))
+        r = next((latent(c.spearman) for c in stratum.correlations if set(c.pair) == {"U0", "Um"}), 0.0)
+        if r:
+            inner = normal_quantile(np.clip(share, 2.0**-60, 1.0 - 2.0**-53))
+            share = normal_cdf((inner - r * score) / np.sqrt(max(1.0 - r * r, 1e-12)))
+        return float(np.sum(weight * share) / np.sum(weight))
+
+    def _within_range(self, stratum: Stratum, name: str) -> Cut:
+        return cut(stratum.laws.get(name, Fixed(self.nominal[name])), *self.range_of(name))[0]
 
 
 @dataclass(frozen=True)
@@ -191,6 +214,7 @@ def from_uniforms(recipe: Recipe, code: int, u: Mapping[str, Array], n: int) -> 
             continue
         law, _ = recipe.cut_law(stratum, name)
         least = values[:, recipe.names.index("U0")] if name == "Um" and "U0" in recipe.names else None
+        least = None if least is None else np.nextafter(least, np.inf)
         values[:, i] = law.quantile(u[name] if name in u else np.full(n, 0.5), least)
     return _scaled(recipe, values, weight), weight
 
@@ -242,14 +266,23 @@ def _from_table(recipe: Recipe, table: Table, subject: NDArray[np.int64]) -> Sub
 def population_draw(recipe: Recipe, k: int) -> Recipe:
     """Return draw k of the population: medians (or means) and CVs times lognormals of their relative standard errors.
 
-    Draw 0 is the stated population. The draw reuses the main cohort's uniforms; its count is `inner`.
+    Draw 0 is the stated population. The draw reuses the main cohort's uniforms; its count is `inner`. Strata with the
+    same law of a parameter (most often one they all take from [subjects.parameters]) share its draw: it is one law.
     """
     assert recipe.population is not None
-    strata = tuple(
-        replace(s, laws={name: _drawn_law(recipe.seed, k, s.name, name, law) for name, law in s.laws.items()})
-        for s in recipe.strata
-    )
+    strata = tuple(_drawn_stratum(recipe, k, s) for s in recipe.strata)
     return replace(recipe, strata=strata if k else recipe.strata, count=recipe.population.inner, population=None)
+
+
+def _drawn_stratum(recipe: Recipe, k: int, stratum: Stratum) -> Stratum:
+    laws = {}
+    for name, law in stratum.laws.items():
+        owner = next(s.name for s in recipe.strata if s.laws.get(name) == law)
+        laws[name] = _drawn_law(recipe.seed, k, owner, name, law)
+    if stratum.weight is None:
+        return replace(stratum, laws=laws)
+    owner = next(s.name for s in recipe.strata if s.weight == stratum.weight)
+    return replace(stratum, laws=laws, weight=_drawn_law(recipe.seed, k, owner, WEIGHT, stratum.weight))
 
 
 def _drawn_law(seed: int, k: int, stratum: str, name: str, law: Law) -> Law:

@@ -1,5 +1,7 @@
 """Laws, copula, strata, sizes, designs and seeds against SciPy and by hand."""
 
+import math
+import time
 from dataclasses import replace
 
 import numpy as np
@@ -84,6 +86,8 @@ def test_functions_outside_their_domain() -> None:
         (Beta(10.0, 30.0, 2.0, 3.5), stats.beta(2.0, 3.5, loc=10.0, scale=20.0)),
         (Beta(0.0, 1.0, 0.4, 6.0), stats.beta(0.4, 6.0)),
         (Beta(0.0, 1.0, 150.0, 90.0), stats.beta(150.0, 90.0)),
+        (Beta(0.0, 1.0, 1.0, 1.0), stats.uniform()),
+        (Beta(0.0, 1.0, 3000.0, 0.5), stats.beta(3000.0, 0.5)),
     ],
 )
 def test_quantiles_and_distribution_functions_against_scipy(law, theirs) -> None:  # type: ignore[no-untyped-def]
@@ -97,6 +101,15 @@ def test_lognormal_moments_are_the_stated_ones() -> None:
     assert np.median(made) == pytest.approx(210.0, rel=1e-4)
     assert made.std() / made.mean() == pytest.approx(0.3, rel=2e-3)
     assert made.mean() == pytest.approx(210.0 * np.sqrt(1.09), rel=1e-4)  # mean = median sqrt(1 + cv^2)
+
+
+@settings(max_examples=15, deadline=None)
+@given(st.floats(0.15, 300.0), st.floats(0.15, 300.0))
+def test_beta_quantiles_of_any_shape(a: float, b: float) -> None:
+    u = np.concatenate([EVEN[::40], 10.0 ** -np.arange(2.0, 12.0), 1.0 - 10.0 ** -np.arange(2.0, 12.0)])
+    found = Beta(0.0, 1.0, a, b).quantile(u)
+    np.testing.assert_allclose(found, special.betaincinv(a, b, u), atol=2e-12, rtol=1e-10)
+    assert (np.diff(found[np.argsort(u)]) >= 0.0).all()
 
 
 def test_empirical_law_gives_the_values_seen_in_equal_shares() -> None:
@@ -190,6 +203,8 @@ def test_ranks_correlate_as_asked_and_margins_stay() -> None:
 def test_latent_correlation_values() -> None:
     # exact: 2 sin(pi rho / 6)
     np.testing.assert_allclose([latent(r) for r in (0.3, 0.6, 0.9)], [0.3129, 0.6180, 0.9080], atol=5e-5)
+    for rho in np.linspace(-1.0, 1.0, 201):
+        assert latent(rho) == pytest.approx(2.0 * math.sin(math.pi * rho / 6.0), abs=4e-16)
 
 
 def test_an_impossible_matrix_is_known_and_the_nearest_one_found() -> None:
@@ -237,6 +252,45 @@ def test_most_use_stays_above_least_use() -> None:
     assert (column(made, "Um", r) > column(made, "U0", r)).all()
 
 
+@settings(max_examples=40, deadline=None)
+@given(st.sampled_from([None, Fixed(300.0), Uniform(50.0, 60.0), Beta(45.0, 90.0, 0.5, 2.0), Empirical((50.0, 70.0))]),
+       st.sampled_from([Lognormal(40.0, 0.5), Uniform(30.0, 80.0), Empirical((30.0, 50.0, 69.0))]),
+       st.sampled_from([0.0, 0.9, -0.9]))  # fmt: skip
+def test_most_use_stays_above_least_use_whatever_the_laws(most, least, rho: float) -> None:  # type: ignore[no-untyped-def]
+    laws = {"U0": least} | ({"Um": most} if most else {})
+    tied = (Correlation(("U0", "Um"), rho),) if rho and most and not isinstance(most, Fixed) else ()
+    r = recipe(laws, strata=(Stratum("all", 1.0, laws, None, tied),), count=3000)
+    made = draw(r, 0, 3000)
+    assert (column(made, "Um", r) > column(made, "U0", r)).all()
+    if most and not isinstance(most, Fixed):
+        assert most.low <= column(made, "Um", r).min() and column(made, "Um", r).max() <= most.high
+
+
+@pytest.mark.parametrize("rho", [0.0, 0.5, -0.5])
+def test_the_share_that_order_cuts_off(rho: float) -> None:
+    # exact: ln Um - ln U0 is normal with variance 2 s^2 (1 - r), r the latent correlation
+    laws = {"U0": Lognormal(40.0, 0.5), "Um": Lognormal(60.0, 0.5)}
+    tied = (Correlation(("Um", "U0"), rho),) if rho else ()
+    r = recipe(laws, strata=(Stratum("all", 1.0, laws, None, tied),))
+    spread = laws["U0"].sigma * np.sqrt(2.0 - 2.0 * latent(rho))
+    assert r.order_cut(r.strata[0]) == pytest.approx(stats.norm.cdf(np.log(40.0 / 60.0) / spread), rel=2e-6)
+
+
+def test_the_share_that_order_cuts_off_beside_fixed_values() -> None:
+    def share(laws) -> float:  # type: ignore[no-untyped-def]
+        r = recipe(laws)
+        return r.order_cut(r.strata[0])
+
+    assert share({}) == 0.0 and share({"U0": Fixed(940.0)}) == 1.0
+    assert share({"Um": Uniform(10.0, 110.0)}) == pytest.approx(0.3)  # below the published U0, 40
+    assert share({"U0": Uniform(840.0, 1040.0)}) == pytest.approx(0.5, abs=1e-3)  # above the published Um, 940
+    steady = MODELS["steady-liver"]
+    r = Recipe(
+        1, 8, "random", tuple(p for p in steady.parameters if p != "Um"), steady.nominal, (Stratum("a", 1.0, {}),)
+    )
+    assert r.order_cut(r.strata[0]) == 0.0
+
+
 def test_latin_hypercube_has_one_subject_in_every_cell() -> None:
     u = stratified_uniforms(3, "td", 512, 0, 512)
     assert sorted((u * 512).astype(int)) == list(range(512))
@@ -281,6 +335,37 @@ def test_population_draws_move_medians_and_spreads_and_keep_the_uniforms() -> No
     assert normal.strata[0].laws["tp"] != Normal(6.0, 1.0)
     u = normal_cdf(np.log(column(draw(population_draw(r, 1), 0, 256), "Rm", r) / medians[0]) / drawn[0].sigma)
     np.testing.assert_allclose(u, uniforms(41, "parameter", "Rm", 0, 256), atol=1e-9)
+
+
+def test_strata_that_share_a_law_share_its_draw_and_weights_are_drawn_too() -> None:
+    shared, own = Lognormal(210.0, 0.3, median_rse=0.05), Lognormal(80.0, 0.3, median_rse=0.05)
+    heavy = Lognormal(74.0, 0.2, median_rse=0.05)
+    strata = (
+        Stratum("usual", 0.75, {"Rm": shared, "C4": own}, heavy),
+        Stratum("reduced", 0.25, {"Rm": shared, "C4": replace(own, median=110.0)}, heavy),
+    )
+    r = recipe({}, strata=strata, population=Outer(50, 16))
+    drawn = [population_draw(r, k).strata for k in range(1, 51)]
+    assert all(a.laws["Rm"] == b.laws["Rm"] and a.weight == b.weight for a, b in drawn)
+    moved = np.log(
+        [[a.laws["C4"].median / 80.0, b.laws["C4"].median / 110.0, a.weight.median / 74.0] for a, b in drawn]
+    )
+    np.testing.assert_allclose(moved.std(axis=0), 0.05, rtol=0.35)
+    assert np.abs(np.corrcoef(moved.T)[np.triu_indices(3, 1)]).max() < 4 / np.sqrt(50)
+
+
+def test_twenty_parameters_of_a_subject_take_less_than_a_microsecond_each() -> None:
+    kinds = (lambda v: Lognormal(v, 0.15), lambda v: Normal(v, 0.1 * v), lambda v: Beta(0.5 * v, 2.0 * v, 2.0, 3.5))
+    laws = {p: kinds[i % 3](v) for i, (p, v) in enumerate(CARD.nominal.items())}
+    for design in ("random", "latin-hypercube", "sobol"):
+        r = recipe(laws, draw=design, count=1 << 17)
+        draw(r, 0, 16384)
+        took = []
+        for start in range(0, 5 * 16384, 16384):
+            begun = time.perf_counter()
+            draw(r, start, start + 16384)
+            took.append(time.perf_counter() - begun)
+        assert min(took) < 1e-6 * 16384 * len(laws)
 
 
 def test_size_scaling_and_infusion_per_kg_leave_concentrations_alone() -> None:
