@@ -277,15 +277,20 @@ def _check_correlations(tree: Tree, made: Recipe) -> None:
 
 
 def _check_order(tree: Tree, made: Recipe) -> None:
+    """Um > U0 by the rule of every cut: mass above 1e-6 is said, above 1 % refused. Once, for the first stratum."""
     for stratum in made.strata:
         most, least = (stratum.laws.get(p, Fixed(made.nominal.get(p, np.nan))) for p in ("Um", "U0"))
-        if isinstance(most, Fixed) and isinstance(least, Fixed) and not most.value > least.value:
-            tree.problem(("subjects", "parameters"), f"Um ({most.value:g}) must be above U0 ({least.value:g})")
-            return
-        top = most.value if isinstance(most, Fixed) else most.high
-        if not isinstance(least, Fixed) and isinstance(most, Fixed):
-            mass = 1.0 - float(least.cdf(top))
-            if mass > 0.0:
-                tree.problem(("subjects", "parameters", "U0"), f"{mass:.2g} of this law is above Um, which is fixed at "
-                             f"{top:g}; cut it with high, or let Um vary")  # fmt: skip
+        if isinstance(most, Fixed) and isinstance(least, Fixed):
+            if not most.value > least.value:
+                tree.problem(("subjects", "parameters"), f"Um ({most.value:g}) must be above U0 ({least.value:g})")
                 return
+            continue
+        mass = made.order_cut(stratum)
+        path = ("subjects", "parameters", "U0" if isinstance(most, Fixed) else "Um")
+        if mass > CUT_REFUSED:
+            tree.problem(path, f"in {mass:.1%} of people Um would not be above U0; at most 1 % may be cut off. Keep the two "
+                         "laws further apart")  # fmt: skip
+            return
+        if mass > CUT_SHOWN:
+            tree.warnings.append(tree.place(path, f"in {mass:.2g} of people Um would not be above U0; that is cut off"))
+            return

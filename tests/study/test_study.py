@@ -240,7 +240,10 @@ BROKEN: list[tuple[str, str]] = [
     (SHORT + P + "tp.normal = { mean = 6, sd = 6 }", "of this law lies outside the physical range 0.1 to 300 min"),
     (SHORT + P + "tp.normal = { mean = -6, sd = 1, mean_rse = 0.1 }", "must be > 0 where mean_rse or cv_rse is given"),
     (SHORT + P + "Um = 30", "Um (30) must be above U0 (40)"),
-    (SHORT + P + "U0.lognormal = { median = 500, cv = 0.5 }", "of this law is above Um, which is fixed at 940"),
+    (SHORT + P + "U0.lognormal = { median = 500, cv = 0.5 }", "of people Um would not be above U0; at most 1 % may be cut off"),
+    (SHORT + P + "U0.lognormal = { median = 40, cv = 0.5 }\nUm.uniform = { low = 50, high = 60 }",
+     "of people Um would not be above U0; at most 1 % may be cut off"),
+    (SHORT + P + "Um.uniform = { low = 10, high = 110 }", "in 30.0% of people Um would not be above U0"),
     (SHORT + P + "td.empirical = { file = 'none.csv', column = 'td' }", "no file 'none.csv' beside the study"),
     (SHORT + P + "td.empirical = { file = '../../pyproject.toml', column = 'td' }", "lies outside the study's folder"),
     (SHORT + P + "td.empirical = { file = 'contract.toml', column = 'td' }", "contract.toml: row 2 has 1 cells"),
@@ -410,7 +413,8 @@ def test_an_empirical_law_reads_its_column(tmp_path: Path) -> None:
          "shorter than the published body's slowest transient here (e-folding 7.5 h)"),
         (SHORT + "glucose = [{ shape = 'constant', rate = '3 mg/kg/min' }]\n[subjects.size]\nweight = 70\n"
          "scaling = 'allometric'", "heavy subjects get more for what they can use"),
-        (SHORT + P + "tp.normal = { mean = 6, sd = 1.25 }", "of this law lies outside the physical range"),
+        (SHORT + P + "U0.lognormal = { median = 250, cv = 0.35 }", "of people Um would not be above U0; that is cut off"),
+    (SHORT + P + "tp.normal = { mean = 6, sd = 1.25 }", "of this law lies outside the physical range"),
     ],
 )  # fmt: skip
 def test_what_is_legal_but_odd_is_said(text: str, expected: str) -> None:
