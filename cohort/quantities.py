@@ -191,3 +191,56 @@ INCIDENCE_COLUMNS: tuple[Column, ...] = (
     ),
     Column("method", "text", "", "how the interval was made"),
 )
+
+RANKING_COLUMNS: tuple[Column, ...] = (
+    Column("stratum", "text", "", "the subgroup ranked"),
+    Column("arm", "text", "", "what was done"),
+    Column(
+        "kind", "text", "", "design: a row of the design; plain: an independent row; redraw: one with a factor redrawn"
+    ),
+    Column("doubling", "int64", "", "the doubling the row came with: 0 holds each replicate's first 16 points"),
+    Column("replicate", "int64", "", "scramble of the design, or trajectory; of redraws the attempt, from 1"),
+    Column("block", "text", "", "A, B, or one with a factor of the other; step of a trajectory; the factor redrawn"),
+    Column("position", "int64", "", "point within its replicate"),
+)
+
+ESTIMANDS: dict[str, str] = {
+    "everyone": "share of the variance over everyone",
+    "unresolved as no": "share of the variance over everyone, unresolved runs counted as not oscillating",
+    "unresolved as yes": "share of the variance over everyone, unresolved runs counted as oscillating",
+    "elementary effects": "change when one factor moves across the middle 95 % of its law, the rest anywhere",
+    "association": "how well one factor predicts it, correlations included",
+    "fair share": "each factor's share of the variance, what several do together split evenly",
+    "left unexplained": "share of the variance that stays if all the other factors are known",
+    "association among oscillators": "how well one factor predicts it among those who oscillate, selection included",
+    "mechanism among oscillators": "share of the variance that stays if one factor is redrawn within those who oscillate",
+    "fair share among oscillators": "each factor's share of the variance among those who oscillate",
+    "difference between arms": "the first arm's index minus the second's, same people",
+}
+"""What an index speaks of: the column `estimand`, and the sentence that goes with it."""
+
+VERDICTS = ("decides", "matters through interactions", "matters little", "cannot be told from nothing at this size")
+
+SENSITIVITY_COLUMNS: tuple[Column, ...] = (
+    Column("arm", "text", "", "what was done; of differences: one arm minus another"),
+    Column("stratum", "text", "", "the subgroup ranked"),
+    Column("outcome", "text", "", "the outcome; periods in their logarithm"),
+    Column("estimand", "text", "", "what the index speaks of"),
+    Column("parameter", "text", "", "the factor: a parameter, weight, or a group; null where the whole is refused"),
+    Column("other", "text", "", "the second factor of a pair"),
+    Column("index", "text", "", "S1, ST, S2, mu, mu_star, sigma, shapley or T"),
+    Column("value", "float64", "1", "the index; mu, mu_star and sigma in the outcome's unit"),
+    Column("low", "float64", "1", "lower end of its 95 % interval"),
+    Column("high", "float64", "1", "upper end"),
+    Column("n", "int64", "", "runs it rests on"),
+    Column("method", "text", "", "estimator and interval"),
+    Column("floor", "float64", "1", "what an input without influence, or the engine's tolerance alone, may give"),
+    Column("verdict", "text", "", "the same in words"),
+    Column("refused", "text", "", "why there is no value"),
+)
+
+CONVERGENCE_COLUMNS: tuple[Column, ...] = (
+    *(c for c in SENSITIVITY_COLUMNS if c.name in ("arm", "stratum", "outcome", "estimand", "parameter", "index")),
+    Column("doubling", "int64", "", "doublings of the design's first 16 points a replicate"),
+    *(c for c in SENSITIVITY_COLUMNS if c.name in ("value", "low", "high", "n")),
+)

@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 
 from cohort.quantities import (
     CLAMP_OUTCOMES,
+    CONVERGENCE_COLUMNS,
     COURSE_COLUMNS,
     CYCLE_OUTCOMES,
     INCIDENCE_COLUMNS,
@@ -29,6 +30,8 @@ from cohort.quantities import (
     KEY_COLUMNS,
     MEAL_OUTCOMES,
     PARAMETERS,
+    RANKING_COLUMNS,
+    SENSITIVITY_COLUMNS,
     WINDOW_OUTCOMES,
     Column,
 )
@@ -81,6 +84,23 @@ def outcomes_schema(clamped: bool) -> Schema:
 MEALS = Schema("meals", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *MEAL_OUTCOMES))
 TIME_COURSES = Schema("time_courses", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *COURSE_COLUMNS))
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
+SENSITIVITY = Schema("sensitivity", SENSITIVITY_COLUMNS)
+CONVERGENCE = Schema("convergence", CONVERGENCE_COLUMNS)
+
+
+def ranking_schema(varied: Sequence[str], clamped: bool, meals: int) -> Schema:
+    """ranking/: a row a run of the ranking; with the outcomes of clamps and meals where an arm of the study has them."""
+    known = PARAMETERS | INPUT_PARAMETERS
+    parameters = tuple(Column(p, "float64", known[p].unit, known[p].meaning) for p in varied)
+    eaten = tuple(
+        Column(f"meal_{k}.{c.name}", c.kind, c.unit, f"meal {k}: {c.meaning}")
+        for k in range(1, meals + 1)
+        for c in MEAL_OUTCOMES
+        if c.name not in ("meal", "meal_time_min")
+    )
+    extra = CLAMP_OUTCOMES if clamped else ()
+    weight = KEY_COLUMNS["body_weight_kg"]
+    return Schema("ranking", (*RANKING_COLUMNS, weight, *parameters, *CYCLE_OUTCOMES, *WINDOW_OUTCOMES, *extra, *eaten))
 
 
 # ---- numbers to Arrow --------------------------------------------------------------------------------------------
@@ -103,7 +123,8 @@ def _array(column: Column, values: Any, n: int) -> pa.Array:
         numbers = values.astype(np.float64)
         return pa.array(numbers, mask=np.isnan(numbers))
     if column.kind == "int64":
-        return pa.array(values.astype(np.int64))
+        whole = values.astype(np.int64)
+        return pa.array(whole, mask=whole < 0)  # no whole number of ours is below 0
     if column.kind == "bool":
         return pa.array(values == 1, mask=values == -1)
     codes = pa.array(np.maximum(values, 0).astype(np.int32), mask=values < 0)
@@ -236,8 +257,16 @@ def read_part(folder: Path, number: int, columns: Sequence[str]) -> pa.Table:
     path = folder / part_name(number)
     try:
         known = set(pq.read_schema(path).names)
-        return pq.read_table(path, columns=[c for c in columns if c in known], use_threads=False)
     except (OSError, pa.ArrowException) as error:
+        raise ValueError(f"{path}: {str(error).splitlines()[0]}") from None
+    return read_file(path, [c for c in columns if c in known])
+
+
+def read_file(path: Path, columns: Sequence[str]) -> pa.Table:
+    """Columns of one Parquet file. Raises ValueError where it cannot be read or lacks one."""
+    try:
+        return pq.ParquetFile(path).read(list(columns), use_threads=False).select(list(columns))
+    except (OSError, pa.ArrowException, KeyError) as error:
         raise ValueError(f"{path}: {str(error).splitlines()[0]}") from None
 
 

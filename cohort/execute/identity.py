@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import hashlib
 import json
+from ast import literal_eval
 from collections.abc import Mapping
-from dataclasses import fields, is_dataclass
+from dataclasses import fields, is_dataclass, replace
 from typing import Any
 
 import numpy as np
 
 from cohort.compiled import kernel_identity
+from cohort.infer.ranking import Design, Ranking
 from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
 from cohort.population.laws import Empirical
@@ -19,10 +21,10 @@ from cohort.study import Study
 
 COLUMNS = (CYCLE_OUTCOMES, WINDOW_OUTCOMES, CLAMP_OUTCOMES, MEAL_OUTCOMES, COURSE_COLUMNS)
 
-GROWING = ("subjects.count",)
-"""Keys that may grow in a folder that holds results; arms may be added."""
+GROWING = ("subjects.count", "ranking.base", "ranking.max_runs")
+"""Keys that may grow in a folder that holds results; arms and outcomes to rank may be added."""
 
-UNSEEN = ("title", "output.")
+UNSEEN = ("title", "output.", "ranking.tolerance")
 """Keys that no stored number depends on."""
 
 
@@ -59,6 +61,16 @@ def arm_identity(study: Study, arm: Arm, table: str) -> str:
     return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE, plain(COLUMNS)])
 
 
+def ranking_identity(study: Study, design: Design, arm: Arm) -> str:
+    """Of an arm's runs of a ranking: the stratum's laws, the design without its size, the arm, kernels and accuracy."""
+    recipe = plain(study.recipe)[1]
+    for key in ("count", "draw", "population"):
+        recipe.pop(key)
+    recipe["strata"] = [plain(replace(s, share=1.0)) for s in study.recipe.strata if s.name == design.stratum]
+    kernels = [kernel_identity(), ORDER, TOLERANCE, plain(COLUMNS)]
+    return _digest(["ranking", study.model, recipe, plain(design), plain(arm), *kernels])
+
+
 def _arm_of(key: str, settings: Mapping[str, str]) -> str:
     """The name of the arm a key belongs to; names may hold dots, so the arms' own name keys decide."""
     names = [value for k, value in settings.items() if k.startswith("arms.") and k == f"arms.{value}.name"]
@@ -70,13 +82,22 @@ def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: se
 
     arms: names that were there before; draw: how people are drawn (a Latin hypercube cannot grow).
     """
+    ranked = any(key.startswith("ranking.") for key in before)
     for key in dict.fromkeys((*before, *now)):
         if key.startswith(UNSEEN) or before.get(key) == now.get(key):
             continue
-        grown = key in GROWING and int(now.get(key, 0)) >= int(before.get(key, 0))
-        if grown and draw != "latin-hypercube":
+        if key.startswith("ranking.") and not ranked:
+            continue
+        if key in GROWING and _grown(key, before, now) and not (key == "subjects.count" and draw == "latin-hypercube"):
+            continue
+        if key == "ranking.outcomes" and set(literal_eval(before[key])) <= set(literal_eval(now.get(key, "[]"))):
             continue
         if key.startswith("arms.") and key not in before and _arm_of(key, now) not in arms:
             continue
         return key
     return None
+
+
+def _grown(key: str, before: Mapping[str, str], now: Mapping[str, str]) -> bool:
+    usual = {"ranking.base": Ranking.base, "ranking.max_runs": Ranking.max_runs}
+    return int(now.get(key, usual.get(key, 0))) >= int(before.get(key, usual.get(key, 0)))

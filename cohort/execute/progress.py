@@ -14,14 +14,24 @@ PLAIN_EVERY_S = 30.0
 
 
 class Progress:
-    """Counts subjects done of `total`; `done_before` were there when the run began. Threads may call `add`."""
+    """Counts runs done of all; some were there when the run began. Threads may call `add`."""
 
-    def __init__(self, total: int, done_before: int, stream: TextIO | None = None) -> None:
-        self.total, self.done, self.before = total, done_before, done_before
+    def __init__(self, stream: TextIO | None = None) -> None:
+        self.total = self.done = self.before = 0
         self.stream = stream or sys.stderr
         self.live = self.stream.isatty()
         self._began = self._shown = time.monotonic()
         self._lock = threading.Lock()
+
+    def begin(self, total: int, there: int) -> None:
+        """Note that a run has `total` runs, of which so many were there."""
+        self.total, self.done, self.before = total, there, there
+        self._began = time.monotonic()
+
+    def more(self, runs: int) -> None:
+        """Note that so many more runs are to do."""
+        with self._lock:
+            self.total += runs
 
     def add(self, subjects: int) -> None:
         """Note that so many more runs are finished."""

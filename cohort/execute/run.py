@@ -10,8 +10,9 @@ import signal
 import sys
 import threading
 import time
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
+from functools import partial
 from importlib import metadata
 from pathlib import Path
 from typing import Any
@@ -21,14 +22,15 @@ from cohort.execute.courses import keep_courses
 from cohort.execute.facts import arm_facts
 from cohort.execute.identity import arm_identity, first_difference, subjects_identity
 from cohort.execute.progress import Progress
+from cohort.execute.ranking import run_ranking, slots_of, strays_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
 from cohort.execute.stages import rows
+from cohort.execute.tasks import Job, Piece, run_jobs
+from cohort.infer.facts import as_plain
+from cohort.infer.salib import load as load_salib
 from cohort.study import Study, plan
 from cohort.study.plan import SHARD
 from cohort.tables import write_bytes
-
-WINDOW_SUB_BATCHES = 64
-"""Sub-batches handed to dask at once: enough to keep workers busy, few enough that memory stays flat."""
 
 
 @dataclass(frozen=True)
@@ -59,14 +61,41 @@ def run_study(
         record = _record(study, workers, shard_size, before)
         with _recorded(out, record):
             _write_record(out, record, "running")
-            for path in strays(study, out, shard_size):
+            for path in (*strays(study, out, shard_size), *strays_of(out)):
                 path.unlink()
-            done, kept = _simulate(study, out, workers, shard_size, quiet)
-            keep_courses(study, out)
+            with _progress(quiet) as progress:
+                done, kept = _all_runs(study, out, workers, shard_size, progress, record)
             seconds = time.monotonic() - began
             record["timings"] = {"seconds": round(seconds, 3), "runs": done}
             _write_record(out, record, "done")
     return Finished(out, done, kept, seconds)
+
+
+@contextlib.contextmanager
+def _progress(quiet: bool) -> Iterator[Progress | None]:
+    progress = None if quiet else Progress()
+    try:
+        yield progress
+    finally:
+        if progress:
+            progress.end()
+
+
+def _all_runs(
+    study: Study, out: Path, workers: int, shard_size: int, progress: Progress | None, record: dict[str, Any]
+) -> tuple[int, int]:
+    """The cohort, then the ranking; what the ranking did goes into the record."""
+    if study.ranking:
+        threading.Thread(target=load_salib, daemon=True).start()  # takes a second or two, beside the simulation
+    _compile(study)
+    done, kept = _simulate(study, out, workers, shard_size, progress)
+    keep_courses(study, out)
+    if study.ranking:
+        slots = {arm["name"]: arm["slot"] for arm in record["ranking"]["arms"]}
+        ranked = run_ranking(study, out, workers, progress, slots)
+        record["ranking"] = as_plain(ranked.facts)
+        done, kept = done + ranked.made, kept + ranked.kept
+    return done, kept
 
 
 @contextlib.contextmanager
@@ -91,74 +120,28 @@ def _why(error: OSError) -> str:
     return (error.strerror or str(error)).lower()
 
 
-def _simulate(study: Study, out: Path, workers: int, shard_size: int, quiet: bool) -> tuple[int, int]:
-    """Do the missing work; returns (runs simulated, runs that were there)."""
+def _simulate(study: Study, out: Path, workers: int, shard_size: int, progress: Progress | None) -> tuple[int, int]:
+    """Do the missing work of the cohort; returns (runs simulated, runs that were there)."""
     left = missing(study, out, shard_size)
     todo = sum(len(w.arms) * (w.shard.last - w.shard.first) for w in left)
-    total = study.recipe.count * len(study.arms)
-    progress = Progress(total, total - todo) if not quiet else None
-    if left:
-        first = left[0].shard.first
-        rows(study, first, first + 1, left[0].arms)  # compiles, once, before there are threads
-    try:
-        for window in _windows(left):
-            _run_window(study, out, window, workers, progress)
-    finally:
-        if progress:
-            progress.end()
-    return todo, total - todo
+    there = study.recipe.count * len(study.arms) - todo
+    if progress:
+        progress.begin(todo + there, there)
+    run_jobs((_job(study, out, work) for work in left), workers, progress)
+    return todo, there
 
 
-def _windows(left: Sequence[Work]) -> Iterator[list[Work]]:
-    window: list[Work] = []
-    size = 0
-    for work in left:
-        window.append(work)
-        size += len(list(work.shard.sub_batches()))
-        if size >= WINDOW_SUB_BATCHES:
-            yield window
-            window, size = [], 0
-    if window:
-        yield window
+def _job(study: Study, out: Path, work: Work) -> Job:
+    pieces = tuple(
+        Piece((end - start) * len(work.arms), partial(rows, study, start, end, work.arms))
+        for start, end in work.shard.sub_batches()
+    )
+    return Job(f"shard {work.shard.number}", pieces, partial(commit, study, out, work))
 
 
-def _run_window(study: Study, out: Path, window: Sequence[Work], workers: int, progress: Progress | None) -> None:
-    """One graph: a task a sub-batch, and for each shard one that writes its parts when the last is home."""
-    from concurrent.futures import ThreadPoolExecutor
-
-    from dask.threaded import get
-
-    stop = threading.Event()
-
-    def simulate(start: int, end: int, arms: tuple[str, ...]) -> dict[str, Any]:
-        if stop.is_set():
-            raise KeyboardInterrupt
-        found = rows(study, start, end, arms)
-        if progress:
-            progress.add((end - start) * len(arms))
-        return found
-
-    def write(work_index: int, *pieces: dict[str, Any]) -> int:
-        if stop.is_set():
-            raise KeyboardInterrupt
-        return commit(study, out, window[work_index], pieces)
-
-    graph: dict[Any, Any] = {}
-    ends = []
-    for i, work in enumerate(window):
-        keys = []
-        for start, end in work.shard.sub_batches():
-            key = f"rows-{start}"
-            graph[key] = (simulate, start, end, work.arms)
-            keys.append(key)
-        graph[f"shard-{work.shard.number}"] = (write, i, *keys)
-        ends.append(f"shard-{work.shard.number}")
-    with ThreadPoolExecutor(workers) as pool:  # its end waits: no thread writes once the folder is let go
-        try:
-            get(graph, ends, pool=pool)
-        except BaseException:
-            stop.set()
-            raise
+def _compile(study: Study) -> None:
+    """Compile once, before there are threads."""
+    rows(study, 0, 1, [arm.name for arm in study.arms])
 
 
 # ---- the folder --------------------------------------------------------------------------------------------------
@@ -264,6 +247,9 @@ def _record(study: Study, workers: int, shard_size: int, before: Mapping[str, An
             "subjects": subjects_identity(study),
             "outcomes": {arm.name: arm_identity(study, arm, "outcomes") for arm in study.arms},
         },
+        "ranking": {"arms": [{"name": n, "slot": i} for n, i in slots_of(study, before).items()]}
+        if study.ranking
+        else None,
         "settings": dict(study.settings),
         "overrides": list(study.overrides),
         "study_texts": [*texts, study.text.decode("utf-8", "replace")],

@@ -69,6 +69,22 @@ class Results:
 
         return read_table(self.folder / "incidence.parquet")
 
+    def sensitivity(self) -> pa.Table:
+        """sensitivity.parquet: what decides, a row an index."""
+        from cohort.tables import read_table
+
+        return read_table(self.folder / "sensitivity.parquet")
+
+    def convergence(self) -> pa.Table:
+        """convergence.parquet: the same indices at each doubling."""
+        from cohort.tables import read_table
+
+        return read_table(self.folder / "convergence.parquet")
+
+    def ranking(self) -> pa.Table:
+        """ranking/: a row a run of the ranking."""
+        return self._parts("ranking", None)
+
     def summary(self) -> dict[str, Any]:
         """summary.json: the headline numbers."""
         found: dict[str, Any] = json.loads((self.folder / "summary.json").read_text())

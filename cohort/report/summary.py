@@ -12,6 +12,7 @@ import numpy as np
 from cohort.errors import Problem, RunError, StudyError
 from cohort.quantities import REGIMES
 from cohort.report.counting import EVERYONE, OSCILLATES, Count, count_regimes, write_incidence
+from cohort.report.ranking import rank, ranking_words
 from cohort.report.results import Results
 from cohort.tables import numbers, read_part, write_bytes
 
@@ -58,6 +59,9 @@ def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
         "caution": CAUTION,
         "arms": {arm: _arm(results, arm, [c for c in counts if c.arm == arm]) for arm in results.arms},
     }
+    ranking = rank(results) if len(results.whole_shards) == results.record["shards"] else None
+    if ranking is not None:
+        summary["ranking"] = ranking
     write_bytes(folder / "summary.json", (json.dumps(summary, indent=2) + "\n").encode())
     return summary
 
@@ -142,6 +146,8 @@ def closing_words(summary: dict[str, Any]) -> str:
         for word, n in facts["failures"].items():
             lines.append(f"  {n:,} failed: {word}")
         lines += _quantile_lines(facts["quantiles"], bool(facts["strata"]))
+    if "ranking" in summary:
+        lines += ranking_words(summary["ranking"])
     return "\n".join([*lines, "", *_wrapped(summary["caution"])])
 
 

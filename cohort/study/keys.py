@@ -228,21 +228,21 @@ def _clinic_keys() -> list[Key]:
 def _ranking_keys() -> list[Key]:
     def key(name: str, kind: str, meaning: str, default: str = "", words: tuple[str, ...] = (), low: float = 1.0,
             high: float = 1e9) -> Key:  # fmt: skip
-        return Key(f"ranking.{name}", kind, meaning, default, words=words, low=low, high=high, available=False)
+        return Key(f"ranking.{name}", kind, meaning, default, words=words, low=low, high=high)
 
     return [
-        Key("ranking", "table", "which parameters decide", available=False),
+        Key("ranking", "table", "which parameters decide"),
         key("method", "word", "sobol or morris", words=("sobol", "morris")),
         key("outcomes", "texts", "outcomes to rank for"),
-        key("base", "whole", "points of one replicate, a power of two", "256"),
+        key("base", "whole", "points of one replicate, a power of two; doubled as needed", "256", high=2**30),
         key("replicates", "whole", "independent scrambles", "8", low=2, high=64),
         key("tolerance", "number", "double until every half-width is below this", "0.05", low=0.0, high=1.0),
-        key("max_runs", "whole", "never more runs than this", "200000"),
-        Key("ranking.second_order", "yes/no", "pairs as well", "false", available=False),
-        key("trajectories", "whole", "trajectories of morris", "20", low=2),
+        key("max_runs", "whole", "never more runs of the ranking than this, all arms", "200000", high=1e12),
+        Key("ranking.second_order", "yes/no", "pairs as well", "false"),
+        key("trajectories", "whole", "trajectories of morris", "20", low=4, high=100_000),
         key("levels", "whole", "levels of morris, even", "4", low=2, high=64),
-        Key("ranking.groups", "table", "parameters moved together, by name", available=False),
-        Key("ranking.groups.*", "texts", "the parameters of a group", available=False),
+        Key("ranking.groups", "table", "parameters moved together, by name"),
+        Key("ranking.groups.*", "texts", "the parameters of a group"),
     ]
 
 

@@ -13,6 +13,7 @@ from typing import Any
 from cohort.errors import Problem, StudyError, nearest
 from cohort.model.catalogue import MODELS
 from cohort.study import arms as arms_of
+from cohort.study import ranking as ranking_of
 from cohort.study import subjects as subjects_of
 from cohort.study.files import Files
 from cohort.study.lines import Path as KeyPath
@@ -54,11 +55,12 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study
         weighed = not bool((recipe.table.body_weight_kg != recipe.table.body_weight_kg).any())
     protocols = arms_of.arms(tree, card, weighed)
     output = _output(tree, recipe.count, protocols)
+    ranking = ranking_of.ranking(tree, recipe, protocols)
     if tree.problems:
         raise StudyError(_sorted(tree.problems))
     title = tree.values.get("title", place.stem)
     study = Study(
-        place, data, tuple(overrides), title, model, seed, recipe, protocols, output, files.digests,
+        place, data, tuple(overrides), title, model, seed, recipe, protocols, output, ranking, files.digests,
         dict(_settings(tree.values)),
     )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))

@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from cohort.errors import Problem
+from cohort.infer.ranking import Ranking
 from cohort.model.protocol import Arm
 from cohort.population.recipe import Recipe
 
@@ -24,9 +25,9 @@ class Study:
     """A study file, read and checked.
 
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
-    file order; files: SHA-256 of every data file by the name the study gives it; settings: every key as it counts
-    (overrides applied, arms and strata by name), for telling what changed; warnings: legal but odd; later: blocks that are
-    checked and that no run carries out yet.
+    file order; ranking: what to rank, or None; files: SHA-256 of every data file by the name the study gives it;
+    settings: every key as it counts (overrides applied, arms and strata by name), for telling what changed; warnings:
+    legal but odd; later: blocks that are checked and that no run carries out yet.
     """
 
     path: Path
@@ -38,6 +39,7 @@ class Study:
     recipe: Recipe
     arms: tuple[Arm, ...]
     output: Output
+    ranking: Ranking | None = None
     files: Mapping[str, str] = field(default_factory=dict)
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()

@@ -1,0 +1,140 @@
+"""What decides: sensitivity.parquet and convergence.parquet from the stored runs, and the ranked lists in words."""
+
+from __future__ import annotations
+
+import textwrap
+from typing import Any
+
+import numpy as np
+
+from cohort.infer.facts import Facts, from_plain
+from cohort.infer.findings import Findings, findings
+from cohort.infer.ranking import points
+from cohort.infer.rows import Row
+from cohort.quantities import ESTIMANDS, SENSITIVITY_COLUMNS, Column
+from cohort.report.results import Results
+from cohort.tables import CONVERGENCE, SENSITIVITY, write_table
+
+SHOWN = 8
+"""Factors of a ranked list on a terminal; the table holds all."""
+LEADS = ("ST", "mu_star", "shapley", "S1", "T")
+
+
+def rank(results: Results) -> dict[str, Any] | None:
+    """Write both tables and return what summary.json says of the ranking; None for a study without one, or where its
+    runs are not all there. Raises ValueError where a part cannot be trusted."""
+    record = results.record.get("ranking")
+    if not record or "strata" not in record:
+        return None
+    facts = from_plain(record)
+    found = findings(results.folder, facts)
+    write_table(results.folder / "sensitivity.parquet", SENSITIVITY, _columns(SENSITIVITY_COLUMNS, found.rows))
+    steps = [s.row for s in found.steps]
+    columns = _columns([c for c in CONVERGENCE.columns if c.name != "doubling"], steps)
+    doubling = np.array([s.doubling for s in found.steps], dtype=np.int64)
+    write_table(results.folder / "convergence.parquet", CONVERGENCE, {**columns, "doubling": doubling})
+    return _summary(facts, found)
+
+
+def _columns(columns: Any, rows: list[Row]) -> dict[str, Any]:
+    return {column.name: _column(column, [getattr(row, column.name) for row in rows]) for column in columns}
+
+
+def _column(column: Column, values: list[Any]) -> Any:
+    if column.kind == "float64":
+        return np.array([np.nan if v is None else v for v in values], dtype=float)
+    if column.kind == "int64":
+        return np.array([-1 if v is None else v for v in values], dtype=np.int64)
+    return values
+
+
+def _summary(facts: Facts, found: Findings) -> dict[str, Any]:
+    return {
+        "method": facts.ranking.method,
+        "strata": {s.design.stratum: _stratum(s) for s in facts.strata},
+        "lists": _lists(found.rows),
+    }
+
+
+def _stratum(stratum: Any) -> dict[str, Any]:
+    sobol = stratum.design.method == "sobol"
+    return {
+        "refused": stratum.refused or None,
+        "points": points(stratum.doubling) if sobol and not stratum.refused else None,
+        "replicates": stratum.design.replicates,
+        "stopped": stratum.stopped or None,
+    }
+
+
+def _lists(rows: list[Row]) -> list[dict[str, Any]]:
+    """One entry for every arm, stratum, outcome and estimand: refused, or its factors from the strongest."""
+    lists: dict[tuple[str, str, str, str], list[Row]] = {}
+    for row in rows:
+        lists.setdefault((row.arm, row.stratum, row.outcome, row.estimand), []).append(row)
+    made = []
+    for (arm, stratum, outcome, estimand), members in lists.items():
+        entry: dict[str, Any] = {"arm": arm, "stratum": stratum, "outcome": outcome, "estimand": estimand}
+        refused = [r for r in members if r.refused]
+        lead = next((i for i in LEADS if any(r.index == i and r.value is not None for r in members)), None)
+        if lead is None:
+            made.append({**entry, "refused": refused[0].refused if refused else "nothing to rank"})
+            continue
+        ranked = sorted((r for r in members if r.index == lead and r.value is not None), key=_descending)
+        made.append({**entry, "index": lead, "n": ranked[0].n, "factors": [_factor(r) for r in ranked]})
+    return made
+
+
+def _descending(row: Row) -> float:
+    assert row.value is not None
+    return -row.value
+
+
+def _factor(row: Row) -> dict[str, Any]:
+    return {"name": row.parameter, "value": row.value, "low": row.low, "high": row.high, "verdict": row.verdict}
+
+
+# ---- in words ----------------------------------------------------------------------------------------------------
+
+
+def ranking_words(ranking: dict[str, Any]) -> list[str]:
+    """The ranked lists in lines of at most 80 characters."""
+    lines = ["", "what decides it"]
+    for name, facts in ranking["strata"].items():
+        who = "" if len(ranking["strata"]) == 1 else f"{name}: "
+        if facts["points"]:
+            how = f"{who}{facts['points']:,} points x {facts['replicates']} scrambles"
+            stopped = facts["stopped"]
+            lines += _wrapped(f"{how}; {stopped}", "  ")
+    for entry in ranking["lists"]:
+        if entry["estimand"] != "difference between arms":
+            lines += _list_lines(entry, len(ranking["strata"]) > 1)
+    if any(entry["estimand"] == "difference between arms" for entry in ranking["lists"]):
+        lines += ["", "  differences between arms, with intervals, are in sensitivity.parquet"]
+    return lines
+
+
+def _list_lines(entry: dict[str, Any], many: bool) -> list[str]:
+    where = f"{entry['arm']}, {entry['stratum']}" if many else entry["arm"]
+    lines = ["", *_wrapped(f"{entry['outcome']} ({where}): {ESTIMANDS[entry['estimand']]}", "  ")]
+    if "refused" in entry:
+        return lines + _wrapped(f"refused: {entry['refused']}", "    ")
+    shown = entry["factors"][:SHOWN]
+    for factor in shown:
+        numbers = f"{_short(factor['value'])} ({_short(factor['low'])} to {_short(factor['high'])})"
+        lines.append(f"    {str(factor['name'])[:18]:18s} {entry['index']:8s}{numbers:26s}{_word(factor['verdict'])}")
+    more = len(entry["factors"]) - len(shown)
+    if more:
+        lines.append(f"    and {more} more below them")
+    return lines
+
+
+def _word(verdict: str | None) -> str:
+    return (verdict or "").removesuffix(" at this size")
+
+
+def _short(x: float) -> str:
+    return f"{x:.3f}" if 0.0005 <= abs(x) < 100 or x == 0 else f"{x:.3g}"
+
+
+def _wrapped(text: str, indent: str) -> list[str]:
+    return textwrap.wrap(text, 78, initial_indent=indent, subsequent_indent=indent + "  ")
