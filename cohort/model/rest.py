@@ -144,6 +144,8 @@ def root(balance, source, result, typical, lowest):  # type: ignore[no-untyped-d
                 newton = -2.0 * abs(x) - typical
             else:
                 newton = 0.5 * (low + high)
+        elif high < np.inf and low > -np.inf and 0.5 * step < abs(newton - x) and abs(newton - x) > 1e-9 * abs(x):
+            newton = 0.5 * (low + high)  # steps that do not shrink may circle within the bracket for ever
         last, step = step, abs(newton - x)
         if step <= 4e-16 * abs(x) or (step >= last and step <= 1e-13 * (abs(x) + 1e-3 * typical)):
             return True

@@ -120,3 +120,23 @@ def test_steady_liver_releases_what_the_nominal_body_releases_at_rest() -> None:
     steady = body("steady-liver")
     held = at_rest(steady, np.array([[*steady.card.nominal.values(), 1.0]]), np.array([216.0]), np.zeros(1))
     np.testing.assert_allclose(held.states[0], nominal.states[0, :3], rtol=1e-12)
+
+
+def test_a_body_whose_newton_steps_circle_between_two_points_is_solved_all_the_same() -> None:
+    own = {"Vp": 3.863513, "Vi": 12.280119, "Vg": 11.858479, "E": 0.210329, "tp": 4.593237, "ti": 103.850893,
+           "td": 43.29733, "Rm": 300.681801, "a1": 320.27618, "C1": 1637.601335, "C4": 171.732341, "Rg": 163.507038,
+           "C5": 24.981052}  # fmt: skip
+    found = rest(0.0, **own)
+    place = [*found.states[0], 0.0, 0.0, *(own.get(p, NOMINAL[i]) for i, p in enumerate(BODY.parameters))]
+    assert np.abs(run(BODY.rates, place)).max() < 1e-10
+
+
+def test_every_body_within_wide_laws_has_an_equilibrium() -> None:
+    rng = np.random.default_rng(5)
+    n = 30_000
+    parameters = NOMINAL * np.exp(0.3 * rng.standard_normal((n, len(NOMINAL))))
+    parameters[:, -1] = 1.0
+    um, u0 = (BODY.parameters.index(p) for p in ("Um", "U0"))
+    parameters[:, um] = np.maximum(parameters[:, um], parameters[:, u0] + 1.0)
+    found = at_rest(BODY, parameters, rng.choice([0.0, 54.0, 180.0, 400.0], n), np.zeros(n))
+    assert np.isfinite(found.states).all() and np.isfinite(found.eigenvalues).all()
