@@ -215,6 +215,8 @@ ESTIMANDS: dict[str, str] = {
     "association among oscillators": "how well one factor predicts it among those who oscillate, selection included",
     "mechanism among oscillators": "share of the variance that stays if one factor is redrawn within those who oscillate",
     "fair share among oscillators": "each factor's share of the variance among those who oscillate",
+    "association among those with one": "how well one factor predicts it among those who have it",
+    "fair share among those with one": "each factor's share of the variance among those who have it",
     "difference between arms": "the first arm's index minus the second's, same people",
 }
 """What an index speaks of: the column `estimand`, and the sentence that goes with it."""

@@ -16,6 +16,7 @@ from cohort.infer.intervals import Estimate
 from cohort.infer.ranking import design_rows, points
 from cohort.infer.rows import Row, Step
 from cohort.infer.stored import Reader, read_numbers, read_words
+from cohort.infer.strata import only_of_cycles
 from cohort.infer.variance import Indices, estimates, indices
 from cohort.infer.verdicts import effect_floor, variance_floor, verdict, verdict_of_effect
 
@@ -109,14 +110,20 @@ def _undefined(reader: Reader, stratum: RankedStratum, name: str, missing: int, 
         gone = np.flatnonzero(np.isnan(read_numbers(path, [name])[name]))
         regime = read_words(path, "regime")
         for row in gone:
-            word = regime[row] or "no cycle"
-            why["not oscillating" if word in ("damped", "quiet") else word] += 1
+            word = regime[row] or ""
+            why[word if word in ("failed", "undecided") else _lacking(name)] += 1
             if word == "failed" and len(failed) < SHOWN_FAILURES:
                 failed.append(_where(reader, path, int(row)))
     said = ", ".join(f"{n:,} {word}" for word, n in why.most_common())
     head = f"undefined for all {runs:,} runs" if missing == runs else f"undefined for {missing:,} of {runs:,} runs"
     places = f"; failed: {'; '.join(failed)}" if failed else ""
     return f"{head} ({said}){places}"
+
+
+def _lacking(name: str) -> str:
+    if only_of_cycles(name):
+        return "not oscillating"
+    return "with a real leading eigenvalue" if name == "linear_period_min" else "without a value"
 
 
 def _where(reader: Reader, path: object, row: int) -> str:

@@ -32,15 +32,14 @@ def elementary_effects(design: Design, u: Array, y: Array) -> Array:
     """
     if not np.isfinite(y).all():
         raise ValueError("an output is missing")
+    if u.shape[1] != len(design.factors) + 1 or y.shape != u.shape[:2]:
+        raise ValueError("rows do not match the design: a trajectory has a row more than there are factors")
     steps, changes = np.diff(u, axis=1) / (1.0 - 2.0 * TRIM), np.diff(y, axis=1)
-    found = np.full((len(u), len(design.factors)), np.nan)
-    for j, factor in enumerate(design.factors):
-        lead = steps[:, :, factor.columns[0]]
-        moved = np.abs(lead) > 1e-9
-        if not (moved.sum(axis=1) == 1).all():
-            raise ValueError("rows do not match the design: a trajectory moves each factor once")
-        found[:, j] = (changes / np.where(moved, lead, 1.0))[moved]
-    return found
+    lead = steps[:, :, [factor.columns[0] for factor in design.factors]]
+    moved = np.abs(lead) > 1e-9
+    if not (moved.sum(axis=1) == 1).all() or not (moved.sum(axis=2) == 1).all():
+        raise ValueError("rows do not match the design: every step moves one factor, and each is moved once")
+    return np.asarray(np.where(moved, changes[:, :, None] / np.where(moved, lead, 1.0), 0.0).sum(axis=1))
 
 
 def effects(found: Array, grouped: tuple[bool, ...]) -> list[Effects]:

@@ -24,6 +24,7 @@ from cohort.infer.strata import only_of_cycles
 
 MOST_ARMS_PAIRWISE = 10
 AMONG = " among oscillators"
+WITH_ONE = " among those with one"
 
 
 @dataclass
@@ -63,10 +64,15 @@ def _arm(
         elif stratum.refused:
             found.rows += _without_design(facts, stratum, blank, plain, reader)
         else:
-            yield outcome, _by_design(reader, stratum, blank, found)
-            if only_of_cycles(outcome) and plain is not None:
+            made = _by_design(reader, stratum, blank, found)
+            yield outcome, made
+            if plain is None or not made.refused:
+                continue
+            if only_of_cycles(outcome):
                 found.rows += given_rows(blank, stratum, plain, AMONG)
                 found.rows += mechanism_rows(blank, reader, stratum, plain)
+            elif outcome == "linear_period_min":
+                found.rows += given_rows(blank, stratum, plain, WITH_ONE)
 
 
 def _has_plain(facts: Facts, stratum: RankedStratum) -> bool:

@@ -60,7 +60,7 @@ def _epsilon_squared(x: Array, y: Array) -> float:
     counts = np.diff(edges)
     sums = np.add.reduceat(ordered, edges[:-1])
     within = float((ordered**2).sum() - (sums**2 / counts).sum())
-    return 1.0 - (within / (n - bins)) / (total / (n - 1))
+    return float(1.0 - (within / (n - bins)) / (total / (n - 1)))
 
 
 def _parts(n: int) -> list[slice]:

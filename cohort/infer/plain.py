@@ -20,7 +20,7 @@ from cohort.infer.given import (
 from cohort.infer.mechanism import mechanism
 from cohort.infer.rows import Row
 from cohort.infer.stored import Reader, read_cohort
-from cohort.infer.verdicts import NOTHING, verdict_of_share
+from cohort.infer.verdicts import NOTHING, variance_floor, verdict_of_share
 from cohort.population.functions import normal_quantile
 from cohort.population.recipe import EXPONENTS, WEIGHT
 from cohort.population.uniforms import generator, uniforms
@@ -145,7 +145,8 @@ def mechanism_rows(blank: Row, reader: Reader, stratum: RankedStratum, plain: Pl
     again = np.full((len(stratum.design.factors), len(y)), np.nan)
     for which, position, outcome in reader.redraws([blank.outcome]):
         again[which, position] = transform(outcome[blank.outcome])
-    rows = []
+    typical, variance = float(y[base].mean()), float(y[base].var())
+    floor, rows = variance_floor(blank.outcome, typical, variance), []
     for j, factor in enumerate(stratum.design.factors):
         done = base[np.isfinite(again[j, base])]
         if len(base) - len(done) > MOST_STUCK * len(base):
@@ -155,5 +156,5 @@ def mechanism_rows(blank: Row, reader: Reader, stratum: RankedStratum, plain: Pl
             rows.append(replace(blank, parameter=factor.name, index="ST").refusal(why, len(base)))
             continue
         found = mechanism(y[done], again[j, done])
-        rows.append(blank.of(factor.name, "ST", found).judged(0.0, verdict_of_share(found, 0.0)))
+        rows.append(blank.of(factor.name, "ST", found).judged(floor, verdict_of_share(found, floor)))
     return rows

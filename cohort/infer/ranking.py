@@ -161,7 +161,8 @@ def _morris(design: Design) -> Array:
     """Trajectories in the trimmed unit cube: float64[trajectories x (factors + 1), names]."""
     from cohort.infer.salib import trajectories
 
-    rng = np.random.Generator(np.random.Philox(key=key(design.seed, "ranking", design.stratum, "morris")))
+    seed = np.random.SeedSequence(key(design.seed, "ranking", design.stratum, "morris"))  # SALib spawns from it
+    rng = np.random.Generator(np.random.Philox(seed))
     return trajectories(design, TRIM, rng)
 
 

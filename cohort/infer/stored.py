@@ -137,10 +137,18 @@ def read_cohort(folder: Path, arm: str, stratum: str, own: Sequence[str], outcom
     """Rows of a cohort that came as a table: columns of subjects/ and of outcomes/<arm>/ of one stratum."""
     from cohort.tables import numbers, read_parts
 
-    people, seen = read_parts(folder / "subjects"), read_parts(folder / "outcomes" / arm, list(outcomes))
+    people = read_parts(folder / "subjects", ["stratum", *own])
     here = np.array([word == stratum for word in people.column("stratum").to_pylist()], dtype=bool)
     found = {name: numbers(people, name)[here] for name in own}
-    return found | {name: numbers(seen, name)[here] for name in outcomes}
+    for name in outcomes:
+        head, _, column = name.partition(".")
+        if column:
+            meals = read_parts(folder / "meals" / arm, ["meal", column])
+            which = np.asarray(meals.column("meal")) == int(head.removeprefix("meal_"))
+            found[name] = numbers(meals, column)[which][here]
+        else:
+            found[name] = numbers(read_parts(folder / "outcomes" / arm, [name]), name)[here]
+    return found
 
 
 def _read(path: Path, names: Sequence[str]) -> pa.Table:

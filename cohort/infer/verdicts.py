@@ -19,11 +19,14 @@ AMPLITUDE_ERROR = 1e-5
 
 
 def engine_error(outcome: str, typical: float) -> float:
-    """The promised accuracy of an outcome as an absolute error; typical: its usual size. Words have none."""
+    """The promised accuracy of an outcome as an absolute error; typical: its usual size. Words have none; of periods the
+    logarithm is analysed."""
     if outcome == "oscillates":
         return 0.0
     if outcome == "growth_per_min":
         return GROWTH_ERROR
+    if outcome.endswith("period_min"):
+        return RELATIVE_ERROR
     if "amplitude" in outcome:
         return max(AMPLITUDE_ERROR * abs(typical), 1e-6)
     return RELATIVE_ERROR * max(abs(typical), 1e-12)

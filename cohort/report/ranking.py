@@ -11,12 +11,22 @@ from cohort.infer.facts import Facts, from_plain
 from cohort.infer.findings import Findings, findings
 from cohort.infer.ranking import points
 from cohort.infer.rows import Row
-from cohort.quantities import ESTIMANDS, SENSITIVITY_COLUMNS, Column
+from cohort.quantities import (
+    CLAMP_OUTCOMES,
+    CYCLE_OUTCOMES,
+    ESTIMANDS,
+    MEAL_OUTCOMES,
+    SENSITIVITY_COLUMNS,
+    WINDOW_OUTCOMES,
+    Column,
+)
 from cohort.report.results import Results
 from cohort.tables import CONVERGENCE, SENSITIVITY, write_table
 
 SHOWN = 8
 """Factors of a ranked list on a terminal; the table holds all."""
+UNITS = {c.name: c.unit or "1" for c in (*CYCLE_OUTCOMES, *WINDOW_OUTCOMES, *CLAMP_OUTCOMES, *MEAL_OUTCOMES)}
+ONLY_IN_TABLE = ("difference between arms", "unresolved as no", "unresolved as yes")
 LEADS = ("ST", "mu_star", "shapley", "S1", "T")
 
 
@@ -106,7 +116,7 @@ def ranking_words(ranking: dict[str, Any]) -> list[str]:
             stopped = facts["stopped"]
             lines += _wrapped(f"{how}; {stopped}", "  ")
     for entry in ranking["lists"]:
-        if entry["estimand"] != "difference between arms":
+        if entry["estimand"] not in ONLY_IN_TABLE:
             lines += _list_lines(entry, len(ranking["strata"]) > 1)
     if any(entry["estimand"] == "difference between arms" for entry in ranking["lists"]):
         lines += ["", "  differences between arms, with intervals, are in sensitivity.parquet"]
@@ -115,25 +125,26 @@ def ranking_words(ranking: dict[str, Any]) -> list[str]:
 
 def _list_lines(entry: dict[str, Any], many: bool) -> list[str]:
     where = f"{entry['arm']}, {entry['stratum']}" if many else entry["arm"]
-    lines = ["", *_wrapped(f"{entry['outcome']} ({where}): {ESTIMANDS[entry['estimand']]}", "  ")]
+    unit = f", {UNITS[entry['outcome'].split('.')[-1]]}" if entry.get("index") == "mu_star" else ""
+    index = f" ({entry['index']}{unit})" if "index" in entry else ""
+    lines = ["", *_wrapped(f"{entry['outcome']} ({where}): {ESTIMANDS[entry['estimand']]}{index}", "  ")]
     if "refused" in entry:
         return lines + _wrapped(f"refused: {entry['refused']}", "    ")
-    shown = entry["factors"][:SHOWN]
-    for factor in shown:
-        numbers = f"{_short(factor['value'])} ({_short(factor['low'])} to {_short(factor['high'])})"
-        lines.append(f"    {str(factor['name'])[:18]:18s} {entry['index']:8s}{numbers:26s}{_word(factor['verdict'])}")
-    more = len(entry["factors"]) - len(shown)
-    if more:
-        lines.append(f"    and {more} more below them")
-    return lines
+    numbers_of = _effect if entry["index"] == "mu_star" else _share
+    for factor in entry["factors"][:SHOWN]:
+        numbers = numbers_of(*(factor[k] for k in ("value", "low", "high")))
+        word = (factor["verdict"] or "").removesuffix(" at this size")
+        lines.append(f"    {str(factor['name'])[:20]:20s} {numbers:23s} {word}".rstrip())
+    more = len(entry["factors"]) - SHOWN
+    return [*lines, f"    and {more} more below them"] if more > 0 else lines
 
 
-def _word(verdict: str | None) -> str:
-    return (verdict or "").removesuffix(" at this size")
+def _share(value: float, low: float, high: float) -> str:
+    return f"{value:.3f} ({low:.3f} to {high:.3f})".replace("-0.000", "0.000")
 
 
-def _short(x: float) -> str:
-    return f"{x:.3f}" if 0.0005 <= abs(x) < 100 or x == 0 else f"{x:.3g}"
+def _effect(value: float, low: float, high: float) -> str:
+    return f"{value:.3g} ({low:.2g} to {high:.2g})"
 
 
 def _wrapped(text: str, indent: str) -> list[str]:

@@ -236,7 +236,7 @@ def _ranking_keys() -> list[Key]:
         key("outcomes", "texts", "outcomes to rank for"),
         key("base", "whole", "points of one replicate, a power of two; doubled as needed", "256", high=2**30),
         key("replicates", "whole", "independent scrambles", "8", low=2, high=64),
-        key("tolerance", "number", "double until every half-width is below this", "0.05", low=0.0, high=1.0),
+        key("tolerance", "number", "double until every half-width is below this", "0.05", low=1e-6, high=1.0),
         key("max_runs", "whole", "never more runs of the ranking than this, all arms", "200000", high=1e12),
         Key("ranking.second_order", "yes/no", "pairs as well", "false"),
         key("trajectories", "whole", "trajectories of morris", "20", low=4, high=100_000),

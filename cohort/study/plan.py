@@ -8,6 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from cohort.infer.ranking import Ranking
 from cohort.model.catalogue import MODELS
 from cohort.model.protocol import Arm, Meal, OnOff, Sine
 from cohort.population.laws import Fixed
@@ -15,6 +16,7 @@ from cohort.population.recipe import WEIGHT, Stratum
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 from cohort.study.arms import has_steady_input
 from cohort.study.oddities import published_growth
+from cohort.study.ranking import ranked_runs
 from cohort.study.spec import Study
 
 SHARD = 16_384
@@ -60,7 +62,7 @@ class LawRow:
 
 @dataclass(frozen=True)
 class Plan:
-    """The whole run. seconds: of the clock, on `workers` workers."""
+    """The whole run. seconds: of the clock, on `workers` workers; ranking: runs of the ranking at its first size."""
 
     subjects: int
     shards: int
@@ -71,6 +73,7 @@ class Plan:
     memory_mb: float
     disk_mb: float
     laws: tuple[LawRow, ...]
+    ranking: int = 0
 
 
 def plan(study: Study, workers: int | None = None) -> Plan:
@@ -79,13 +82,16 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     n = study.recipe.count
     arms = tuple(_arm(study, arm) for arm in study.arms)
     core = sum(a.core_seconds for a in arms) + n * US_PER_SUBJECT_WRITTEN * 1e-6 * (len(arms) + 1)
+    ranked = ranked_runs(study.ranking, study.recipe, len(arms)) if study.ranking else 0
+    core *= 1.0 + ranked / (n * len(arms))
     subject_columns = len(study.recipe.varied) + 3
     rows_mb = n * (len(arms) * OUTCOME_COLUMNS + subject_columns) * BYTES_PER_OUTCOME / 1e6
     points = sum(a.duration_min / study.output.every_min + 1 for a in study.arms)
+    rows_mb *= 1.0 + ranked / (n * len(arms))
     disk = rows_mb + points * study.output.time_courses * 6 * BYTES_PER_OUTCOME / 1e6
     return Plan(
         n, -(-n // SHARD), n * len(arms), workers, arms, SECONDS_AT_START + core / max(min(workers, n / 256), 1.0),
-        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study),
+        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study), ranked,
     )  # fmt: skip
 
 
@@ -140,6 +146,8 @@ def describe(study: Study, found: Plan) -> str:
         "",
         "  arm                               hours   steady input",
     ]
+    if study.ranking:
+        lines[3:3] = _ranking_lines(study.ranking, found.ranking)
     for arm, row in zip(study.arms, found.arms, strict=True):
         lines.append(f"  {row.name[:32]:32s}  {row.hours:5g}   {'yes' if has_steady_input(arm) else 'no'}")
     if found.laws:
@@ -153,6 +161,15 @@ def describe(study: Study, found: Plan) -> str:
     elif study.recipe.table is None:
         lines += ["", "  nothing varies between subjects: every row will be the same body"]
     return "\n".join(lines)
+
+
+def _ranking_lines(ranking: Ranking, runs: int) -> list[str]:
+    if ranking.method == "morris":
+        return [f"  ranking by morris: {ranking.trajectories} trajectories, {runs:,} runs and what redraws take"]
+    return [
+        f"  ranking by sobol: from {runs:,} runs (base {ranking.base} x {ranking.replicates}) to at most {ranking.max_runs:,},",
+        f"  until every half-width is below {ranking.tolerance:g}",
+    ]
 
 
 def _unit(unit: str) -> str:

@@ -8,7 +8,7 @@ from typing import Any
 
 from cohort.errors import nearest
 from cohort.infer.ranking import FIRST, PLAIN_DOUBLING, Ranking, points
-from cohort.infer.strata import design_runs, first_doubling, only_of_cycles, plain_wanted, ranked_strata
+from cohort.infer.strata import design_runs, first_doubling, plain_wanted, ranked_strata
 from cohort.model.inputs import meal_times
 from cohort.model.protocol import Arm, Meal
 from cohort.population.recipe import Recipe
@@ -102,8 +102,11 @@ def _groups(tree: Tree, values: dict[str, Any], recipe: Recipe) -> dict[str, tup
         if not members:
             tree.problem(path, "is empty; it names the parameters moved together")
         for i, member in enumerate(members):
-            if member not in known:
-                tree.problem((*path, i), f"{member[:60]!r} does not vary between subjects{nearest(member, known)}")
+            if member in recipe.names and member not in known:
+                tree.warnings.append(tree.place((*path, i), f"{member!r} does not vary between subjects, so the group moves "
+                                                "without it"))  # fmt: skip
+            elif member not in known:
+                tree.problem((*path, i), f"{member[:60]!r} is not a varied parameter{nearest(member, known)}")
             elif member in home:
                 tree.problem((*path, i), f"{member!r} is in {home[member]!r} already")
             home.setdefault(member, group)
@@ -142,8 +145,3 @@ def ranked_runs(made: Ranking, recipe: Recipe, arms: int) -> int:
         (0 if r.refused else design_runs(r.design, first_doubling(made))) + plain * plain_wanted(r, made)
         for r in ranked_strata(recipe, made)
     )
-
-
-def may_be_undefined(made: Ranking) -> tuple[str, ...]:
-    """Named outcomes that only oscillators have."""
-    return tuple(name for name in made.outcomes if only_of_cycles(name))
