@@ -402,3 +402,30 @@ def test_scipys_own_design_and_estimators_give_a_second_opinion_on_the_model(tmp
         rows = listed(results, arm="steady", outcome="equilibrium_glucose_mg_dl", estimand="everyone", index=index)
         for row, theirs_value in zip(rows, values, strict=True):
             assert row["value"] == pytest.approx(theirs_value, abs=0.02), (row["parameter"], index)
+
+
+def test_seed_zero_is_a_seed(tmp_path: Path) -> None:
+    """To SALib it is none: two analyses then differ."""
+    small = ("seed=0", "ranking.base=16", 'ranking.outcomes=["growth_per_min"]')
+    assert files(run(tmp_path, *small, out="one")) == files(run(tmp_path, *small, out="two"))
+    morris = STUDY.replace('method = "sobol"', 'method = "morris"').replace('"period_min", ', "")
+    assert files(run(tmp_path, "seed=0", text=morris, out="a")) == files(run(tmp_path, "seed=0", text=morris, out="b"))
+
+
+def test_a_design_is_never_analysed_as_another(whole: Results, tmp_path: Path) -> None:
+    """SALib takes a first-order design for a second-order one, and effects at the wrong number of levels."""
+    shutil.copytree(whole.folder, tmp_path / "out")
+    with pytest.raises(StudyError, match=r"ranking\.second_order"):
+        run(tmp_path, "ranking.second_order=true")
+    morris = STUDY.replace('method = "sobol"', 'method = "morris"').replace('"period_min", ', "")
+    run(tmp_path, text=morris, out="morris")
+    with pytest.raises(StudyError, match=r"ranking\.levels"):
+        run(tmp_path, "ranking.levels=8", text=morris, out="morris")
+
+
+def test_a_group_has_no_sigma_and_no_sign(tmp_path: Path) -> None:
+    morris = STUDY.replace('method = "sobol"', 'method = "morris"').replace('"period_min", ', "")
+    morris = morris.replace("[output]", "groups = { both = ['td', 'Rm'] }\n[output]")
+    rows = listed(run(tmp_path, text=morris), arm="steady", outcome="growth_per_min")
+    assert [r["index"] for r in rows if r["parameter"] == "both"] == ["mu_star"]
+    assert {r["index"] for r in rows if r["parameter"] == "C4"} == {"mu", "mu_star", "sigma"}
