@@ -69,6 +69,8 @@ INPUT_PARAMETERS: dict[str, Quantity] = {
 REGIMES = ("sustained", "damped", "quiet", "bistable", "undecided", "failed")
 FAILURES = ("not finite", "step too small", "left the physical range", "out of budget", "process died")
 CYCLE_NOTES = ("no steady input", "at the mean input")
+ANALYTES = ("glucose", "insulin")
+DETECTION_NOTES = ("too few samples", "constant")
 KEPT_BECAUSE = ("typical", "borderline", "extreme")
 
 
@@ -173,6 +175,8 @@ KEY_COLUMNS: dict[str, Column] = {
         Column("model", "text", "", "the body's equations"),
         Column("stratum", "text", "", "the subgroup the subject belongs to"),
         Column("id", "text", "", "the subject's own name, from the table of subjects"),
+        Column("schedule", "text", "", "when samples were taken"),
+        Column("analyte", "words", "", "what was read", ANALYTES),
         Column("body_weight_kg", "float64", "kg", "body weight; null without sizes"),
     )
 }
@@ -245,4 +249,25 @@ CONVERGENCE_COLUMNS: tuple[Column, ...] = (
     *(c for c in SENSITIVITY_COLUMNS if c.name in ("arm", "stratum", "outcome", "estimand", "parameter", "index")),
     Column("doubling", "int64", "", "doublings of the design's first 16 points a replicate"),
     *(c for c in SENSITIVITY_COLUMNS if c.name in ("value", "low", "high", "n")),
+)
+
+DETECTION_COLUMNS: tuple[Column, ...] = (
+    Column("detected", "bool", "", "the whole rule finds a rhythm in the series; no proof of a limit cycle"),
+    Column("rule_p_value", "float64", "1", "p-value of the whole rule, all its analytes together"),
+    Column("p_value", "float64", "1", "of this series' likelihood ratio, from simulated series without a rhythm"),
+    Column("period_min", "float64", "min", "period of the best harmonic, detected or not"),
+    Column("period_se_min", "float64", "min", "its standard error, given that it is the right peak"),
+    Column("amplitude", "float64", "mg/dL or mU/L", "peak to trough of the best harmonic"),
+    Column("relative_amplitude", "float64", "1", "half of peak to trough over the series' mean"),
+    Column("half_ratio", "float64", "1", "its amplitude in the second half over that in the first"),
+    Column("decaying", "bool", "", "that ratio is below 0.7; null where nothing is detected"),
+    Column("samples", "int64", "", "samples present"),
+    Column("note", "words", "", "why the series could not be searched", DETECTION_NOTES),
+    Column("lomb_scargle_power", "float64", "1", "highest normalised power of the band; white noise only"),
+    Column("lomb_scargle_p", "float64", "1", "Baluev's p-value of that power; white noise only"),
+    Column("lomb_scargle_period_min", "float64", "min", "where that power lies; white noise only"),
+    Column("autocorrelation", "float64", "1", "highest peak of the autocorrelation in the band; evenly sampled only"),
+    Column("autocorrelation_period_min", "float64", "min", "its lag"),
+    Column("pulses", "int64", "", "rises and falls beyond the stated number of assay SDs"),
+    Column("power_at_forcing", "float64", "1", "normalised power at the forcing period; null without forcing"),
 )

@@ -25,6 +25,7 @@ from cohort.quantities import (
     CONVERGENCE_COLUMNS,
     COURSE_COLUMNS,
     CYCLE_OUTCOMES,
+    DETECTION_COLUMNS,
     INCIDENCE_COLUMNS,
     INPUT_PARAMETERS,
     KEY_COLUMNS,
@@ -83,6 +84,9 @@ def outcomes_schema(clamped: bool) -> Schema:
 
 MEALS = Schema("meals", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *MEAL_OUTCOMES))
 TIME_COURSES = Schema("time_courses", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"], *COURSE_COLUMNS))
+OBSERVATIONS = Schema(
+    "observations", (*(KEY_COLUMNS[k] for k in ("subject", "arm", "schedule", "analyte")), *DETECTION_COLUMNS)
+)
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
 SENSITIVITY = Schema("sensitivity", SENSITIVITY_COLUMNS)
 CONVERGENCE = Schema("convergence", CONVERGENCE_COLUMNS)

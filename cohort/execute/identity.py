@@ -15,6 +15,8 @@ from cohort.compiled import kernel_identity
 from cohort.infer.ranking import Design, Ranking
 from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
+from cohort.observe.null import SIMULATED
+from cohort.observe.sampling import Schedule
 from cohort.population.laws import Empirical
 from cohort.quantities import CLAMP_OUTCOMES, COURSE_COLUMNS, CYCLE_OUTCOMES, MEAL_OUTCOMES, WINDOW_OUTCOMES
 from cohort.study import Study
@@ -24,7 +26,15 @@ COLUMNS = (CYCLE_OUTCOMES, WINDOW_OUTCOMES, CLAMP_OUTCOMES, MEAL_OUTCOMES, COURS
 GROWING = ("subjects.count", "ranking.base", "ranking.max_runs")
 """Keys that may grow in a folder that holds results; arms and outcomes to rank may be added."""
 
-UNSEEN = ("title", "output.", "ranking.tolerance")
+UNSEEN = (
+    "title",
+    "output.",
+    "ranking.tolerance",
+    "recruitment.",
+    "subjects.eligible.",
+    "subjects.match.",
+    "subjects.population.",
+)
 """Keys that no stored number depends on."""
 
 
@@ -61,6 +71,13 @@ def arm_identity(study: Study, arm: Arm, table: str) -> str:
     return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE, plain(COLUMNS)])
 
 
+def seen_identity(study: Study, arm: str, schedule: Schedule) -> str:
+    """Of an arm's observations through one schedule: the arm's own identity, the schedule, errors and the rule."""
+    assert study.sampling is not None
+    readings = {analyte: plain(reading) for analyte, reading in study.sampling.readings.items()}
+    return _digest(["observations", arm, plain(schedule), readings, plain(study.sampling.rule), SIMULATED])
+
+
 def ranking_identity(study: Study, design: Design, arm: Arm) -> str:
     """Of an arm's runs of a ranking: the stratum's laws, the design without its size, the arm, kernels and accuracy."""
     recipe = plain(study.recipe)[1]
@@ -82,11 +99,12 @@ def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: se
 
     arms: names that were there before; draw: how people are drawn (a Latin hypercube cannot grow).
     """
-    ranked = any(key.startswith("ranking.") for key in before)
     for key in dict.fromkeys((*before, *now)):
         if key.startswith(UNSEEN) or before.get(key) == now.get(key):
             continue
-        if key.startswith("ranking.") and not ranked:
+        if key.startswith(("ranking.", "sampling.")) and not any(k.startswith(key.split(".")[0] + ".") for k in before):
+            continue
+        if key.startswith("sampling.schedules.") and _schedule_of(key, now) not in _schedules(before):
             continue
         if key in GROWING and _grown(key, before, now) and not (key == "subjects.count" and draw == "latin-hypercube"):
             continue
@@ -96,6 +114,16 @@ def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: se
             continue
         return key
     return None
+
+
+def _schedules(settings: Mapping[str, str]) -> set[str]:
+    head = "sampling.schedules."
+    return {value for k, value in settings.items() if k.startswith(head) and k == f"{head}{value}.name"}
+
+
+def _schedule_of(key: str, settings: Mapping[str, str]) -> str:
+    names = [n for n in _schedules(settings) if key.startswith(f"sampling.schedules.{n}.")]
+    return max(names, key=len, default="")
 
 
 def _grown(key: str, before: Mapping[str, str], now: Mapping[str, str]) -> bool:

@@ -24,7 +24,7 @@ from cohort.execute.identity import arm_identity, first_difference, subjects_ide
 from cohort.execute.progress import Progress
 from cohort.execute.ranking import run_ranking, slots_of, strays_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
-from cohort.execute.stages import rows
+from cohort.execute.stages import rows, warm
 from cohort.execute.tasks import Job, Piece, run_jobs
 from cohort.infer.facts import as_plain
 from cohort.infer.salib import load as load_salib
@@ -141,6 +141,7 @@ def _job(study: Study, out: Path, work: Work) -> Job:
 
 def _compile(study: Study) -> None:
     """Compile once, before there are threads."""
+    warm(study)
     rows(study, 0, 1, [arm.name for arm in study.arms])
 
 

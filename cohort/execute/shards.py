@@ -6,7 +6,7 @@ from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from cohort.execute.identity import arm_identity, subjects_identity
+from cohort.execute.identity import arm_identity, seen_identity, subjects_identity
 from cohort.execute.stages import Table, Values, constants, joined, tables
 from cohort.study import Study
 from cohort.study.plan import SHARD
@@ -51,7 +51,10 @@ def stamp(study: Study, table: Table, shard: Shard) -> Stamp:
     """What a part of this table and shard must carry."""
     if table.arm is None:
         return Stamp(subjects_identity(study), shard.first, shard.last)
-    return Stamp(arm_identity(study, table.arm, table.schema.table), shard.first, shard.last)
+    identity = arm_identity(study, table.arm, table.schema.table)
+    if table.schedule is not None:
+        identity = seen_identity(study, identity, table.schedule)
+    return Stamp(identity, shard.first, shard.last)
 
 
 def missing(study: Study, out: Path, size: int = SHARD) -> list[Work]:

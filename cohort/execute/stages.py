@@ -4,27 +4,36 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from pathlib import Path
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from cohort.compiled import cache_folder
 from cohort.measure.outcomes import outcomes
 from cohort.model.protocol import Arm, Meal
+from cohort.observe.design import make_design
+from cohort.observe.detector import observations
+from cohort.observe.null import null_table, tables_needed
+from cohort.observe.sampling import Schedule
 from cohort.population import draw
+from cohort.quantities import ANALYTES
 from cohort.study import Study
-from cohort.tables import MEALS, Schema, outcomes_schema, subjects_schema
+from cohort.tables import MEALS, OBSERVATIONS, Schema, outcomes_schema, subjects_schema
 
+Array = NDArray[np.float64]
 Values = dict[str, Any]
 
 
 @dataclass(frozen=True)
 class Table:
-    """One stored table of a study: its name as a folder (`outcomes/fasting`), its arm if any, and its schema."""
+    """One stored table of a study: its name as a folder (`outcomes/fasting`), its arm and schedule if any, its schema."""
 
     folder: str
     arm: Arm | None
     schema: Schema
+    schedule: Schedule | None = None
 
 
 def tables(study: Study) -> tuple[Table, ...]:
@@ -32,8 +41,13 @@ def tables(study: Study) -> tuple[Table, ...]:
     with_id = study.recipe.table is not None and study.recipe.table.id is not None
     first = Table("subjects", None, subjects_schema(study.recipe.varied, with_id))
     meals = tuple(Table(f"meals/{arm.name}", arm, MEALS) for arm in study.arms if has_meals(arm))
+    seen = tuple(
+        Table(f"observations/{arm.name}/{schedule.name}", arm, OBSERVATIONS, schedule)
+        for arm in study.arms
+        for schedule in (study.sampling.schedules if study.sampling else ())
+    )
     last = tuple(Table(f"outcomes/{arm.name}", arm, outcomes_schema(arm.clamp is not None)) for arm in study.arms)
-    return (first, *meals, *last)
+    return (first, *meals, *seen, *last)
 
 
 def has_meals(arm: Arm) -> bool:
@@ -57,12 +71,57 @@ def rows(study: Study, start: int, stop: int, arms: Sequence[str]) -> dict[str, 
     for arm in study.arms:
         if arm.name not in arms:
             continue
-        measured = outcomes(study.model, people.values, people.body_weight_kg, arm)
+        measured = outcomes(study.model, people.values, people.body_weight_kg, arm, sample_times(study, arm))
+        found |= observed(study, arm, measured.sampled, start, stop)
         found[f"outcomes/{arm.name}"] = {"subject": people.subject, **measured.outcomes}
         if has_meals(arm):
             meals = dict(measured.meals)
             found[f"meals/{arm.name}"] = {"subject": people.subject[meals.pop("row")], **meals}
     return found
+
+
+def sample_times(study: Study, arm: Arm) -> Array | None:
+    """Every minute of the arm at which some schedule takes a sample, rising; None without schedules."""
+    if study.sampling is None:
+        return None
+    return np.unique([arm.settle_min + t for s in study.sampling.schedules for t in s.times_min])
+
+
+def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int) -> dict[str, Values]:
+    """Rows of observations/ of subjects start..stop-1, by table folder; sampled: float64[n, 2, times of sample_times]."""
+    found: dict[str, Values] = {}
+    if study.sampling is None:
+        return found
+    times, plan = sample_times(study, arm), study.sampling
+    for schedule in plan.schedules:
+        at = np.searchsorted(times, [arm.settle_min + t for t in schedule.times_min])
+        true = {analyte: np.ascontiguousarray(sampled[:, i, at]) for i, analyte in enumerate(ANALYTES)}
+        forcing = np.full(stop - start, forcing_period_min(arm))
+        found[f"observations/{arm.name}/{schedule.name}"] = observations(
+            true, schedule, plan.readings, plan.rule, study.seed, arm.name, (start, stop), forcing, null_folder()
+        )
+    return found
+
+
+def forcing_period_min(arm: Arm) -> float:
+    """The period of the arm's first periodic input; NaN without one."""
+    periods = (getattr(shape, "period_min", None) for shape in (*arm.glucose, *arm.insulin))
+    return next((float(p) for p in periods if isinstance(p, float)), np.nan)
+
+
+def null_folder() -> Path | None:
+    """Where null tables are kept between runs; None where nothing can be."""
+    folder = cache_folder()
+    return None if folder is None else folder / "null-tables"
+
+
+def warm(study: Study) -> None:
+    """Make what the detector needs once, before there are threads."""
+    for schedule in study.sampling.schedules if study.sampling else ():
+        assert study.sampling is not None
+        design = make_design(np.array(schedule.times_min), study.sampling.rule.band_min)
+        for missing in tables_needed(design, schedule.missed):
+            null_table(design, missing, null_folder())
 
 
 def joined(pieces: Sequence[Values]) -> Values:
@@ -72,7 +131,8 @@ def joined(pieces: Sequence[Values]) -> Values:
 
 def constants(study: Study, table: Table) -> Mapping[str, str]:
     """Columns that hold one word throughout."""
-    return {} if table.arm is None else {"arm": table.arm.name, "model": study.model}
+    schedule = {} if table.schedule is None else {"schedule": table.schedule.name}
+    return {} if table.arm is None else {"arm": table.arm.name, "model": study.model, **schedule}
 
 
 def times(duration_min: float, every_min: float) -> NDArray[np.float64]:

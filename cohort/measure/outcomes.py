@@ -31,17 +31,22 @@ CLAMP_COLUMNS = tuple(column.name for column in CLAMP_OUTCOMES)
 
 @dataclass(frozen=True)
 class Rows:
-    """One arm's tables: `outcomes` with a row a subject, `meals` with a row a subject and meal (`row` says whose)."""
+    """One arm's tables: `outcomes` with a row a subject, `meals` with a row a subject and meal (`row` says whose);
+    sampled: glucose (mg/dL) and insulin (mU/L) at the times asked for, float64[n, 2, times], NaN where a course failed."""
 
     outcomes: Columns
     meals: Columns
+    sampled: Array
 
 
-def outcomes(model: str | Body, values: Array, body_weight_kg: Array, arm: Arm) -> Rows:
+def outcomes(
+    model: str | Body, values: Array, body_weight_kg: Array, arm: Arm, sample_min: Array | None = None
+) -> Rows:
     """Simulate and measure n subjects in one arm.
 
     values: float64[n, len(parameters) + 2], canonical order, then meal_absorption (min) and meal_bioavailability
-    (NaN where the arm's hold); body_weight_kg: float64[n], NaN where there is none. Missing numbers are NaN; words are
+    (NaN where the arm's hold); body_weight_kg: float64[n], NaN where there is none; sample_min: rising times from the
+    arm's beginning at which courses are sampled as well. Missing numbers are NaN; words are
     int8 codes into REGIMES, FAILURES and CYCLE_NOTES; booleans int8; -1 is missing.
     """
     found = body(model) if isinstance(model, str) else model
@@ -51,13 +56,13 @@ def outcomes(model: str | Body, values: Array, body_weight_kg: Array, arm: Arm) 
     tends = None if steady is None else cycles(found, with_secretion(own, arm.secretion), *steady)
     period = np.full(len(values), np.nan) if tends is None else tends.linear_period
     period = np.where(np.isfinite(period), period, BASELINE_MIN)
-    read = _measure(found, own, people, arm, period)
+    read = _measure(found, own, people, arm, period, np.empty(0) if sample_min is None else sample_min)
     forced = _forced(arm)
     columns = _cycle_columns(tends, read.status, forced) | {"forced": np.full(len(values), int(forced), np.int8)}
     columns |= _window_columns(read.window, arm.duration_min - arm.settle_min)
     if arm.clamp is not None:
         columns |= {name: read.clamp[:, i].copy() for i, name in enumerate(CLAMP_COLUMNS)}
-    return Rows(columns, _meal_table(read.meals, eaten(arm)))
+    return Rows(columns, _meal_table(read.meals, eaten(arm)), read.sampled)
 
 
 @dataclass
@@ -68,9 +73,11 @@ class _Measured:
     meals: Array
     clamp: Array
     status: NDArray[np.int64]
+    sample_min: Array
+    sampled: Array
 
 
-def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array) -> _Measured:
+def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array, sample_min: Array) -> _Measured:
     """Integrate the arm and read its courses."""
     n, times = len(own), eaten(arm)
     read = _Measured(
@@ -78,6 +85,8 @@ def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array) -
         np.full((n, len(times), len(MEAL_COLUMNS)), np.nan),
         np.full((n, len(CLAMP_COLUMNS)), np.nan),
         np.full(n, NOT_FINITE),
+        sample_min,
+        np.full((n, len(SEEN), len(sample_min)), np.nan),
     )
     if arm.clamp is not None:
         for begin in range(0, n, BLOCK):
@@ -97,6 +106,9 @@ def _read(read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, t
     some = np.full((len(rows), read.window.shape[1]), np.nan)
     window_rows(*_arrays(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)
     read.window[rows] = some
+    if len(read.sample_min):
+        read.sampled[rows] = course.sample(read.sample_min)
+        read.sampled[rows[course.status != DONE]] = np.nan
     if len(times):
         eating = np.full((len(rows), *read.meals.shape[1:]), np.nan)
         meal_rows(*_arrays(course), times, arm.duration_min, period[rows], eating)

@@ -15,40 +15,17 @@ from numpy.typing import NDArray
 
 from cohort.errors import nearest
 from cohort.observe.design import BAND_MIN, FEWEST_SAMPLES, Design, make_design
-from cohort.observe.null import counted_missing, null_table
+from cohort.observe.null import null_table, serving
 from cohort.observe.sampling import Reading, Schedule, observe
 from cohort.observe.scan import Scan, scan_series
 from cohort.observe.white import baluev_p, baluev_width
-from cohort.quantities import Column
+from cohort.quantities import ANALYTES, DETECTION_COLUMNS
 
 Array = NDArray[np.float64]
 Columns = dict[str, NDArray[Any]]
 
-ANALYTES = ("glucose", "insulin")
 DETECT_IN = (*ANALYTES, "either", "both")
-NOTES = ("too few samples", "constant")
 DECAYING_BELOW = 0.7
-
-DETECTION_COLUMNS: tuple[Column, ...] = (
-    Column("detected", "bool", "", "the whole rule finds a rhythm in the series; no proof of a limit cycle"),
-    Column("rule_p_value", "float64", "1", "p-value of the whole rule, all its analytes together"),
-    Column("p_value", "float64", "1", "of this series' likelihood ratio, from simulated series without a rhythm"),
-    Column("period_min", "float64", "min", "period of the best harmonic, detected or not"),
-    Column("period_se_min", "float64", "min", "its standard error, given that it is the right peak"),
-    Column("amplitude", "float64", "mg/dL or mU/L", "peak to trough of the best harmonic"),
-    Column("relative_amplitude", "float64", "1", "half of peak to trough over the series' mean"),
-    Column("half_ratio", "float64", "1", "its amplitude in the second half over that in the first"),
-    Column("decaying", "bool", "", "that ratio is below 0.7; null where nothing is detected"),
-    Column("samples", "int64", "", "samples present"),
-    Column("note", "words", "", "why the series could not be searched", NOTES),
-    Column("lomb_scargle_power", "float64", "1", "highest normalised power of the band; white noise only"),
-    Column("lomb_scargle_p", "float64", "1", "Baluev's p-value of that power; white noise only"),
-    Column("lomb_scargle_period_min", "float64", "min", "where that power lies; white noise only"),
-    Column("autocorrelation", "float64", "1", "highest peak of the autocorrelation in the band; evenly sampled only"),
-    Column("autocorrelation_period_min", "float64", "min", "its lag"),
-    Column("pulses", "int64", "", "rises and falls beyond the stated number of assay SDs"),
-    Column("power_at_forcing", "float64", "1", "normalised power at the forcing period; null without forcing"),
-)
 
 
 @dataclass(frozen=True)
@@ -177,15 +154,11 @@ def _notes(values: Array, samples: NDArray[np.int64]) -> NDArray[np.int8]:
 
 def _p_values(design: Design, scan: Scan, missing: NDArray[np.int64], folder: Path | None) -> Array:
     p = np.empty(len(missing))
-    served = np.array([_serving(design, int(m)) for m in missing])
+    served = np.array([serving(design, int(m)) for m in missing])
     for m in np.unique(served):
         mine = served == m
         p[mine] = null_table(design, int(m), folder).p_values(scan.statistic[mine], scan.fitted[mine])
     return p
-
-
-def _serving(design: Design, missing: int) -> int:
-    return min(counted_missing(len(design.times_min), missing), len(design.times_min) - FEWEST_SAMPLES)
 
 
 def _white(design: Design, scan: Scan, values: Array) -> dict[str, Array]:

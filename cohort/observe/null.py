@@ -13,13 +13,14 @@ import hashlib
 import os
 import tempfile
 import threading
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.observe.design import Design
+from cohort.observe.design import FEWEST_SAMPLES, Design
 from cohort.observe.scan import Scan, scan_series
 from cohort.population.functions import normal_quantile
 from cohort.population.uniforms import uniforms
@@ -73,6 +74,7 @@ def counted_missing(times: int, missing: int) -> int:
 
 
 _TABLES: dict[str, NullTable] = {}
+_LOCKS: dict[str, threading.Lock] = {}
 _LOCK = threading.Lock()
 
 
@@ -80,10 +82,30 @@ def null_table(design: Design, missing: int, folder: Path | None = None, simulat
     """The table of a design with so many samples missing, from memory, from `folder`, or simulated and kept there."""
     name = f"{_VERSION}:{design.key}:{missing}:{simulated}"
     key = hashlib.blake2b(name.encode(), digest_size=12).hexdigest()
+    if key in _TABLES:
+        return _TABLES[key]
     with _LOCK:
+        mine = _LOCKS.setdefault(key, threading.Lock())
+    with mine:
         if key not in _TABLES:
             _TABLES[key] = _kept(key, folder) or _simulate(design, missing, simulated, key, folder)
         return _TABLES[key]
+
+
+def tables_needed(design: Design, missed: float) -> tuple[int, ...]:
+    """Numbers of missing samples whose tables series on this design may need, if each is missed with this chance."""
+    times = len(design.times_min)
+    if not missed:
+        return (0,)
+    spread = 6.0 * float(np.sqrt(times * missed * (1.0 - missed))) + 1.0
+    low, high = max(int(times * missed - spread), 0), min(int(times * missed + spread) + 1, times)
+    return tuple(sorted({serving(design, m) for m in range(low, high + 1)}))
+
+
+def serving(design: Design, missing: int) -> int:
+    """The number of missing samples whose table serves a series with `missing` of them."""
+    times = len(design.times_min)
+    return min(counted_missing(times, missing), times - FEWEST_SAMPLES)
 
 
 def _kept(key: str, folder: Path | None) -> NullTable | None:
@@ -100,7 +122,10 @@ def _kept(key: str, folder: Path | None) -> NullTable | None:
 
 
 def _simulate(design: Design, missing: int, simulated: int, key: str, folder: Path | None) -> NullTable:
-    found = [_null_scan(design, k, missing, simulated, key) for k in range(len(design.backgrounds))]
+    if missing:
+        _ = design.for_missing  # made once, before there are threads
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        found = list(pool.map(lambda k: _null_scan(design, k, missing, simulated, key), range(len(design.backgrounds))))
     weight = np.ones((len(found), simulated))
     weight[0] = WHITE_WEIGHT
     table = NullTable(

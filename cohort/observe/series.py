@@ -10,8 +10,9 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.observe.design import FEWEST_SAMPLES, MOST_SAMPLES, Design, make_design
-from cohort.observe.detector import ANALYTES, DETECTION_COLUMNS, Columns, Rule, conclude, search
+from cohort.observe.detector import Columns, Rule, conclude, search
 from cohort.observe.table import Series
+from cohort.quantities import ANALYTES, DETECTION_COLUMNS
 
 Array = NDArray[np.float64]
 

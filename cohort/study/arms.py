@@ -32,7 +32,7 @@ Path = tuple[str | int, ...]
 
 MOST_ARMS = 100
 MOST_STOPS = 50_000
-_NAME = re.compile(r"[A-Za-z0-9](?:[A-Za-z0-9 ._+-]{0,58}[A-Za-z0-9])?")
+NAME = re.compile(r"[A-Za-z0-9](?:[A-Za-z0-9 ._+-]{0,58}[A-Za-z0-9])?")
 
 NEEDED: dict[str, tuple[str, ...]] = {
     "constant": ("rate",),
@@ -77,7 +77,7 @@ def _name(tree: Tree, value: Mapping[str, Any], path: Path, taken: list[str], i:
         if not _noted(tree, (*path, "name")):
             tree.problem(path, "name is missing")
         return f"arm {i + 1}"
-    if not _NAME.fullmatch(name):
+    if not NAME.fullmatch(name):
         tree.problem((*path, "name"), f"{name[:60]!r} cannot name a folder; letters, digits, spaces and . _ + - within, at "
                      "most 60")  # fmt: skip
     if name.lower() in [t.lower() for t in taken]:

@@ -123,9 +123,9 @@ def _subject_keys() -> list[Key]:
         Key("subjects.parameters", "table", "laws and fixed values by parameter; the rest stays as published"),
         Key("subjects.parameters.*", "quantity", "a value for everyone, or a law", "as published", ("parameter",)),
         *_law_keys("subjects.parameters.*", ("parameter",)),
-        Key("subjects.population", "table", "draws of the population itself", available=False),
-        Key("subjects.population.outer", "whole", "how many draws", low=2, high=100_000, available=False),
-        Key("subjects.population.inner", "whole", "subjects in each", low=16, high=10**6, available=False),
+        Key("subjects.population", "table", "draws of the population itself, as uncertain as its *_rse say"),
+        Key("subjects.population.outer", "whole", "how many draws", "200", low=8, high=100_000),
+        Key("subjects.population.inner", "whole", "subjects in each", "256", low=16, high=10**6),
         Key("subjects.size", "table", "body weight, which rates per kg need"),
         Key("subjects.size.weight", "quantity", "a weight for everyone, or a law", units=("kg",), low=2.0, high=400.0),
         *_law_keys("subjects.size.weight", ("kg",)),
@@ -146,12 +146,12 @@ def _subject_keys() -> list[Key]:
         Key("subjects.strata[].correlations", "tables", "its own rank correlations, instead of everyone's"),
         Key("subjects.strata[].correlations[].pair", "texts", "two varied parameters"),
         Key("subjects.strata[].correlations[].spearman", "number", "Spearman's rank correlation", low=-1.0, high=1.0),
-        Key("subjects.eligible", "table", "who is recruited, by ARM.OUTCOME", available=False),
-        Key("subjects.eligible.*", "texts", "least and greatest value", available=False),
-        Key("subjects.match", "table", "published means and SDs to match, by ARM.OUTCOME", available=False),
-        Key("subjects.match.*", "table", "a mean and an SD", available=False),
-        Key("subjects.match.*.mean", "text", "the mean to match", available=False),
-        Key("subjects.match.*.sd", "text", "the SD to match", available=False),
+        Key("subjects.eligible", "table", "who is recruited, by ARM.OUTCOME"),
+        Key("subjects.eligible.*", "outcomes", "least and greatest value of that outcome"),
+        Key("subjects.match", "table", "published summaries that weights bring the cohort to, by ARM.OUTCOME"),
+        Key("subjects.match.*", "table", "a published mean and SD"),
+        Key("subjects.match.*.mean", "outcome", "the mean to match"),
+        Key("subjects.match.*.sd", "outcome", "the SD to match"),
     ]  # fmt: skip
 
 
@@ -179,49 +179,50 @@ def _arm_keys() -> list[Key]:
 
 
 def _clinic_keys() -> list[Key]:
-    later = {"available": False}
     time = ("min",)
+    limits = {"glucose": "mg/dL", "insulin": "mU/L"}
     return [
-        Key("sampling", "table", "what the clinic would see, for every arm", **later),  # type: ignore[arg-type]
+        Key("sampling", "table", "what the clinic would see, for every arm"),
         *(
-            Key(f"sampling.{name}", "number", meaning, default, low=0.0, high=2.0, available=False)
-            for name, meaning, default in (
-                ("glucose_cv", "assay error of glucose", "0.02"),
-                ("insulin_cv", "assay error of insulin", "0.06"),
+            Key(f"sampling.{analyte}_cv", "number", f"assay error of {analyte}, relative", default, low=0.0, high=2.0)
+            for analyte, default in (("glucose", "0.02"), ("insulin", "0.06"))
+        ),
+        *(
+            Key(f"sampling.{analyte}_background{part}", kind, meaning, default, units=units, low=0.0, above=part == ".time")
+            for analyte, sd in (("glucose", "0.03"), ("insulin", "0.06"))
+            for part, kind, meaning, default, units in (
+                ("", "table", f"the body's own irregularity of {analyte}, AR(1)", "", ()),
+                (".sd", "number", "its relative standard deviation; 0: none", sd, ()),
+                (".time", "quantity", "its correlation time", "30 min", time),
             )
         ),
         *(
-            Key(f"sampling.{analyte}_background{part}", kind, meaning, units=units, low=0.0, available=False)
-            for analyte in ("glucose", "insulin")
-            for part, kind, meaning, units in (
-                ("", "table", f"the body's own irregularity of {analyte}", ()),
-                (".sd", "number", "its relative standard deviation", ()),
-                (".time", "quantity", "its correlation time", time),
-            )
+            Key(f"sampling.{analyte}_drift", "number", f"SD between subjects of the assay's relative drift of {analyte} in "
+                "24 h", "0", low=0.0, high=1.0)
+            for analyte in limits
         ),
-        Key("sampling.band", "quantities", "periods among which an oscillation is looked for", "60 to 240 min", time,
-            low=1.0, available=False),
-        Key("sampling.false_alarm", "number", "false alarms of the whole rule", "0.05", low=0.0, high=0.5, above=True,
-            available=False),
+        *(
+            Key(f"sampling.{analyte}_detection_limit", "quantity", f"readings of {analyte} below are recorded as this", "0",
+                (unit,), low=0.0)
+            for analyte, unit in limits.items()
+        ),
+        Key("sampling.band", "quantities", "periods among which an oscillation is looked for", "60 to 240 min", time, low=1.0),
+        Key("sampling.false_alarm", "number", "false alarms of the whole rule", "0.05", low=0.0, high=0.5, above=True),
         Key("sampling.detect_in", "word", "where an oscillation must show", "glucose",
-            words=("glucose", "insulin", "either", "both"), available=False),
-        Key("sampling.schedules", "tables", "when samples are taken", available=False),
-        Key("sampling.schedules[].name", "text", "its name", available=False),
-        Key("sampling.schedules[].every", "quantity", "time between samples", units=time, low=0.1, available=False),
-        Key("sampling.schedules[].times", "quantities", "sampling times, instead of every", units=time, low=0.0,
-            available=False),
-        Key("sampling.schedules[].start", "quantity", "first sample, after settling", "0 h", time, low=0.0,
-            available=False),
-        Key("sampling.schedules[].duration", "quantity", "how long samples are taken", units=time, low=1.0,
-            available=False),
-        Key("sampling.schedules[].missed", "number", "share of samples missed", "0", low=0.0, high=0.9,
-            available=False),
-        Key("recruitment", "table", "predictions for real people", available=False),
-        Key("recruitment.sizes", "numbers", "numbers of people recruited", low=1, available=False),
-        Key("recruitment.want", "whole", "oscillators wanted", low=1, available=False),
-        Key("recruitment.assurance", "number", "with this probability", "0.9", low=0.5, high=0.9999, available=False),
-        Key("recruitment.evaluable", "number", "share of recruits who finish", "1", low=0.05, high=1.0,
-            available=False),
+            words=("glucose", "insulin", "either", "both")),
+        Key("sampling.schedules", "tables", "when samples are taken"),
+        Key("sampling.schedules[].name", "text", "its name"),
+        Key("sampling.schedules[].every", "quantity", "time between samples", units=time, low=0.1),
+        Key("sampling.schedules[].times", "quantities", "sampling times after settling, instead of every", units=time,
+            low=0.0),
+        Key("sampling.schedules[].start", "quantity", "first sample, after settling", "0 h", time, low=0.0),
+        Key("sampling.schedules[].duration", "quantity", "how long samples are taken", units=time, low=1.0),
+        Key("sampling.schedules[].missed", "number", "share of samples missed", "0", low=0.0, high=0.9),
+        Key("recruitment", "table", "predictions for real people"),
+        Key("recruitment.sizes", "numbers", "numbers of people recruited", low=1),
+        Key("recruitment.want", "whole", "oscillators wanted", low=1, high=1000),
+        Key("recruitment.assurance", "number", "with this probability", "0.9", low=0.5, high=0.9999),
+        Key("recruitment.evaluable", "number", "share of recruits who finish", "1", low=0.05, high=1.0),
     ]  # fmt: skip
 
 

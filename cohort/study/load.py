@@ -14,10 +14,12 @@ from cohort.errors import Problem, StudyError, nearest
 from cohort.model.catalogue import MODELS
 from cohort.study import arms as arms_of
 from cohort.study import ranking as ranking_of
+from cohort.study import sampling as sampling_of
 from cohort.study import subjects as subjects_of
 from cohort.study.files import Files
 from cohort.study.lines import Path as KeyPath
 from cohort.study.oddities import oddities
+from cohort.study.selection import selection
 from cohort.study.spec import Output, Study
 from cohort.study.tree import Quantity, Tree, check, dotted, read_toml
 
@@ -56,12 +58,14 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study
     protocols = arms_of.arms(tree, card, weighed)
     output = _output(tree, recipe.count, protocols)
     ranking = ranking_of.ranking(tree, recipe, protocols)
+    seen, recruits = sampling_of.sampling(tree, protocols), sampling_of.recruitment(tree)
+    chosen = selection(tree, recipe, protocols)
     if tree.problems:
         raise StudyError(_sorted(tree.problems))
     title = tree.values.get("title", place.stem)
     study = Study(
-        place, data, tuple(overrides), title, model, seed, recipe, protocols, output, ranking, files.digests,
-        dict(_settings(tree.values)),
+        place, data, tuple(overrides), title, model, seed, recipe, protocols, output, ranking, seen, recruits,
+        chosen, files.digests, dict(_settings(tree.values)),
     )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))
     return replace(study, warnings=tuple(warnings), later=tuple(tree.later))

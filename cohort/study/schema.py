@@ -14,6 +14,7 @@ _LEAVES: dict[str, dict[str, Any]] = {
     "number": {"type": "number"},
     "yes/no": {"type": "boolean"},
     "quantity": {"type": ["string", "number"]},
+    "outcome": {"type": ["string", "number"]},
 }
 
 
@@ -44,8 +45,8 @@ def _key(key: Key) -> dict[str, Any]:
         return {"type": "array", "items": _table(f"{key.path}[]"), **described}
     if key.kind == "table":
         return {**_table(key.path), **described}
-    if key.kind in ("texts", "quantities", "numbers"):
-        kind = {"texts": "text", "quantities": "quantity", "numbers": "number"}[key.kind]
+    if key.kind in ("texts", "quantities", "numbers", "outcomes"):
+        kind = {"texts": "text", "quantities": "quantity", "numbers": "number", "outcomes": "outcome"}[key.kind]
         return {"type": "array", "items": _LEAVES[kind], **described}
     leaf: dict[str, Any] = dict(_LEAVES[key.kind])
     if key.words:

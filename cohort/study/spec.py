@@ -10,6 +10,8 @@ from cohort.errors import Problem
 from cohort.infer.ranking import Ranking
 from cohort.model.protocol import Arm
 from cohort.population.recipe import Recipe
+from cohort.study.sampling import Recruitment, Sampling
+from cohort.study.selection import Selection
 
 
 @dataclass(frozen=True)
@@ -25,9 +27,10 @@ class Study:
     """A study file, read and checked.
 
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
-    file order; ranking: what to rank, or None; files: SHA-256 of every data file by the name the study gives it;
-    settings: every key as it counts (overrides applied, arms and strata by name), for telling what changed; warnings:
-    legal but odd; later: blocks that are checked and that no run carries out yet.
+    file order; ranking, sampling, recruitment: None where the study has none; selection: who is counted; files: SHA-256
+    of every data file by the name the study gives it; settings: every key as it counts (overrides applied, arms and
+    strata by name), for telling what changed; warnings: legal but odd; later: blocks that are checked and that no run
+    carries out yet.
     """
 
     path: Path
@@ -40,6 +43,9 @@ class Study:
     arms: tuple[Arm, ...]
     output: Output
     ranking: Ranking | None = None
+    sampling: Sampling | None = None
+    recruitment: Recruitment | None = None
+    selection: Selection = field(default_factory=Selection)
     files: Mapping[str, str] = field(default_factory=dict)
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()

@@ -22,7 +22,7 @@ from cohort.population.laws import (
     Uniform,
     cut,
 )
-from cohort.population.recipe import WEIGHT, WEIGHT_RANGE_KG, Correlation, Recipe, Stratum
+from cohort.population.recipe import WEIGHT, WEIGHT_RANGE_KG, Correlation, Outer, Recipe, Stratum
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 from cohort.study.files import Files
 from cohort.study.tree import Quantity, Tree, dotted
@@ -59,7 +59,8 @@ def recipe(tree: Tree, card: ModelCard, seed: int, files: Files) -> Recipe:
     if "table" in values:
         table = files.subjects(tree, values["table"], card, tuple(s.name for s in strata))
         count = len(table.body_weight_kg) if table is not None else 1
-    made = Recipe(seed, count, draw, card.parameters, card.nominal, strata, scaling, table)
+    outer = _population(tree, values, strata, table)
+    made = Recipe(seed, count, draw, card.parameters, card.nominal, strata, scaling, table, outer)
     _check_correlations(tree, made)
     _check_order(tree, made)
     if table is not None and (made.drawn or size):
@@ -88,6 +89,26 @@ def _count(tree: Tree, values: Mapping[str, Any]) -> tuple[int, str]:
         tree.problem(("subjects", "count"), f"{count:,} is not allowed with draw = 'latin-hypercube', which holds the "
                      f"whole design; at most {LARGEST_HYPERCUBE:,}, or draw = 'random'")  # fmt: skip
     return count, draw
+
+
+def _population(tree: Tree, values: Mapping[str, Any], strata: tuple[Stratum, ...], table: object) -> Outer | None:
+    if "population" not in values:
+        return None
+    path: Path = ("subjects", "population")
+    if table is not None:
+        tree.problem(path, "not allowed beside table, whose people are what they are")
+        return None
+    laws = [law for s in strata for law in (*s.laws.values(), s.weight)]
+    if not any(isinstance(law, Lognormal | Normal) and _uncertain(law) for law in laws):
+        tree.problem(
+            path, "no law says how well it is known (median_rse, mean_rse, cv_rse): every draw would be the same"
+        )
+    found = values["population"]
+    return Outer(found.get("outer", 200), found.get("inner", 256))
+
+
+def _uncertain(law: Lognormal | Normal) -> bool:
+    return bool(law.cv_rse or (law.median_rse if isinstance(law, Lognormal) else law.mean_rse))
 
 
 def _table_alone(tree: Tree, values: Mapping[str, Any], made: Recipe) -> None:

@@ -15,7 +15,7 @@ from cohort.study.units import UnitError, parse
 
 LARGEST_TEXT = 2_000_000
 _ANY = "*"
-UNREAD = ("map", "subjects.eligible", "subjects.match")
+UNREAD = ("map",)
 """Blocks whose keys are not settled yet: only their name is known."""
 
 
@@ -141,7 +141,7 @@ def _value(out: Tree, value: Any, path: Path, key: Key) -> Any:
     if key.kind == "table":
         out.problem(path, f"{_shown(value)} is not allowed; a table is wanted: {key.meaning}")
         return None
-    if key.kind in ("texts", "quantities", "numbers"):
+    if key.kind in ("texts", "quantities", "numbers", "outcomes"):
         return _list(out, value, path, key)
     return _leaf(out, value, path, key)
 
@@ -168,10 +168,14 @@ def _list(out: Tree, value: Any, path: Path, key: Key) -> Any:
 
 
 def _leaf(out: Tree, value: Any, path: Path, key: Key) -> Any:
-    kind = {"texts": "text", "quantities": "quantity", "numbers": "number"}.get(key.kind, key.kind)
-    if kind == "quantity":
+    kind = {"texts": "text", "quantities": "quantity", "numbers": "number", "outcomes": "outcome"}.get(
+        key.kind, key.kind
+    )
+    if kind == "outcome":  # its unit is the outcome's, which the reader of the block knows
+        good = isinstance(value, str | int | float) and not isinstance(value, bool)
+    elif kind == "quantity":
         return _quantity(out, value, path, key)
-    if kind == "yes/no":
+    elif kind == "yes/no":
         good = isinstance(value, bool)
     elif kind in ("text", "word"):
         good = isinstance(value, str)

@@ -7,8 +7,9 @@ import pytest
 
 from cohort.observe import null
 from cohort.observe.design import Design, make_design
-from cohort.observe.detector import ANALYTES, Rule, conclude, decide, search, whole_rule
+from cohort.observe.detector import Rule, conclude, decide, search, whole_rule
 from cohort.observe.scan import scan_series
+from cohort.quantities import ANALYTES
 
 TEN = np.arange(0.0, 720.0, 10.0)
 IRREGULAR = np.sort(np.random.default_rng(5).choice(np.arange(0.0, 721.0, 5.0), 50, replace=False))

@@ -5,8 +5,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from cohort.observe.detector import ANALYTES, Rule, observations
+from cohort.observe.detector import Rule, observations
 from cohort.observe.sampling import Reading, Schedule, autoregression, every, observe
+from cohort.quantities import ANALYTES
 
 HOURLY = every("hourly", 60.0, 1440.0, missed=0.1)
 READING = Reading(0.02, 0.03, 30.0, drift_sd_per_day=0.05)
