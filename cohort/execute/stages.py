@@ -92,7 +92,8 @@ def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int) -> d
     found: dict[str, Values] = {}
     if study.sampling is None:
         return found
-    times, plan = sample_times(study, arm), study.sampling
+    plan = study.sampling
+    times = np.asarray(sample_times(study, arm))
     for schedule in plan.schedules:
         at = np.searchsorted(times, [arm.settle_min + t for t in schedule.times_min])
         true = {analyte: np.ascontiguousarray(sampled[:, i, at]) for i, analyte in enumerate(ANALYTES)}
