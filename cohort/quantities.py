@@ -175,6 +175,7 @@ KEY_COLUMNS: dict[str, Column] = {
         Column("model", "text", "", "the body's equations"),
         Column("stratum", "text", "", "the subgroup the subject belongs to"),
         Column("id", "text", "", "the subject's own name, from the table of subjects"),
+        Column("person", "int64", "", "the person this is one draw of, from the table of subjects"),
         Column("schedule", "text", "", "when samples were taken"),
         Column("analyte", "words", "", "what was read", ANALYTES),
         Column("body_weight_kg", "float64", "kg", "body weight; null without sizes"),
@@ -183,10 +184,16 @@ KEY_COLUMNS: dict[str, Column] = {
 
 INCIDENCE_COLUMNS: tuple[Column, ...] = (
     Column("arm", "text", "", "what was done"),
+    Column("schedule", "text", "", "the schedule of what was detected; null for regimes, which need none"),
     Column("stratum", "text", "", "the subgroup, or everyone"),
-    Column("regime", "text", "", "the regime counted; oscillates: sustained and bistable together"),
+    Column(
+        "regime",
+        "text",
+        "",
+        "the regime counted; oscillates: sustained and bistable; or what a schedule detects, truly oscillating or not",
+    ),
     Column("n", "int64", "", "subjects in it"),
-    Column("share", "float64", "1", "their share; unresolved subjects counted half"),
+    Column("share", "float64", "1", "their share, weighted where people are matched; unresolved subjects counted half"),
     Column("low", "float64", "1", "lower end of the 95 % interval of Monte Carlo error"),
     Column("high", "float64", "1", "upper end"),
     Column("denominator", "int64", "", "subjects counted"),
@@ -194,6 +201,48 @@ INCIDENCE_COLUMNS: tuple[Column, ...] = (
         "unresolved", "int64", "", "undecided or failed subjects, counted once as no and once as yes by the interval"
     ),
     Column("method", "text", "", "how the interval was made"),
+)
+
+WEIGHT_COLUMNS: tuple[Column, ...] = (
+    Column("subject", "int64", "", "the virtual subject, from 0"),
+    Column("eligible", "bool", "", "within all bounds of subjects.eligible"),
+    Column("weight", "float64", "1", "weight in every count; 0 for who is not eligible"),
+)
+
+POPULATION_COLUMNS: tuple[Column, ...] = (
+    Column("draw", "int64", "", "draw of the population; 0 is the stated one"),
+    Column("arm", "text", "", "what was done"),
+    Column("schedule", "text", "", "the schedule of what was detected; null where nothing is sampled"),
+    Column("stratum", "text", "", "the subgroup, or everyone"),
+    Column("n", "int64", "", "subjects counted (eligible ones)"),
+    Column("oscillating", "int64", "", "of them sustained or bistable; null without a steady input"),
+    Column("unresolved", "int64", "", "of them undecided or failed"),
+    Column("detected", "int64", "", "of them detected through the schedule"),
+    Column("detected_oscillating", "int64", "", "of them detected and oscillating"),
+)
+
+RECRUITMENT_COLUMNS: tuple[Column, ...] = (
+    Column("arm", "text", "", "what was done; of differences: one arm minus another"),
+    Column("schedule", "text", "", "the schedule of what is detected; of differences: one minus another"),
+    Column("stratum", "text", "", "the subgroup, or everyone"),
+    Column("counted", "text", "", "oscillates, detected, or detected split into truly oscillating and not"),
+    Column("recruited", "int64", "", "people recruited; null in rows on the number to recruit"),
+    Column("expected", "float64", "1", "how many of them are expected to finish and be counted"),
+    Column("low", "float64", "1", "lower end of the central 90 % interval for that many real people"),
+    Column("high", "float64", "1", "upper end"),
+    Column(
+        "at_least_wanted",
+        "float64",
+        "1",
+        "probability of at least as many as wanted; in rows on power, of telling the two strata apart",
+    ),
+    Column("to_recruit", "int64", "", "fewest recruits for as many as wanted with the assurance asked for"),
+    Column("share", "float64", "1", "the share it rests on"),
+    Column(
+        "share_sd", "float64", "1", "its SD: Monte Carlo error, and uncertainty of the population where that is stated"
+    ),
+    Column("uncertainty", "text", "", "what the interval holds"),
+    Column("refused", "text", "", "why there is no number"),
 )
 
 RANKING_COLUMNS: tuple[Column, ...] = (

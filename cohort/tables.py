@@ -31,13 +31,16 @@ from cohort.quantities import (
     KEY_COLUMNS,
     MEAL_OUTCOMES,
     PARAMETERS,
+    POPULATION_COLUMNS,
     RANKING_COLUMNS,
+    RECRUITMENT_COLUMNS,
     SENSITIVITY_COLUMNS,
+    WEIGHT_COLUMNS,
     WINDOW_OUTCOMES,
     Column,
 )
 
-Values = Mapping[str, NDArray[Any] | Sequence[str] | str]
+Values = Mapping[str, NDArray[Any] | Sequence[str] | Sequence[str | None] | str]
 
 _TYPES = {
     "int64": pa.int64(),
@@ -67,11 +70,30 @@ class Schema:
         )
 
 
-def subjects_schema(varied: Sequence[str], with_id: bool) -> Schema:
+def population_schema(laws: Sequence[str]) -> Schema:
+    """population/: a row a draw, arm, schedule and stratum; `laws` are names of what the draws move."""
+    known = PARAMETERS | INPUT_PARAMETERS
+    moved = []
+    for name in laws:
+        unit = known[name].unit if name in known else "kg"
+        moved += [
+            Column(
+                f"{name}_median",
+                "float64",
+                unit,
+                f"median (of a normal law the mean) of {name} in this draw and stratum",
+            ),
+            Column(f"{name}_cv", "float64", "1", f"coefficient of variation of {name} in this draw and stratum"),
+        ]
+    return Schema("population", (*POPULATION_COLUMNS, *moved))
+
+
+def subjects_schema(varied: Sequence[str], with_id: bool, with_person: bool = False) -> Schema:
     """subjects/: who was simulated, every varied parameter as integrated."""
     known = PARAMETERS | INPUT_PARAMETERS
     parameters = tuple(Column(p, "float64", known[p].unit, known[p].meaning) for p in varied)
-    keys = ("subject", *(("id",) if with_id else ()), "stratum", "body_weight_kg")
+    named = (*(("id",) if with_id else ()), *(("person",) if with_person else ()))
+    keys = ("subject", *named, "stratum", "body_weight_kg")
     return Schema("subjects", (*(KEY_COLUMNS[k] for k in keys), *parameters))
 
 
@@ -87,6 +109,8 @@ TIME_COURSES = Schema("time_courses", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"
 OBSERVATIONS = Schema(
     "observations", (*(KEY_COLUMNS[k] for k in ("subject", "arm", "schedule", "analyte")), *DETECTION_COLUMNS)
 )
+WEIGHTS = Schema("weights", WEIGHT_COLUMNS)
+RECRUITMENT = Schema("recruitment", RECRUITMENT_COLUMNS)
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
 SENSITIVITY = Schema("sensitivity", SENSITIVITY_COLUMNS)
 CONVERGENCE = Schema("convergence", CONVERGENCE_COLUMNS)

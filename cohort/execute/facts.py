@@ -2,14 +2,23 @@
 
 from __future__ import annotations
 
+from dataclasses import asdict
 from typing import Any
 
 import numpy as np
 
+from cohort.model.body import body
 from cohort.model.inputs import People, steady_input
 from cohort.model.protocol import Arm
+from cohort.model.rest import at_rest
+from cohort.population import draw
 from cohort.quantities import REFERENCE_WEIGHT_KG
+from cohort.simulate.run import observe_states, with_secretion
+from cohort.study import Study
 from cohort.study.arms import has_steady_input
+
+FASTING_PEOPLE = 4096
+FASTING_QUANTILES = (0.05, 0.5, 0.95)
 
 DISAGREES_NONE_BELOW = 1e-9
 DISAGREES_AROUND_MG_PER_MIN = 6.0 * REFERENCE_WEIGHT_KG
@@ -28,6 +37,41 @@ def arm_facts(arm: Arm) -> dict[str, Any]:
         "disagrees": steady is not None and disagrees(steady),
         "clamped": arm.clamp is not None,
     }
+
+
+def sampling_facts(study: Study) -> dict[str, Any] | None:
+    """Schedules, what each cannot see, and whether the body's own irregularity is left out (then detection is optimistic)."""
+    plan = study.sampling
+    if plan is None:
+        return None
+    return {
+        "schedules": [s.name for s in plan.schedules],
+        "unseen": dict(plan.unseen),
+        "rule": asdict(plan.rule),
+        "readings": {analyte: asdict(reading) for analyte, reading in plan.readings.items()},
+        "optimistic": any(not reading.background_sd for reading in plan.readings.values()),
+    }
+
+
+def fasting_facts(study: Study) -> dict[str, Any]:
+    """Glucose (mg/dL) and insulin (mU/L) of the first 4,096 people at rest with nothing given, by stratum: quantiles."""
+    found = body(study.model)
+    people = draw(study.recipe, 0, min(study.recipe.count, FASTING_PEOPLE))
+    own = np.ascontiguousarray(people.values[:, : len(found.card.parameters)])
+    nothing = np.zeros(len(own))
+    parameters = with_secretion(own, 1.0)
+    rest = at_rest(found, parameters, nothing, nothing)
+    seen = observe_states(found, rest.states, nothing, nothing, parameters)
+    columns = list(found.traced.observed)
+    facts: dict[str, Any] = {}
+    for code, name in enumerate(study.recipe.stratum_names):
+        here = (people.stratum == code) & np.isfinite(rest.states).all(axis=1)
+        facts[name] = {"n": int(here.sum())}
+        for column in ("glucose_mg_dl", "insulin_mu_l"):
+            values = seen[here, columns.index(column)]
+            marks = np.quantile(values, FASTING_QUANTILES) if len(values) else [np.nan] * 3
+            facts[name][column] = [None if m != m else float(m) for m in marks]
+    return facts
 
 
 def steady_at_reference(arm: Arm) -> float | None:

@@ -78,6 +78,16 @@ def seen_identity(study: Study, arm: str, schedule: Schedule) -> str:
     return _digest(["observations", arm, plain(schedule), readings, plain(study.sampling.rule), SIMULATED])
 
 
+def population_identity(study: Study, arm: Arm) -> str:
+    """Of an arm's counts by draw of the population: laws with their uncertainty, inner subjects, eligibility, schedules."""
+    recipe = plain(study.recipe)[1]
+    recipe.pop("count")
+    chosen = [plain(study.selection.eligible), [plain(a) for a in study.arms if a.name in study.selection.arms]]
+    seen = [seen_identity(study, "", s) for s in study.sampling.schedules] if study.sampling else []
+    kernels = [kernel_identity(), ORDER, TOLERANCE]
+    return _digest(["population", study.model, recipe, plain(arm), chosen, seen, *kernels])
+
+
 def ranking_identity(study: Study, design: Design, arm: Arm) -> str:
     """Of an arm's runs of a ranking: the stratum's laws, the design without its size, the arm, kernels and accuracy."""
     recipe = plain(study.recipe)[1]

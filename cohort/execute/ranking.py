@@ -67,7 +67,7 @@ def run_ranking(study: Study, out: Path, workers: int, progress: Progress | None
 
 def slots_of(study: Study, before: Mapping[str, Any]) -> dict[str, int]:
     """A number for every arm that stays its own when arms are added: those of a folder's record first."""
-    known = {arm["name"]: int(arm["slot"]) for arm in (before.get("ranking") or {}).get("arms", [])}
+    known = {str(name): int(slot) for name, slot in (before.get("slots") or {}).items()}
     free = (i for i in range(len(study.arms) + len(known)) if i not in known.values())
     return {arm.name: known[arm.name] if arm.name in known else next(free) for arm in study.arms}
 

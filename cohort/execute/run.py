@@ -11,7 +11,7 @@ import sys
 import threading
 import time
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from functools import partial
 from importlib import metadata
 from pathlib import Path
@@ -19,8 +19,9 @@ from typing import Any
 
 from cohort.errors import Problem, RunError, StudyError
 from cohort.execute.courses import keep_courses
-from cohort.execute.facts import arm_facts
+from cohort.execute.facts import arm_facts, fasting_facts, sampling_facts
 from cohort.execute.identity import arm_identity, first_difference, subjects_identity
+from cohort.execute.population import run_population
 from cohort.execute.progress import Progress
 from cohort.execute.ranking import run_ranking, slots_of, strays_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
@@ -90,8 +91,11 @@ def _all_runs(
     _compile(study)
     done, kept = _simulate(study, out, workers, shard_size, progress)
     keep_courses(study, out)
+    slots = record["slots"]
+    if study.recipe.population:
+        made, there = run_population(study, out, workers, progress, slots)
+        done, kept = done + made, kept + there
     if study.ranking:
-        slots = {arm["name"]: arm["slot"] for arm in record["ranking"]["arms"]}
         ranked = run_ranking(study, out, workers, progress, slots)
         record["ranking"] = as_plain(ranked.facts)
         done, kept = done + ranked.made, kept + ranked.kept
@@ -248,9 +252,13 @@ def _record(study: Study, workers: int, shard_size: int, before: Mapping[str, An
             "subjects": subjects_identity(study),
             "outcomes": {arm.name: arm_identity(study, arm, "outcomes") for arm in study.arms},
         },
-        "ranking": {"arms": [{"name": n, "slot": i} for n, i in slots_of(study, before).items()]}
-        if study.ranking
-        else None,
+        "slots": slots_of(study, before),
+        "sampling": sampling_facts(study),
+        "recruitment": asdict(study.recruitment) if study.recruitment else None,
+        "selection": asdict(study.selection),
+        "persons": study.recipe.table is not None and study.recipe.table.person is not None,
+        "population": asdict(study.recipe.population) if study.recipe.population else None,
+        "fasting": fasting_facts(study),
         "settings": dict(study.settings),
         "overrides": list(study.overrides),
         "study_texts": [*texts, study.text.decode("utf-8", "replace")],

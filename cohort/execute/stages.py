@@ -38,8 +38,10 @@ class Table:
 
 def tables(study: Study) -> tuple[Table, ...]:
     """Every table of a study in the order its parts are written: outcomes come last, and make a shard count."""
-    with_id = study.recipe.table is not None and study.recipe.table.id is not None
-    first = Table("subjects", None, subjects_schema(study.recipe.varied, with_id))
+    given = study.recipe.table
+    with_id = given is not None and given.id is not None
+    with_person = given is not None and given.person is not None
+    first = Table("subjects", None, subjects_schema(study.recipe.varied, with_id, with_person))
     meals = tuple(Table(f"meals/{arm.name}", arm, MEALS) for arm in study.arms if has_meals(arm))
     seen = tuple(
         Table(f"observations/{arm.name}/{schedule.name}", arm, OBSERVATIONS, schedule)
@@ -67,6 +69,8 @@ def rows(study: Study, start: int, stop: int, arms: Sequence[str]) -> dict[str, 
     }
     if recipe.table is not None and recipe.table.id is not None:
         subject["id"] = np.array(recipe.table.id[start:stop], dtype=object)
+    if recipe.table is not None and recipe.table.person is not None:
+        subject["person"] = recipe.table.person[start:stop]
     found: dict[str, Values] = {"subjects": subject}
     for arm in study.arms:
         if arm.name not in arms:

@@ -26,7 +26,7 @@ class Share:
     method: str
 
 
-def wilson(k: float, n: int, z: float = Z_95) -> tuple[float, float]:
+def wilson(k: float, n: float, z: float = Z_95) -> tuple[float, float]:
     """Wilson's score interval of a share (J Am Stat Assoc 1927;22:209-212); (0, 1) for n = 0."""
     if n == 0:
         return 0.0, 1.0
@@ -42,6 +42,15 @@ def share(k: int, n: int, unresolved: int = 0) -> Share:
     low, _ = wilson(k, n)
     _, high = wilson(k + unresolved, n)
     return Share(k, n, unresolved, (k + 0.5 * unresolved) / n if n else np.nan, low, high, "Wilson 95 %")
+
+
+def share_of_effective(p: float, open_: float, effective: float, k: int, unresolved: int, n: int) -> Share:
+    """A weighted share p, with a share `open_` unresolved, worth `effective` independent people; k, unresolved and n are
+    plain numbers of subjects. Wilson's interval at the effective number."""
+    low, _ = wilson(p * effective, effective)
+    _, high = wilson((p + open_) * effective, effective)
+    low, high = (0.0 if k == 0 else low), (1.0 if k + unresolved == n else high)
+    return Share(k, n, unresolved, p + 0.5 * open_, low, high, f"Wilson 95 % at {effective:,.0f} effective people")
 
 
 def share_of_scrambles(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]) -> Share:

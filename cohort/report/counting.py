@@ -1,53 +1,124 @@
-"""Who oscillates, by arm and stratum: incidence.parquet from the outcomes."""
+"""Who oscillates and who would be detected, by arm, schedule and stratum: incidence.parquet."""
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.infer.counts import Share, share, share_of_scrambles
+from cohort.infer.counts import Share, share, share_of_effective, share_of_scrambles
 from cohort.population.designs import SCRAMBLES
 from cohort.quantities import REGIMES
+from cohort.report.chosen import Chosen
 from cohort.report.results import Results
-from cohort.tables import INCIDENCE, read_part, write_table
+from cohort.tables import INCIDENCE, numbers, read_part, write_table
+
+Array = NDArray[np.float64]
+Codes = NDArray[np.int64]
 
 EVERYONE = "everyone"
 OSCILLATES = "oscillates"
+DETECTED, DETECTED_TRUE, DETECTED_FALSE = "detected", "detected and oscillating", "detected and not oscillating"
 _YES = tuple(REGIMES.index(r) for r in ("sustained", "bistable"))
 _UNRESOLVED = tuple(REGIMES.index(r) for r in ("undecided", "failed"))
+NO, YES, UNKNOWN = range(3)
 
 
 @dataclass(frozen=True)
 class Count:
-    """Subjects of one arm and stratum in one regime (or all that oscillate)."""
+    """Subjects of one arm and stratum in one regime (or all that oscillate), or detected through one schedule."""
 
     arm: str
+    schedule: str | None
     stratum: str
     regime: str
     share: Share
 
 
-def regime_counts(results: Results, arm: str) -> NDArray[np.int64]:
-    """Subjects by stratum, scramble of the draw and regime: int64[strata, scrambles, regimes]; the last regime entry
-    counts those without one (no steady input)."""
-    strata, scrambles = results.record["strata"], SCRAMBLES if results.record["draw"] == "sobol" else 1
-    counts = np.zeros((len(strata), scrambles, len(REGIMES) + 1), np.int64)
-    for number in results.whole_shards:
-        who = read_part(results.folder / "subjects", number, ["subject", "stratum"])
-        what = read_part(results.folder / "outcomes" / arm, number, ["subject", "regime"])
-        subject = np.asarray(who.column("subject"))
-        stratum = _codes(who.column("stratum"), strata)
+@dataclass(frozen=True)
+class Tally:
+    """Weights and numbers of subjects: float64[strata, scrambles, cells]; effective float64[strata + 1], the last of all."""
+
+    weights: Array
+    numbers: Array
+    effective: Array
+    plain: bool
+
+
+def count_all(results: Results, who: Chosen | None) -> list[Count]:
+    """Every count of a run: regimes where an arm has a steady input, then detections, arms in order."""
+    found: list[Count] = []
+    for arm in results.arms:
+        steady = results.record["arm_facts"][arm]["steady_mg_per_min"] is not None
+        if steady:
+            found += _grouped(results, arm, None, regime_tally(results, arm, who), _regime_shares)
+        for schedule in results.schedules:
+            tally = detection_tally(results, arm, schedule, who)
+            found += _grouped(results, arm, schedule, tally, _detection_shares if steady else _detected_only)
+    return found
+
+
+def regime_tally(results: Results, arm: str, who: Chosen | None) -> Tally:
+    """Subjects by regime; the last cell counts those without one (no steady input)."""
+
+    def cells(number: int) -> Codes:
+        what = read_part(results.folder / "outcomes" / arm, number, ["regime"])
         regime = _codes(what.column("regime"), REGIMES)
-        regime[regime < 0] = len(REGIMES)
-        np.add.at(counts, (stratum, subject % scrambles, regime), 1)
-    return counts
+        return np.where(regime < 0, len(REGIMES), regime)
+
+    return _tally(results, who, cells, len(REGIMES) + 1)
 
 
-def _codes(column: Any, words: Any) -> NDArray[np.int64]:
+def detection_tally(results: Results, arm: str, schedule: str, who: Chosen | None) -> Tally:
+    """Subjects by 3 x detected + oscillating, each no, yes or unknown."""
+
+    def cells(number: int) -> Codes:
+        detected = detections(results, arm, schedule, number)
+        truly = numbers(read_part(results.folder / "outcomes" / arm, number, ["oscillates"]), "oscillates")
+        return 3 * detected + np.where(np.isnan(truly), UNKNOWN, np.where(truly == 1.0, YES, NO))
+
+    return _tally(results, who, cells, 9)
+
+
+def detections(results: Results, arm: str, schedule: str, number: int) -> Codes:
+    """Whether each subject of a shard is detected: NO, YES or UNKNOWN."""
+    part = read_part(results.folder / "observations" / arm / schedule, number, ["analyte", "detected"])
+    first = np.array([word == "glucose" for word in part.column("analyte").to_pylist()], dtype=bool)
+    detected = numbers(part, "detected")[first]
+    return np.where(np.isnan(detected), UNKNOWN, np.where(detected == 1.0, YES, NO)).astype(np.int64)
+
+
+def _tally(results: Results, who: Chosen | None, cells: Callable[[int], Codes], width: int) -> Tally:
+    strata = results.record["strata"]
+    scrambles = SCRAMBLES if results.record["draw"] == "sobol" else 1
+    weights = np.zeros((len(strata), scrambles, width))
+    counts = np.zeros_like(weights)
+    groups, start = [], 0
+    for number in results.whole_shards:
+        table = read_part(results.folder / "subjects", number, ["subject", "stratum"])
+        stratum = _codes(table.column("stratum"), strata)
+        subject, cell = np.asarray(table.column("subject")), cells(number)
+        here = slice(start, start + len(cell))
+        counted = np.ones(len(cell), dtype=bool) if who is None else who.counted[here]
+        weight = np.ones(len(cell)) if who is None else who.weight[here]
+        at = (stratum[counted], subject[counted] % scrambles, cell[counted])
+        np.add.at(weights, at, weight[counted])
+        np.add.at(counts, at, 1.0)
+        if who is not None:
+            groups.append(stratum)
+        start += len(cell)
+    if who is None:
+        by_stratum = counts.sum(axis=(1, 2))
+        return Tally(weights, counts, np.append(by_stratum, by_stratum.sum()), True)
+    stratum = np.concatenate(groups)
+    masks = [*(stratum == i for i in range(len(strata))), np.ones(len(stratum), dtype=bool)]
+    return Tally(weights, counts, np.array([who.effective(mask) for mask in masks]), who.how == "plain")
+
+
+def _codes(column: Any, words: Any) -> Codes:
     place = {word: i for i, word in enumerate(words)}
     coded = column.combine_chunks().dictionary_encode()
     known = np.array([place.get(str(w), -1) for w in coded.dictionary.to_pylist()] or [-1])
@@ -55,46 +126,84 @@ def _codes(column: Any, words: Any) -> NDArray[np.int64]:
     return np.asarray(np.append(known, -1)[indices], dtype=np.int64)
 
 
-def count_regimes(results: Results) -> list[Count]:
-    """Every count of a run, arms in order, everyone before each stratum; arms without a steady input have none."""
-    found: list[Count] = []
+@dataclass(frozen=True)
+class _Group:
+    """One group of a tally: weights and numbers float64[scrambles, cells], and what it is worth in independent people."""
+
+    weights: Array
+    numbers: Array
+    effective: float
+    plain: bool
+
+    def share(self, yes: tuple[int, ...], unresolved: tuple[int, ...]) -> Share:
+        """The share in these cells, with those that may belong there."""
+        k, u, n = (self.numbers[:, list(c)].sum(axis=1) for c in (yes, unresolved, range(self.numbers.shape[1])))
+        if not self.plain:
+            w = self.weights.sum(axis=0)
+            total = float(w.sum()) or 1.0
+            return share_of_effective(
+                float(w[list(yes)].sum()) / total, float(w[list(unresolved)].sum()) / total, self.effective,
+                int(k.sum()), int(u.sum()), int(n.sum()),
+            )  # fmt: skip
+        whole = k.astype(np.int64), u.astype(np.int64), n.astype(np.int64)
+        if len(n) > 1 and (n > 0).all():
+            return share_of_scrambles(*whole)
+        return share(*(int(x.sum()) for x in (whole[0], whole[2], whole[1])))
+
+
+def _grouped(
+    results: Results,
+    arm: str,
+    schedule: str | None,
+    tally: Tally,
+    shares: Callable[[_Group], Iterator[tuple[str, Share]]],
+) -> Iterator[Count]:
     strata = results.record["strata"]
-    for arm in results.arms:
-        if results.record["arm_facts"][arm]["steady_mg_per_min"] is None:
-            continue
-        counts = regime_counts(results, arm)
-        groups = [(EVERYONE, counts.sum(axis=0))]
-        if len(strata) > 1:
-            groups += [(name, counts[i]) for i, name in enumerate(strata)]
-        for name, group in groups:
-            found += [Count(arm, name, regime, made) for regime, made in _shares(group)]
-    return found
+    groups = [
+        (EVERYONE, _Group(tally.weights.sum(axis=0), tally.numbers.sum(axis=0), tally.effective[-1], tally.plain))
+    ]
+    if len(strata) > 1:
+        groups += [
+            (name, _Group(tally.weights[i], tally.numbers[i], tally.effective[i], tally.plain))
+            for i, name in enumerate(strata)
+        ]
+    for name, group in groups:
+        for regime, found in shares(group):
+            yield Count(arm, schedule, name, regime, found)
 
 
-def _shares(group: NDArray[np.int64]) -> Iterator[tuple[str, Share]]:
-    """Shares of one group: int64[scrambles, regimes + 1]."""
-    n = group.sum(axis=1)
-    unresolved = group[:, _UNRESOLVED].sum(axis=1)
-    none = np.zeros_like(unresolved)
-    yield OSCILLATES, _share(group[:, _YES].sum(axis=1), unresolved, n)
+def _regime_shares(group: _Group) -> Iterator[tuple[str, Share]]:
+    yield OSCILLATES, group.share(_YES, _UNRESOLVED)
     for i, regime in enumerate(REGIMES):
-        yield regime, _share(group[:, i], none if i in _UNRESOLVED else unresolved, n)
+        yield regime, group.share((i,), () if i in _UNRESOLVED else _UNRESOLVED)
 
 
-def _share(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]) -> Share:
-    if len(n) > 1 and (n > 0).all():
-        return share_of_scrambles(yes, unresolved, n)
-    return share(int(yes.sum()), int(n.sum()), int(unresolved.sum()))
+def _cell(detected: int, truly: int) -> int:
+    return 3 * detected + truly
+
+
+def _detected_only(group: _Group) -> Iterator[tuple[str, Share]]:
+    every = (NO, YES, UNKNOWN)
+    yield DETECTED, group.share(tuple(_cell(YES, t) for t in every), tuple(_cell(UNKNOWN, t) for t in every))
+
+
+def _detection_shares(group: _Group) -> Iterator[tuple[str, Share]]:
+    yield from _detected_only(group)
+    for name, truly in ((DETECTED_TRUE, YES), (DETECTED_FALSE, NO)):
+        open_ = (_cell(YES, UNKNOWN), _cell(UNKNOWN, truly), _cell(UNKNOWN, UNKNOWN))
+        yield name, group.share((_cell(YES, truly),), open_)
 
 
 def write_incidence(results: Results, counts: list[Count]) -> None:
     """Write incidence.parquet."""
     shares = [c.share for c in counts]
+    schedules: list[str | None] = [c.schedule for c in counts]
     write_table(
         results.folder / "incidence.parquet",
         INCIDENCE,
         {
-            "arm": [c.arm for c in counts], "stratum": [c.stratum for c in counts],
+            "arm": [c.arm for c in counts], "schedule": schedules,
+            "stratum": [c.stratum for c in counts],
             "regime": [c.regime for c in counts], "n": np.array([s.k for s in shares], np.int64),
             "share": np.array([s.share for s in shares], float), "low": np.array([s.low for s in shares], float),
             "high": np.array([s.high for s in shares], float),

@@ -40,10 +40,16 @@ class Results:
         """Names of the arms."""
         return tuple(self.record["arms"])
 
+    @property
+    def schedules(self) -> tuple[str, ...]:
+        """Names of the sampling schedules."""
+        return tuple((self.record.get("sampling") or {}).get("schedules", ()))
+
     @cached_property
     def whole_shards(self) -> tuple[int, ...]:
         """Numbers of the shards of which every table has its part, outcomes last."""
-        tables = ["subjects", *(f"outcomes/{arm}" for arm in self.arms)]
+        seen = [f"observations/{arm}/{schedule}" for arm in self.arms for schedule in self.schedules]
+        tables = ["subjects", *seen, *(f"outcomes/{arm}" for arm in self.arms)]
         names = [{path.name for path in (self.folder / table).glob("part-*.parquet")} for table in tables]
         return tuple(int(name[5:11]) for name in sorted(set.intersection(*names)))
 
@@ -58,6 +64,16 @@ class Results:
     def meals(self, arm: str) -> pa.Table:
         """meals/<arm>/: a row a subject and meal."""
         return self._parts(f"meals/{arm}", None)
+
+    def observations(self, arm: str, schedule: str) -> pa.Table:
+        """observations/<arm>/<schedule>/: a row a subject and analyte."""
+        return self._parts(f"observations/{arm}/{schedule}", None)
+
+    def recruitment(self) -> pa.Table:
+        """recruitment.parquet: predictions for real people."""
+        from cohort.tables import read_table
+
+        return read_table(self.folder / "recruitment.parquet")
 
     def time_courses(self, arm: str) -> pa.Table:
         """time_courses/<arm>/: kept courses, a row a point."""

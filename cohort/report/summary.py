@@ -8,11 +8,15 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
 from cohort.errors import Problem, RunError, StudyError
 from cohort.quantities import REGIMES
-from cohort.report.counting import EVERYONE, OSCILLATES, Count, count_regimes, write_incidence
+from cohort.report.chosen import Chosen, chosen
+from cohort.report.clinic import detection_lines, fasting_lines, people_lines, recruitment_lines, sampling_lines
+from cohort.report.counting import EVERYONE, OSCILLATES, Count, count_all, write_incidence
 from cohort.report.ranking import rank, ranking_words
+from cohort.report.recruitment import recruit
 from cohort.report.results import Results
 from cohort.tables import numbers, read_part, write_bytes
 
@@ -47,8 +51,10 @@ def rebuild(folder: Path) -> tuple[Results, dict[str, Any]]:
 
 
 def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
-    counts = count_regimes(results)
+    who = chosen(results)
+    counts = count_all(results, who)
     write_incidence(results, counts)
+    recruitment = recruit(results, counts, who)
     summary = {
         "title": results.record["title"],
         "model": results.record["model"],
@@ -57,8 +63,16 @@ def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
         "shards": len(results.whole_shards),
         "shards_planned": results.record["shards"],
         "caution": CAUTION,
-        "arms": {arm: _arm(results, arm, [c for c in counts if c.arm == arm]) for arm in results.arms},
+        "arms": {arm: _arm(results, arm, [c for c in counts if c.arm == arm], who) for arm in results.arms},
+        "fasting": results.record.get("fasting"),
     }
+    more = {
+        "people": who.facts if who else None,
+        "sampling": results.record.get("sampling"),
+        "recruitment": recruitment,
+        "population": results.record.get("population"),
+    }
+    summary |= {name: facts for name, facts in more.items() if facts}
     ranking = rank(results) if len(results.whole_shards) == results.record["shards"] else None
     if ranking is not None:
         summary["ranking"] = ranking
@@ -66,18 +80,23 @@ def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
     return summary
 
 
-def _arm(results: Results, arm: str, counts: list[Count]) -> dict[str, Any]:
+def _arm(results: Results, arm: str, counts: list[Count], who: Chosen | None) -> dict[str, Any]:
     facts = results.record["arm_facts"][arm]
     found: dict[str, Any] = dict(facts)
     if facts["disagrees"]:
         found["heading"] = DISAGREES
-    found["strata"] = {
-        name: {c.regime: _numbers(c) for c in counts if c.stratum == name}
-        for name in dict.fromkeys(c.stratum for c in counts)
-    }
+    regimes = [c for c in counts if c.schedule is None]
+    found["strata"] = _by_stratum(regimes)
+    schedules = dict.fromkeys(c.schedule for c in counts if c.schedule is not None)
+    found["schedules"] = {name: _by_stratum([c for c in counts if c.schedule == name]) for name in schedules}
     found["failures"] = _failures(results, arm)
-    found["quantiles"] = _quantiles(results, arm)
+    found["quantiles"] = _quantiles(results, arm, who)
     return found
+
+
+def _by_stratum(counts: list[Count]) -> dict[str, dict[str, Any]]:
+    names = dict.fromkeys(c.stratum for c in counts)
+    return {name: {c.regime: _numbers(c) for c in counts if c.stratum == name} for name in names}
 
 
 def _numbers(count: Count) -> dict[str, Any]:
@@ -102,28 +121,45 @@ def _failures(results: Results, arm: str) -> dict[str, int]:
     return counts
 
 
-def _quantiles(results: Results, arm: str) -> dict[str, dict[str, Any]]:
-    """Of each described outcome: how many rows have it, and quantiles over those."""
+def _quantiles(results: Results, arm: str, who: Chosen | None) -> dict[str, dict[str, Any]]:
+    """Of each described outcome: how many of the counted have it, and quantiles over those, weighted as they count."""
     found: dict[str, dict[str, Any]] = {}
     for name in DESCRIBED:
         columns = [name, "oscillates"] if name in AMONG_OSCILLATORS else [name]
-        pieces = []
+        pieces, start = [], 0
+        weights = []
         for number in results.whole_shards:
             part = read_part(results.folder / "outcomes" / arm, number, columns)
             if name not in part.column_names:
                 break
             values = numbers(part, name)
+            weight = np.ones(len(values)) if who is None else who.weight[start : start + len(values)]
+            start += len(values)
+            keep = np.isfinite(values) & (weight > 0.0)
             if name in AMONG_OSCILLATORS:
-                values = values[numbers(part, "oscillates") == 1.0]
-            pieces.append(values[np.isfinite(values)])
+                keep &= numbers(part, "oscillates") == 1.0
+            pieces.append(values[keep])
+            weights.append(weight[keep])
         values = np.concatenate(pieces) if pieces else np.empty(0)
         if len(values):
-            marks = np.quantile(values, QUANTILES)
+            marks = (
+                np.quantile(values, QUANTILES) if who is None else weighted_quantiles(values, np.concatenate(weights))
+            )
             found[name] = {
                 "n": len(values),
                 **{f"q{q * 100:02.0f}": float(v) for q, v in zip(QUANTILES, marks, strict=True)},
             }
     return found
+
+
+def weighted_quantiles(values: NDArray[np.float64], weights: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Quantiles of weighted values, interpolated between the middles of their weights; equal weights give numpy's."""
+    order = np.argsort(values, kind="stable")
+    values, weights = values[order], weights[order]
+    if len(values) == 1:
+        return np.full(len(QUANTILES), values[0])
+    before = np.concatenate([[0.0], np.cumsum(0.5 * (weights[:-1] + weights[1:]))])
+    return np.asarray(np.interp(np.array(QUANTILES) * before[-1], before, values))
 
 
 # ---- in words ----------------------------------------------------------------------------------------------------
@@ -143,9 +179,19 @@ def closing_words(summary: dict[str, Any]) -> str:
             lines += _stratum_lines(stratum, counts)
         if not facts["strata"]:
             lines.append("  no steady input: regimes are not defined for this arm")
+        for schedule, strata in facts["schedules"].items():
+            for stratum, seen in strata.items():
+                lines += detection_lines(schedule, stratum, seen)
         for word, n in facts["failures"].items():
             lines.append(f"  {n:,} failed: {word}")
         lines += _quantile_lines(facts["quantiles"], bool(facts["strata"]))
+    lines += fasting_lines(summary["fasting"])
+    if "people" in summary:
+        lines += people_lines(summary["people"])
+    if "sampling" in summary:
+        lines += sampling_lines(summary["sampling"])
+    if "recruitment" in summary:
+        lines += recruitment_lines(summary["recruitment"], summary.get("population"))
     if "ranking" in summary:
         lines += ranking_words(summary["ranking"])
     return "\n".join([*lines, "", *_wrapped(summary["caution"])])
