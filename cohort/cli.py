@@ -8,8 +8,15 @@ import json
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-from cohort.errors import CohortError, Problem, StudyError
+from cohort.errors import CohortError, Problem, RunError, StudyError
+
+if TYPE_CHECKING:
+    from cohort.observe.detector import Rule
+    from cohort.observe.series import Found
+    from cohort.observe.table import Series
+    from cohort.study import Study
 
 INTERRUPTED = 130
 ASSAY_CV = {"glucose": 0.02, "insulin": 0.06}
@@ -90,19 +97,74 @@ def certify(words: argparse.Namespace) -> int:
 
 def detect(words: argparse.Namespace) -> int:
     """Look for a rhythm in a clinic's own sampled series."""
-    from cohort.observe.detector import Rule
+    from cohort.execute.stages import null_folder
     from cohort.observe.series import detect_series, lines
     from cohort.observe.table import read_series
+    from cohort.study import load_study
 
+    study = load_study(words.study, words.set) if words.study else None
+    rule, assay = _rule(words, study)
     units = {k: v for k, v in (("time", words.time), ("glucose", words.glucose), ("insulin", words.insulin)) if v}
-    rule = Rule(false_alarm=words.false_alarm, detect_in=words.detect_in)
-    found = detect_series(read_series(Path(words.series), units), rule, ASSAY_CV)
+    series = read_series(Path(words.series), units)
+    found = detect_series(series, rule, assay, null_folder())
     for warning in found.warnings:
         print(f"note: {warning}", file=sys.stderr)
     print("\n".join(lines(found, rule)))
+    if study is not None:
+        print("\n" + "\n".join(_corrected(study, words.arm, series, found, rule)))
+    folder = Path(words.out) if words.out else Path("results") / f"{Path(words.series).stem} series"
+    _keep(folder, series, found)
     print("\nDetection is a statement about a sampled, noisy series; it is not proof of a limit cycle. For research only;\n"
-          "not for diagnosis, dosing or care.")  # fmt: skip
+          f"not for diagnosis, dosing or care. detections.parquet and series.svg are in\n{folder}")  # fmt: skip
     return 0
+
+
+def _rule(words: argparse.Namespace, study: Study | None) -> tuple[Rule, dict[str, float]]:
+    """What counts as detected, and the assay errors: the study's, where there is one, else the usual ones."""
+    from dataclasses import replace
+
+    from cohort.observe.detector import Rule
+
+    rule, assay = Rule(), dict(ASSAY_CV)
+    if study is not None and study.sampling is not None:
+        rule = study.sampling.rule
+        assay = {analyte: reading.cv for analyte, reading in study.sampling.readings.items()}
+    if words.false_alarm is not None:
+        rule = replace(rule, false_alarm=words.false_alarm)
+    return (replace(rule, detect_in=words.detect_in) if words.detect_in else rule), assay
+
+
+def _corrected(study: Study, arm: str | None, series: Sequence[Series], found: Found, rule: Rule) -> list[str]:
+    """The share that truly oscillates, by the detector's errors on the study's virtual people."""
+    from cohort.execute.detect import correct, validate
+    from cohort.observe.series import detected_people, schedules
+
+    known = schedules(series)
+    k, n = detected_people(found)
+    if not known or not n:
+        return ["no series could be searched, so there is no share to correct"]
+    times, rows = max(known, key=lambda one: len(one[1]))
+    missed = 1.0 - sum(len(series[r].values) for r in rows) / (len(rows) * len(times))
+    tried = validate(study, arm, times, min(max(missed, 0.0), 0.9), rule)
+    share = correct(study, k, n, tried)
+    se, sp = (f"{a:,} of {b:,} ({100 * a / b:.0f} %)" for a, b in (tried.sensitive, tried.specific))
+    clipped = " (the plain correction fell outside 0 to 100 % and was cut there)" if share.clipped else ""
+    return [
+        f"{k} of {n} people detected. Of the virtual people of {tried.arm!r}, sampled like {len(rows)} of {len(series)} series,",
+        f"the rule finds {se} who oscillate and passes over {sp} who do not.",
+        f"Corrected for that, {100 * share.share:.0f} % truly oscillate (95 %: {100 * share.low:.0f} % to "
+        f"{100 * share.high:.0f} %), if people are as in this model{clipped}",
+    ]
+
+
+def _keep(folder: Path, series: Sequence[Series], found: Found) -> None:
+    """Write detections.parquet and series.svg."""
+    from cohort.report.series import keep_series
+
+    try:
+        keep_series(folder, series, found)
+    except OSError as error:
+        raise RunError(f"{folder}: {(error.strerror or str(error)).lower()}") from None
 
 
 def _warn(warnings: Sequence[Problem]) -> None:
@@ -145,9 +207,20 @@ def _parser() -> argparse.ArgumentParser:
     for name in ("time", "glucose", "insulin"):
         looking.add_argument(f"--{name}", metavar="UNIT", help=f"unit of {name} where the header does not give it")
     looking.add_argument(
-        "--false-alarm", type=_share, default=0.05, metavar="P", help="of the whole rule (default 0.05)"
+        "--false-alarm", type=_share, metavar="P", help="of the whole rule (default 0.05, or the study's)"
     )
-    looking.add_argument("--detect-in", choices=("glucose", "insulin", "either", "both"), default="glucose")
+    looking.add_argument("--detect-in", choices=("glucose", "insulin", "either", "both"),
+                         help="where a rhythm must show (default glucose, or the study's)")  # fmt: skip
+    looking.add_argument(
+        "--study", metavar="STUDY", help="correct the share by the detector's errors on its virtual people"
+    )
+    looking.add_argument("--arm", metavar="NAME", help="the study's arm that the people were in")
+    looking.add_argument(
+        "--set", action="append", default=[], metavar="KEY=VALUE", help="override a value of the study"
+    )
+    looking.add_argument(
+        "--out", metavar="DIR", help="where detections.parquet and series.svg go (default: results/...)"
+    )
     listing = command("models", models, "models, parameters, units, published values, sources")
     listing.add_argument("name", nargs="?", metavar="NAME")
     command("schema", schema, "JSON Schema of the study file, for editors")

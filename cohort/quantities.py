@@ -177,6 +177,7 @@ KEY_COLUMNS: dict[str, Column] = {
         Column("id", "text", "", "the subject's own name, from the table of subjects"),
         Column("person", "int64", "", "the person this is one draw of, from the table of subjects"),
         Column("schedule", "text", "", "when samples were taken"),
+        Column("refused", "text", "", "why the series was not searched"),
         Column("analyte", "words", "", "what was read", ANALYTES),
         Column("body_weight_kg", "float64", "kg", "body weight; null without sizes"),
     )

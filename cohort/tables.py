@@ -109,6 +109,9 @@ TIME_COURSES = Schema("time_courses", (KEY_COLUMNS["subject"], KEY_COLUMNS["arm"
 OBSERVATIONS = Schema(
     "observations", (*(KEY_COLUMNS[k] for k in ("subject", "arm", "schedule", "analyte")), *DETECTION_COLUMNS)
 )
+DETECTIONS = Schema(
+    "detections", (KEY_COLUMNS["id"], KEY_COLUMNS["analyte"], *DETECTION_COLUMNS, KEY_COLUMNS["refused"])
+)
 WEIGHTS = Schema("weights", WEIGHT_COLUMNS)
 RECRUITMENT = Schema("recruitment", RECRUITMENT_COLUMNS)
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)

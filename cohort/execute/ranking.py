@@ -74,7 +74,7 @@ def slots_of(study: Study, before: Mapping[str, Any]) -> dict[str, int]:
 
 def _facts(study: Study, ranking: Ranking, slots: Mapping[str, int]) -> Facts:
     recipe = study.recipe
-    found = ranked_strata(recipe, ranking)
+    found = ranked_strata(recipe, ranking, study.selected)
     named = (*ranking.outcomes, *(INSTEAD if any(only_of_cycles(n) for n in ranking.outcomes) else ()))
     arms = tuple(
         RankedArm(arm.name, slots[arm.name], {n: why for n in named if (why := _absent(n, arm))}) for arm in study.arms
@@ -88,7 +88,8 @@ def _facts(study: Study, ranking: Ranking, slots: Mapping[str, int]) -> Facts:
         )
         for i, r in enumerate(found)
     )  # fmt: skip
-    return Facts(ranking, recipe.scaling, recipe.table is not None, arms, strata)
+    given = recipe.table is not None or study.selected
+    return Facts(ranking, recipe.scaling, given, study.selected, bool(study.selection.match), arms, strata)
 
 
 def _absent(outcome: str, arm: Arm) -> str:
@@ -135,7 +136,12 @@ class _Work:
         if stratum.refused:
             return stratum
         plain = points(PLAIN_DOUBLING)
-        _, runs = budget(ranked_strata(self.study.recipe, self.ranking), self.ranking, len(self.facts.arms), plain)
+        _, runs = budget(
+            ranked_strata(self.study.recipe, self.ranking, self.study.selected),
+            self.ranking,
+            len(self.facts.arms),
+            plain,
+        )
         last = affordable_doubling(stratum.design, self.ranking, runs)
         doubling = stratum.doubling
         for step in range(doubling + 1):

@@ -50,7 +50,7 @@ def share_of_effective(p: float, open_: float, effective: float, k: int, unresol
     low, _ = wilson(p * effective, effective)
     _, high = wilson((p + open_) * effective, effective)
     low, high = (0.0 if k == 0 else low), (1.0 if k + unresolved == n else high)
-    return Share(k, n, unresolved, p + 0.5 * open_, low, high, f"Wilson 95 % at {effective:,.0f} effective people")
+    return Share(k, n, unresolved, p + 0.5 * open_, low, high, f"Wilson 95 %, effective n {effective:,.0f}")
 
 
 def share_of_scrambles(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]) -> Share:

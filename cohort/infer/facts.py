@@ -38,11 +38,14 @@ class RankedStratum:
 
 @dataclass(frozen=True)
 class Facts:
-    """A ranking that was run. scaling: how parameters follow weight; table: subjects came as a table."""
+    """A ranking that was run. scaling: how parameters follow weight; given: rows of the cohort itself are analysed, since
+    they are a table, or selected, or matched to published summaries (then some are accepted at random by weight)."""
 
     ranking: Ranking
     scaling: str
-    table: bool
+    given: bool
+    selected: bool
+    matched: bool
     arms: tuple[RankedArm, ...]
     strata: tuple[RankedStratum, ...]
 
@@ -66,7 +69,9 @@ def from_plain(found: Mapping[str, Any]) -> Facts:
     ranking = Ranking(**{**asked, "outcomes": tuple(asked["outcomes"]), "groups": groups})
     arms = tuple(RankedArm(a["name"], int(a["slot"]), dict(a["absent"])) for a in found["arms"])
     strata = tuple(RankedStratum(**{**s, "design": _design(s["design"])}) for s in found["strata"])
-    return Facts(ranking, found["scaling"], bool(found["table"]), arms, strata)
+    return Facts(
+        ranking, found["scaling"], bool(found["given"]), bool(found["selected"]), bool(found["matched"]), arms, strata
+    )
 
 
 def _design(found: Mapping[str, Any]) -> Design:

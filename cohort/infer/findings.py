@@ -76,7 +76,7 @@ def _arm(
 
 
 def _has_plain(facts: Facts, stratum: RankedStratum) -> bool:
-    return stratum.plain > 0 or (facts.table and len(stratum.design.factors) > 1)
+    return stratum.plain > 0 or (facts.given and len(stratum.design.factors) > 1 and "'sobol'" not in stratum.refused)
 
 
 def _estimand(stratum: RankedStratum) -> str:
@@ -91,7 +91,7 @@ def _without_design(
     if plain is None:
         return rows
     if only_of_cycles(blank.outcome):
-        more = [] if facts.table else mechanism_rows(blank, reader, stratum, plain)
+        more = [] if facts.given else mechanism_rows(blank, reader, stratum, plain)
         return rows + given_rows(blank, stratum, plain, AMONG) + more
     return rows + given_rows(blank, stratum, plain, left=True)
 

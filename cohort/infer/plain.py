@@ -51,15 +51,17 @@ def plain_rows_of(reader: Reader, facts: Facts, arm: RankedArm, outcomes: tuple[
     design = reader.design
     own = tuple("body_weight_kg" if name == WEIGHT else name for name in design.names)
     wanted = tuple(name for name in outcomes if name not in arm.absent)
-    if facts.table:
-        columns = read_cohort(reader.place.folder, arm.name, design.stratum, own, wanted)
+    if facts.given:
+        with_weight = tuple(dict.fromkeys((*own, *(("body_weight_kg",) if facts.scaling != "none" else ()))))
+        chosen = "accepted" if facts.matched else "eligible" if facts.selected else ""
+        columns = read_cohort(reader.place.folder, arm.name, design.stratum, with_weight, wanted, chosen, design.seed)
     else:
         columns = reader.plain([*dict.fromkeys(("body_weight_kg", *own)), *wanted])
     x = np.empty((len(columns[own[0]]), len(own)))
     for j, name in enumerate(own):
         value = columns[name]
         exponent = EXPONENTS[facts.scaling].get(name)
-        if exponent and not facts.table and np.isfinite(columns["body_weight_kg"]).all():
+        if exponent and "body_weight_kg" in columns and np.isfinite(columns["body_weight_kg"]).all():
             value = value / (columns["body_weight_kg"] / REFERENCE_WEIGHT_KG) ** exponent
         x[:, j] = _normal_scores(value)
     return PlainRows(x, {name: columns[name] for name in wanted})

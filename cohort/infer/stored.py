@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.infer.ranking import KINDS, Design, design_keys, row_count
+from cohort.population.uniforms import uniforms
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -133,12 +134,23 @@ def read_numbers(path: Path, names: Sequence[str]) -> Columns:
     return {name: _numbers(table, name) for name in names}
 
 
-def read_cohort(folder: Path, arm: str, stratum: str, own: Sequence[str], outcomes: Sequence[str]) -> Columns:
-    """Rows of a cohort that came as a table: columns of subjects/ and of outcomes/<arm>/ of one stratum."""
-    from cohort.tables import numbers, read_parts
+def read_cohort(
+    folder: Path, arm: str, stratum: str, own: Sequence[str], outcomes: Sequence[str], chosen: str, seed: int
+) -> Columns:
+    """Rows of the cohort itself, of one stratum: columns of subjects/, outcomes/<arm>/ and meals/<arm>/.
 
-    people = read_parts(folder / "subjects", ["stratum", *own])
+    chosen: "" for everyone; "eligible"; or "accepted": of the eligible each with a chance proportional to its weight, so
+    that those accepted are independent people of the weighted population.
+    """
+    from cohort.tables import numbers, read_file, read_parts
+
+    people = read_parts(folder / "subjects", ["subject", "stratum", *own])
     here = np.array([word == stratum for word in people.column("stratum").to_pylist()], dtype=bool)
+    if chosen:
+        table = read_file(folder / "weights.parquet", ["eligible", "weight"])
+        weight = numbers(table, "weight")
+        chance = weight / weight.max() if chosen == "accepted" else (weight > 0.0).astype(float)
+        here &= uniforms(seed, "accepted", "", 0, len(weight)) < chance
     found = {name: numbers(people, name)[here] for name in own}
     for name in outcomes:
         head, _, column = name.partition(".")

@@ -15,6 +15,9 @@ CYCLE_ONLY = ("period_min", "cycle_error", "insulin_lag_min", "cycle_")
 """Outcomes that only subjects with a limit cycle have, by how their names begin."""
 
 
+SELECTED = "people are selected by an outcome (eligible, match), which ties their parameters together"
+
+
 @dataclass(frozen=True)
 class Ranked:
     """A stratum to rank: inputs and factors in `design`; `refused` says why its design cannot be run, or is empty."""
@@ -28,12 +31,13 @@ class Ranked:
         return self.design.stratum
 
 
-def ranked_strata(recipe: Recipe, ranking: Ranking) -> tuple[Ranked, ...]:
-    """A ranking in each stratum, never across a mixture of them."""
-    return tuple(_ranked(recipe, ranking, stratum) for stratum in recipe.strata)
+def ranked_strata(recipe: Recipe, ranking: Ranking, selected: bool = False) -> tuple[Ranked, ...]:
+    """A ranking in each stratum, never across a mixture of them. selected: people are chosen or weighted by outcomes,
+    which ties their parameters together."""
+    return tuple(_ranked(recipe, ranking, stratum, selected) for stratum in recipe.strata)
 
 
-def _ranked(recipe: Recipe, ranking: Ranking, stratum: Stratum) -> Ranked:
+def _ranked(recipe: Recipe, ranking: Ranking, stratum: Stratum, selected: bool) -> Ranked:
     names = _table_names(recipe) if recipe.table is not None else _drawn_names(recipe, stratum)
     design = Design(
         ranking.method, recipe.seed, stratum.name, names, factors(names, ranking),
@@ -47,6 +51,9 @@ def _ranked(recipe: Recipe, ranking: Ranking, stratum: Stratum) -> Ranked:
     if len(design.factors) < 2:
         return Ranked(design, f"{len(design.factors)} varied input{'s' * (len(design.factors) != 1)}; a ranking compares "
                       "two or more")  # fmt: skip
+    if selected:
+        sobol = "; their rows are no independent people either (draw = 'sobol')" if recipe.draw == "sobol" else ""
+        return Ranked(design, f"{SELECTED}: a design would simulate people who are not counted{sobol}")
     return Ranked(design, _tied(design, stratum))
 
 
@@ -108,7 +115,7 @@ FEWEST_REDRAWN = 128
 
 def plain_wanted(ranked: Ranked, ranking: Ranking) -> bool:
     """Whether independent rows must be simulated beside the design."""
-    if "table" in ranked.refused or len(ranked.design.factors) < 2:
+    if "table" in ranked.refused or SELECTED in ranked.refused or len(ranked.design.factors) < 2:
         return False
     return bool(ranked.refused) or any(only_of_cycles(name) for name in ranking.outcomes)
 

@@ -44,7 +44,7 @@ def detect_series(
     columns = _empty(len(series))
     refused, warnings = [""] * len(series), []
     tables: dict[tuple[float, ...], Design] = {}
-    for times, rows in _schedules(series):
+    for times, rows in schedules(series):
         try:
             design = make_design(times, rule.band_min)
         except ValueError as error:
@@ -95,14 +95,21 @@ def _line(found: Found, rule: Rule, i: int) -> str:
     return head + f"rhythm detected, {best}" + (", decaying" if c["decaying"] == 1 else "")
 
 
+def detected_people(found: Found) -> tuple[int, int]:
+    """(people detected, people that the rule could judge)."""
+    by_person = dict(zip(found.subject, (int(d) for d in found.columns["detected"]), strict=True))
+    judged = [d for d in by_person.values() if d >= 0]
+    return sum(judged), len(judged)
+
+
 def _empty(n: int) -> Columns:
     missing = {"float64": np.nan, "int64": -1, "bool": -1, "words": -1}
     kinds = {"float64": np.float64, "int64": np.int64, "bool": np.int8, "words": np.int8}
     return {c.name: np.full(n, missing[c.kind], dtype=kinds[c.kind]) for c in DETECTION_COLUMNS}
 
 
-def _schedules(series: Sequence[Series]) -> list[tuple[Array, list[int]]]:
-    """Sampling times from each subject's first, and the series that share them (with samples missing)."""
+def schedules(series: Sequence[Series]) -> list[tuple[Array, list[int]]]:
+    """Sampling times (min) from each subject's first, and the series that share them, some with samples missing."""
     rows = [i for i, s in enumerate(series) if len(s.values) >= FEWEST_SAMPLES]
     since = {i: np.round(series[i].times_min - series[i].times_min[0], 6) for i in rows}
     alike: dict[bytes, list[int]] = {}

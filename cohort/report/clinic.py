@@ -5,7 +5,7 @@ from __future__ import annotations
 import textwrap
 from typing import Any
 
-from cohort.report.counting import DETECTED, DETECTED_FALSE, DETECTED_TRUE, EVERYONE, OSCILLATES
+from cohort.report.counting import DETECTED, DETECTED_AT_PERIOD, DETECTED_FALSE, DETECTED_TRUE, EVERYONE, OSCILLATES
 
 PUBLISHED_FASTING = (
     "published: glucose 90 mg/dL, SD 7.1 (normal tolerance, n 2,205; South Asian screening, PMC11043225); insulin median "
@@ -61,9 +61,8 @@ def detection_lines(schedule: str, stratum: str, seen: dict[str, Any]) -> list[s
     head = f"{who}sampled {schedule}: {_percent(found['share'])} detected ({_percent(found['low'])} to "
     head += f"{_percent(found['high'])})"
     if DETECTED_TRUE in seen:
-        head += (
-            f"; truly oscillating {seen[DETECTED_TRUE]['n']:,}, not {seen[DETECTED_FALSE]['n']:,} of {found['of']:,}"
-        )
+        head += f"; of {found['of']:,}: {seen[DETECTED_TRUE]['n']:,} truly oscillate, {seen[DETECTED_FALSE]['n']:,} do not; "
+        head += f"{seen[DETECTED_AT_PERIOD]['n']:,} at their true period (within 10 %)"
     return wrapped(head, "  ")
 
 
@@ -72,7 +71,7 @@ def sampling_lines(sampling: dict[str, Any]) -> list[str]:
     rule = sampling["rule"]
     low, high = rule["band_min"]
     lines = ["", *wrapped(f"detected: in {rule['detect_in']}, periods {low:g} to {high:g} min, false alarms "
-                          f"{rule['false_alarm']:.0%} of the whole rule. {NO_PROOF}", "")]  # fmt: skip
+                          f"{100 * rule['false_alarm']:g} % of the whole rule. {NO_PROOF}", "")]  # fmt: skip
     for name, why in sampling["unseen"].items():
         if why:
             lines += wrapped(f"NOTE: {name}: {why}", "  ")
@@ -83,7 +82,7 @@ def sampling_lines(sampling: dict[str, Any]) -> list[str]:
 
 def recruitment_lines(recruitment: dict[str, Any], population: dict[str, Any] | None) -> list[str]:
     """Predictions for real people and numbers to recruit; strata, differences and power are in the table."""
-    finish = "" if recruitment["evaluable"] == 1.0 else f"; {recruitment['evaluable']:.0%} of recruits finish"
+    finish = "" if recruitment["evaluable"] == 1.0 else f"; {100 * recruitment['evaluable']:g} % of recruits finish"
     lines = ["", f"how many real people (in this model{finish}; 90 % intervals)"]
     rows = [
         r
@@ -138,15 +137,17 @@ def _needed(row: dict[str, Any], recruitment: dict[str, Any]) -> list[str]:
 
 
 def _paired_lines(rows: list[dict[str, Any]]) -> list[str]:
+    """Every schedule beside the first of its arm; the table holds all pairs."""
     largest = max((r["recruited"] for r in rows if r.get("recruited")), default=None)
     lines: list[str] = []
+    firsts: dict[str, str] = {}
     for row in rows:
-        schedule = row.get("schedule") or ""
-        if " minus " in schedule and row.get("recruited") == largest:
-            two, one = schedule.split(" minus ")
-            less = "loses" if row["expected"] < 0 else "gains"
-            lines += wrapped(f"{row['arm']}: {two} instead of {one} {less} {abs(row['expected']):.1f} of {largest} ("
-                             f"{row['low']:+.0f} to {row['high']:+.0f})", "  ")  # fmt: skip
+        two, minus, one = (row.get("schedule") or "").partition(" minus ")
+        if not minus or row["recruited"] != largest or firsts.setdefault(row["arm"], one) != one:
+            continue
+        less = "loses" if row["expected"] < 0 else "gains"
+        lines += wrapped(f"{row['arm']}: {two} instead of {one} {less} {abs(row['expected']):.1f} of {largest} ("
+                         f"{row['low']:+.0f} to {row['high']:+.0f})", "  ")  # fmt: skip
     return lines
 
 

@@ -22,6 +22,9 @@ Codes = NDArray[np.int64]
 EVERYONE = "everyone"
 OSCILLATES = "oscillates"
 DETECTED, DETECTED_TRUE, DETECTED_FALSE = "detected", "detected and oscillating", "detected and not oscillating"
+DETECTED_AT_PERIOD = "detected at the true period"
+PERIOD_WITHIN = 0.1
+"""A detected period within 10 % of the limit cycle's counts as the true one; an alias does not."""
 _YES = tuple(REGIMES.index(r) for r in ("sustained", "bistable"))
 _UNRESOLVED = tuple(REGIMES.index(r) for r in ("undecided", "failed"))
 NO, YES, UNKNOWN = range(3)
@@ -67,28 +70,36 @@ def regime_tally(results: Results, arm: str, who: Chosen | None) -> Tally:
     def cells(number: int) -> Codes:
         what = read_part(results.folder / "outcomes" / arm, number, ["regime"])
         regime = _codes(what.column("regime"), REGIMES)
-        return np.where(regime < 0, len(REGIMES), regime)
+        return np.where(regime < 0, len(REGIMES), regime).astype(np.int64)
 
     return _tally(results, who, cells, len(REGIMES) + 1)
 
 
 def detection_tally(results: Results, arm: str, schedule: str, who: Chosen | None) -> Tally:
-    """Subjects by 3 x detected + oscillating, each no, yes or unknown."""
+    """Subjects by detected, oscillating (each no, yes or unknown) and whether the detected period is the true one."""
 
     def cells(number: int) -> Codes:
-        detected = detections(results, arm, schedule, number)
-        truly = numbers(read_part(results.folder / "outcomes" / arm, number, ["oscillates"]), "oscillates")
-        return 3 * detected + np.where(np.isnan(truly), UNKNOWN, np.where(truly == 1.0, YES, NO))
+        detected, period = detections(results, arm, schedule, number)
+        table = read_part(results.folder / "outcomes" / arm, number, ["oscillates", "period_min"])
+        truly, true_period = numbers(table, "oscillates"), numbers(table, "period_min")
+        right = np.abs(period / true_period - 1.0) <= PERIOD_WITHIN
+        truth = np.where(np.isnan(truly), UNKNOWN, np.where(truly == 1.0, YES, NO))
+        return np.asarray(_cell(detected, truth, right.astype(np.int64)), dtype=np.int64)
 
-    return _tally(results, who, cells, 9)
+    return _tally(results, who, cells, 18)
 
 
-def detections(results: Results, arm: str, schedule: str, number: int) -> Codes:
-    """Whether each subject of a shard is detected: NO, YES or UNKNOWN."""
-    part = read_part(results.folder / "observations" / arm / schedule, number, ["analyte", "detected"])
+def _cell(detected: Any, truly: Any, right: Any) -> Any:
+    return 6 * detected + 2 * truly + right  # numbers or arrays of them
+
+
+def detections(results: Results, arm: str, schedule: str, number: int) -> tuple[Codes, Array]:
+    """Of each subject of a shard whether it is detected (NO, YES or UNKNOWN), and its best period in glucose, min."""
+    part = read_part(results.folder / "observations" / arm / schedule, number, ["analyte", "detected", "period_min"])
     first = np.array([word == "glucose" for word in part.column("analyte").to_pylist()], dtype=bool)
     detected = numbers(part, "detected")[first]
-    return np.where(np.isnan(detected), UNKNOWN, np.where(detected == 1.0, YES, NO)).astype(np.int64)
+    found = np.where(np.isnan(detected), UNKNOWN, np.where(detected == 1.0, YES, NO)).astype(np.int64)
+    return found, numbers(part, "period_min")[first]
 
 
 def _tally(results: Results, who: Chosen | None, cells: Callable[[int], Codes], width: int) -> Tally:
@@ -178,20 +189,21 @@ def _regime_shares(group: _Group) -> Iterator[tuple[str, Share]]:
         yield regime, group.share((i,), () if i in _UNRESOLVED else _UNRESOLVED)
 
 
-def _cell(detected: int, truly: int) -> int:
-    return 3 * detected + truly
+def _cells(detected: int, truly: tuple[int, ...], right: tuple[int, ...] = (0, 1)) -> tuple[int, ...]:
+    return tuple(_cell(detected, t, r) for t in truly for r in right)
 
 
 def _detected_only(group: _Group) -> Iterator[tuple[str, Share]]:
     every = (NO, YES, UNKNOWN)
-    yield DETECTED, group.share(tuple(_cell(YES, t) for t in every), tuple(_cell(UNKNOWN, t) for t in every))
+    yield DETECTED, group.share(_cells(YES, every), _cells(UNKNOWN, every))
 
 
 def _detection_shares(group: _Group) -> Iterator[tuple[str, Share]]:
     yield from _detected_only(group)
     for name, truly in ((DETECTED_TRUE, YES), (DETECTED_FALSE, NO)):
-        open_ = (_cell(YES, UNKNOWN), _cell(UNKNOWN, truly), _cell(UNKNOWN, UNKNOWN))
-        yield name, group.share((_cell(YES, truly),), open_)
+        open_ = (*_cells(YES, (UNKNOWN,)), *_cells(UNKNOWN, (truly, UNKNOWN)))
+        yield name, group.share(_cells(YES, (truly,)), open_)
+    yield DETECTED_AT_PERIOD, group.share(_cells(YES, (YES,), (1,)), _cells(UNKNOWN, (YES, UNKNOWN)))
 
 
 def write_incidence(results: Results, counts: list[Count]) -> None:

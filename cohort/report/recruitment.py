@@ -181,7 +181,7 @@ def _paired(results: Results, asked: dict[str, Any], who: Chosen | None) -> Iter
 
 
 def _seen(results: Results, arm: str, schedule: str) -> NDArray[np.bool_]:
-    return np.concatenate([detections(results, arm, schedule, k) == YES for k in results.whole_shards])
+    return np.concatenate([detections(results, arm, schedule, k)[0] == YES for k in results.whole_shards])
 
 
 def _truly(results: Results, arm: str) -> NDArray[np.bool_]:

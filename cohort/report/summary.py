@@ -201,9 +201,12 @@ def _stratum_lines(stratum: str, counts: dict[str, Any]) -> list[str]:
     yes = counts[OSCILLATES]
     who = "" if stratum == EVERYONE else f"{stratum}: "
     between = f"{_percent(yes['low'])} to {_percent(yes['high'])}"
-    head = f"  {who}in this model {_percent(yes['share'])} oscillate ({between}; {yes['method']})"
+    head = f"{who}in this model {_percent(yes['share'])} oscillate ({between}; {yes['method']})"
     parts = [f"{counts[r]['n']:,} {r}" for r in REGIMES if counts[r]["n"]]
-    return [head, f"    of {yes['of']:,}: {', '.join(parts)}"]
+    return [
+        *textwrap.wrap(head, 78, initial_indent="  ", subsequent_indent="    "),
+        f"    of {yes['of']:,}: {', '.join(parts)}",
+    ]
 
 
 def _percent(x: float) -> str:

@@ -57,9 +57,9 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study
         weighed = not bool((recipe.table.body_weight_kg != recipe.table.body_weight_kg).any())
     protocols = arms_of.arms(tree, card, weighed)
     output = _output(tree, recipe.count, protocols)
-    ranking = ranking_of.ranking(tree, recipe, protocols)
     seen, recruits = sampling_of.sampling(tree, protocols), sampling_of.recruitment(tree)
     chosen = selection(tree, recipe, protocols)
+    ranking = ranking_of.ranking(tree, recipe, protocols, bool(chosen.eligible or chosen.match))
     if tree.problems:
         raise StudyError(_sorted(tree.problems))
     title = tree.values.get("title", place.stem)

@@ -17,6 +17,7 @@ from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 from cohort.study.arms import has_steady_input
 from cohort.study.oddities import published_growth
 from cohort.study.ranking import ranked_runs
+from cohort.study.sampling import Sampling
 from cohort.study.spec import Study
 
 SHARD = 16_384
@@ -29,6 +30,7 @@ US_PER_HOUR_CLAMP = 5.0
 US_PER_REST = 10.0
 US_PER_ORBIT = 80.0
 US_PER_SUBJECT_WRITTEN = 8.0
+US_PER_SERIES_SAMPLE = 6.0
 STATES_TIMED = 6
 SECONDS_AT_START = 1.2
 BYTES_PER_OUTCOME = 4.4
@@ -62,7 +64,8 @@ class LawRow:
 
 @dataclass(frozen=True)
 class Plan:
-    """The whole run. seconds: of the clock, on `workers` workers; ranking: runs of the ranking at its first size."""
+    """The whole run. seconds: of the clock, on `workers` workers; ranking: runs of the ranking at its first size;
+    drawn: runs of draws of the population."""
 
     subjects: int
     shards: int
@@ -74,6 +77,7 @@ class Plan:
     disk_mb: float
     laws: tuple[LawRow, ...]
     ranking: int = 0
+    drawn: int = 0
 
 
 def plan(study: Study, workers: int | None = None) -> Plan:
@@ -81,9 +85,13 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     workers = workers or os.cpu_count() or 1
     n = study.recipe.count
     arms = tuple(_arm(study, arm) for arm in study.arms)
-    core = sum(a.core_seconds for a in arms) + n * US_PER_SUBJECT_WRITTEN * 1e-6 * (len(arms) + 1)
-    ranked = ranked_runs(study.ranking, study.recipe, len(arms)) if study.ranking else 0
-    core *= 1.0 + ranked / (n * len(arms))
+    samples = sum(len(s.times_min) for s in study.sampling.schedules) if study.sampling else 0
+    seen = 2.0 * n * len(arms) * samples * US_PER_SERIES_SAMPLE * 1e-6
+    core = sum(a.core_seconds for a in arms) + seen + n * US_PER_SUBJECT_WRITTEN * 1e-6 * (len(arms) + 1)
+    ranked = ranked_runs(study.ranking, study.recipe, len(arms), study.selected) if study.ranking else 0
+    outer = study.recipe.population
+    drawn = (outer.outer + 1) * outer.inner * len(arms) if outer else 0
+    core *= 1.0 + (ranked + drawn) / (n * len(arms))
     subject_columns = len(study.recipe.varied) + 3
     rows_mb = n * (len(arms) * OUTCOME_COLUMNS + subject_columns) * BYTES_PER_OUTCOME / 1e6
     points = sum(a.duration_min / study.output.every_min + 1 for a in study.arms)
@@ -91,7 +99,7 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     disk = rows_mb + points * study.output.time_courses * 6 * BYTES_PER_OUTCOME / 1e6
     return Plan(
         n, -(-n // SHARD), n * len(arms), workers, arms, SECONDS_AT_START + core / max(min(workers, n / 256), 1.0),
-        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study), ranked,
+        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study), ranked, drawn,
     )  # fmt: skip
 
 
@@ -148,6 +156,12 @@ def describe(study: Study, found: Plan) -> str:
     ]
     if study.ranking:
         lines[3:3] = _ranking_lines(study.ranking, found.ranking)
+    if study.recipe.population:
+        outer = study.recipe.population
+        lines.insert(3, f"  {outer.outer:,} draws of the population and the stated one, {outer.inner:,} people in each: "
+                     f"{found.drawn:,} runs")  # fmt: skip
+    if study.sampling:
+        lines[3:3] = _sampling_lines(study.sampling)
     for arm, row in zip(study.arms, found.arms, strict=True):
         lines.append(f"  {row.name[:32]:32s}  {row.hours:5g}   {'yes' if has_steady_input(arm) else 'no'}")
     if found.laws:
@@ -169,6 +183,17 @@ def _ranking_lines(ranking: Ranking, runs: int) -> list[str]:
     return [
         f"  ranking by sobol: from {runs:,} runs (base {ranking.base} x {ranking.replicates}) to at most {ranking.max_runs:,},",
         f"  until every half-width is below {ranking.tolerance:g}",
+    ]
+
+
+def _sampling_lines(sampling: Sampling) -> list[str]:
+    glucose, rule = sampling.readings["glucose"], sampling.rule
+    return [
+        f"  sampled by {len(sampling.schedules)} schedule{'s' * (len(sampling.schedules) > 1)}; glucose assay error "
+        f"{100 * glucose.cv:g} %, own irregularity {100 * glucose.background_sd:g} %",
+        f"  over {glucose.background_time_min:g} min; detected in {rule.detect_in}, false alarms {100 * rule.false_alarm:g} %. "
+        "The first run with",
+        "  a schedule simulates what it takes for noise, 5 to 30 s",
     ]
 
 

@@ -26,7 +26,7 @@ RANKABLE = (
 MEAL_RANKABLE = tuple(c.name for c in MEAL_OUTCOMES if c.kind == "float64" and c.name != "meal_time_min")
 
 
-def ranking(tree: Tree, recipe: Recipe, arms: Sequence[Arm]) -> Ranking | None:
+def ranking(tree: Tree, recipe: Recipe, arms: Sequence[Arm], selected: bool) -> Ranking | None:
     """Build [ranking], or None where there is none; every problem is noted in `tree`."""
     if "ranking" not in tree.values:
         return None
@@ -46,7 +46,7 @@ def ranking(tree: Tree, recipe: Recipe, arms: Sequence[Arm]) -> Ranking | None:
         values.get("trajectories", 20), values.get("levels", 4), _groups(tree, values.get("groups", {}), recipe),
     )  # fmt: skip
     if len(tree.problems) == before:
-        _check_size(tree, made, recipe, len(arms))
+        _check_size(tree, made, recipe, len(arms), selected)
     return made
 
 
@@ -113,8 +113,8 @@ def _groups(tree: Tree, values: dict[str, Any], recipe: Recipe) -> dict[str, tup
     return {group: tuple(members) for group, members in values.items()}
 
 
-def _check_size(tree: Tree, made: Ranking, recipe: Recipe, arms: int) -> None:
-    strata = ranked_strata(recipe, made)
+def _check_size(tree: Tree, made: Ranking, recipe: Recipe, arms: int, selected: bool) -> None:
+    strata = ranked_strata(recipe, made, selected)
     if all(len(r.design.factors) < 2 for r in strata):
         names = strata[0].design.names
         has = (
@@ -138,10 +138,10 @@ def _check_size(tree: Tree, made: Ranking, recipe: Recipe, arms: int) -> None:
                      f"{len(strata)} strat{'a' if len(strata) > 1 else 'um'} take {needed * arms:,} runs")  # fmt: skip
 
 
-def ranked_runs(made: Ranking, recipe: Recipe, arms: int) -> int:
+def ranked_runs(made: Ranking, recipe: Recipe, arms: int, selected: bool) -> int:
     """Runs of a ranking at its first size, redraws of oscillators not counted."""
     plain = points(PLAIN_DOUBLING)
     return arms * sum(
         (0 if r.refused else design_runs(r.design, first_doubling(made))) + plain * plain_wanted(r, made)
-        for r in ranked_strata(recipe, made)
+        for r in ranked_strata(recipe, made, selected)
     )

@@ -50,3 +50,8 @@ class Study:
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
     later: tuple[Problem, ...] = ()
+
+    @property
+    def selected(self) -> bool:
+        """Whether people are chosen or weighted by their outcomes."""
+        return bool(self.selection.eligible or self.selection.match)

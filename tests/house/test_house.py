@@ -27,7 +27,7 @@ MAY_IMPORT: dict[str, set[str]] = {
     "infer": {"errors", "quantities", "population", "tables"},
     "study": {"errors", "quantities", "program", "model", "population", "infer", "observe", "tables"},
     "execute": {*FOUNDATION, "model", "simulate", "measure", "observe", "population", "infer", "study"},
-    "report": {"errors", "quantities", "tables", "infer", "population", "model"},
+    "report": {"errors", "quantities", "tables", "infer", "population", "observe", "model"},
     "cli": {"errors", "study", "execute", "report", "observe"},
     "__init__": {"errors", "simulate", "study", "execute", "report"},
     "__main__": {"cli"},
