@@ -11,6 +11,7 @@ from cohort.model.body import body
 from cohort.model.inputs import People, steady_input
 from cohort.model.protocol import Arm
 from cohort.model.rest import at_rest
+from cohort.observe.white import false_pulses_per_h
 from cohort.population import draw
 from cohort.quantities import REFERENCE_WEIGHT_KG
 from cohort.simulate.run import observe_states, with_secretion
@@ -49,6 +50,9 @@ def sampling_facts(study: Study) -> dict[str, Any] | None:
         "unseen": dict(plan.unseen),
         "rule": asdict(plan.rule),
         "readings": {analyte: asdict(reading) for analyte, reading in plan.readings.items()},
+        "false_pulses_per_h": {
+            s.name: false_pulses_per_h(s, plan.readings["glucose"], plan.rule.swing_sds) for s in plan.schedules
+        },
         "optimistic": any(not reading.background_sd for reading in plan.readings.values()),
     }
 

@@ -16,6 +16,8 @@ from cohort.quantities import ANALYTES, DETECTION_COLUMNS
 
 Array = NDArray[np.float64]
 
+SMALLEST_P = 0.001
+"""Null tables hold some thousand series: a smaller p-value is not told apart from the smallest of them."""
 _SHARED = 0.8
 """Share of the common sampling times that a subject must have to be searched on them; a subject sampled more rarely
 has a schedule of its own, with its own aliases."""
@@ -87,12 +89,16 @@ def _line(found: Found, rule: Rule, i: int) -> str:
     if found.refused[i]:
         return head + f"not searched; {found.refused[i]}"
     p, period, error = c["p_value"], c["period_min"], c["period_se_min"]
-    best = f"{period:.0f} ± {error:.1f} min, relative amplitude {100 * c['relative_amplitude']:.1f} %, p = {p:.2g}"
+    best = f"{period:.0f} ± {error:.1f} min, relative amplitude {100 * c['relative_amplitude']:.1f} %, {_p(p)}"
     if c["detected"] < 0:
         return head + f"the rule needs {rule.detect_in}; here the best period is {best}"
     if not c["detected"]:
         return head + f"no rhythm detected (best {best})"
     return head + f"rhythm detected, {best}" + (", decaying" if c["decaying"] == 1 else "")
+
+
+def _p(p: float) -> str:
+    return f"p = {p:.2g}" if p >= SMALLEST_P else f"p < {SMALLEST_P:g}"
 
 
 def detected_people(found: Found) -> tuple[int, int]:

@@ -75,6 +75,9 @@ def sampling_lines(sampling: dict[str, Any]) -> list[str]:
     for name, why in sampling["unseen"].items():
         if why:
             lines += wrapped(f"NOTE: {name}: {why}", "  ")
+    rates = "; ".join(f"{name} {rate:.2f}" for name, rate in sampling["false_pulses_per_h"].items())
+    lines += wrapped(f"beside it, the nadir-to-peak rule of {rule['swing_sds']:g} assay SDs (column pulses): where nothing "
+                     f"pulses it finds an hour: {rates}", "  ")  # fmt: skip
     if sampling["optimistic"]:
         lines += wrapped("NOTE: optimistic: the body's own irregularity is left out of some analyte", "  ")
     return lines

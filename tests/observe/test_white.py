@@ -88,3 +88,15 @@ def test_a_sparse_schedule_is_cut_and_says_so() -> None:
 def test_a_schedule_that_sees_no_period_is_refused(step: float, length: float) -> None:
     with pytest.raises(ValueError, match="no period from 60 to 240 min can be seen"):
         searched_band(np.arange(0.0, length + 1.0, step))
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_lomb_scargle_equals_astropys(seed: int) -> None:
+    from astropy.timeseries import LombScargle
+
+    rng = np.random.default_rng(100 + seed)
+    times = np.sort(rng.uniform(0.0, 900.0, 60))
+    values = 100.0 + 3.0 * rng.normal(size=60) + 2.0 * np.cos(times / 17.0)
+    frequencies = np.linspace(1 / 240, 1 / 60, 37)
+    theirs = LombScargle(times, values).power(frequencies, method="slow", normalization="standard")
+    np.testing.assert_allclose(lomb_scargle(times, values, frequencies, degree=0), theirs, rtol=0, atol=1e-10)
