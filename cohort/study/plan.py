@@ -158,7 +158,7 @@ def describe(study: Study, found: Plan) -> str:
         lines[3:3] = _ranking_lines(study.ranking, found.ranking)
     if study.recipe.population:
         outer = study.recipe.population
-        lines.insert(3, f"  {outer.outer:,} draws of the population and the stated one, {outer.inner:,} people in each: "
+        lines.insert(3, f"  {outer.outer:,} draws of the population and the stated one, {outer.inner:,} people each: "
                      f"{found.drawn:,} runs")  # fmt: skip
     if study.sampling:
         lines[3:3] = _sampling_lines(study.sampling)
@@ -181,19 +181,18 @@ def _ranking_lines(ranking: Ranking, runs: int) -> list[str]:
     if ranking.method == "morris":
         return [f"  ranking by morris: {ranking.trajectories} trajectories, {runs:,} runs and what redraws take"]
     return [
-        f"  ranking by sobol: from {runs:,} runs (base {ranking.base} x {ranking.replicates}) to at most {ranking.max_runs:,},",
+        f"  ranking by sobol: {runs:,} runs (base {ranking.base} x {ranking.replicates}), at most {ranking.max_runs:,},",
         f"  until every half-width is below {ranking.tolerance:g}",
     ]
 
 
 def _sampling_lines(sampling: Sampling) -> list[str]:
-    glucose, rule = sampling.readings["glucose"], sampling.rule
+    glucose, rule, many = sampling.readings["glucose"], sampling.rule, len(sampling.schedules) > 1
     return [
-        f"  sampled by {len(sampling.schedules)} schedule{'s' * (len(sampling.schedules) > 1)}; glucose assay error "
-        f"{100 * glucose.cv:g} %, own irregularity {100 * glucose.background_sd:g} %",
-        f"  over {glucose.background_time_min:g} min; detected in {rule.detect_in}, false alarms {100 * rule.false_alarm:g} %. "
-        "The first run with",
-        "  a schedule simulates what it takes for noise, 5 to 30 s",
+        f"  {len(sampling.schedules)} sampling schedule{'s' * many}; glucose assay error {100 * glucose.cv:g} %, own",
+        f"  irregularity {100 * glucose.background_sd:g} % over {glucose.background_time_min:g} min; detected in "
+        f"{rule.detect_in}, false alarms {100 * rule.false_alarm:g} %",
+        "  (the first run with a schedule simulates noise for it: 5 to 30 s more)",
     ]
 
 

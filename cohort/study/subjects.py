@@ -100,9 +100,8 @@ def _population(tree: Tree, values: Mapping[str, Any], strata: tuple[Stratum, ..
         return None
     laws = [law for s in strata for law in (*s.laws.values(), s.weight)]
     if not any(isinstance(law, Lognormal | Normal) and _uncertain(law) for law in laws):
-        tree.problem(
-            path, "no law says how well it is known (median_rse, mean_rse, cv_rse): every draw would be the same"
-        )
+        tree.warnings.append(tree.place(path, "no law says how well it is known (median_rse, mean_rse, cv_rse): every draw "
+                                        "is the same population"))  # fmt: skip
     found = values["population"]
     return Outer(found.get("outer", 200), found.get("inner", 256))
 

@@ -302,13 +302,17 @@ def test_mistakes_in_sampling_and_recruitment_are_named(tmp_path: Path, old: str
         ('[subjects.eligible]\n"fasting.equilibrium_glucose_mg_dl" = ["70 min", "80 min"]', "min"),
         ('[subjects.match]\n"fasting.equilibrium_glucose_mg_dl" = { mean = 90 }', "sd is missing"),
         ('[subjects.match]\n"fasting.equilibrium_glucose_mg_dl" = { mean = 90, sd = 0 }', "an SD above 0 is wanted"),
-        ("[subjects.population]\nouter = 20\ninner = 32", "no law says how well it is known"),
     ],
 )
 def test_mistakes_in_who_is_recruited_are_named(tmp_path: Path, block: str, said: str) -> None:
     with pytest.raises(StudyError) as error:
         study(tmp_path, text=STUDY.replace("[[subjects.strata]]", f"{block}\n[[subjects.strata]]", 1))
     assert said in str(error.value)
+
+
+def test_draws_of_a_population_that_is_exactly_known_are_pointed_out(tmp_path: Path) -> None:
+    text = STUDY.replace("[[subjects.strata]]", "[subjects.population]\nouter = 20\ninner = 32\n[[subjects.strata]]", 1)
+    assert any("no law says how well it is known" in w.message for w in study(tmp_path, text=text).warnings)
 
 
 def test_a_schedule_that_aliases_is_never_silent(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

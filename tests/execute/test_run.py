@@ -398,11 +398,11 @@ def test_what_is_not_available_yet_is_checked_and_refused_by_run(
     tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
     path = tmp_path / "later.toml"
-    path.write_text(STUDY + "[recruitment]\nsizes = [12]\n")
+    path.write_text(STUDY + "[map]\nx = 1\n")
     assert main(["check", str(path)]) == 0
-    assert "recruitment: not available yet" in capsys.readouterr().err
+    assert "map: not available yet" in capsys.readouterr().err
     assert main(["run", str(path), "--out", str(tmp_path / "out")]) == 2
-    assert "recruitment: not available yet" in capsys.readouterr().err
+    assert "map: not available yet" in capsys.readouterr().err
     assert not (tmp_path / "out").exists()
 
 

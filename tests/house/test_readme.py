@@ -45,6 +45,8 @@ def test_python_examples_run(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) ->
 
 ROWS = re.findall(r"(?m)^\| ([a-z-]+) \| [^|]+\? \| ([^|]+) \|$", README)
 PROMISE = re.compile(r"`([^`]+)`: (?:(oscillates) ([\d.]+)-([\d.]+) %|median (\w+) ([\d.]+)-([\d.]+))")
+DETECTS = re.compile(r"`([^`]+)`: ([\w ]+) detects ([\d.]+)-([\d.]+) %")
+RECRUIT = re.compile(r"`([^`]+)`: recruit ([\d.]+)-([\d.]+)")
 LEADS = re.compile(r"`([^`]+)`: (\w+) leads (\w+) \(([^)]+)\)")
 
 
@@ -62,7 +64,18 @@ def test_a_shipped_study_gives_its_stated_answer(name: str, expected: str, tmp_p
     run_study(study, tmp_path / "out", quiet=True)
     results, summary = rebuild(tmp_path / "out")
     promises, leads = PROMISE.findall(expected), LEADS.findall(expected)
-    assert len(promises) + len(leads) == expected.count("`") // 2
+    detects, recruits = DETECTS.findall(expected), RECRUIT.findall(expected)
+    assert len(promises) + len(leads) + len(detects) + len(recruits) == expected.count("`") // 2
+    for arm, schedule, low, high in detects:
+        counted = summary["arms"][arm]["schedules"][schedule]["everyone"]["detected"]
+        assert counted["high"] * 100 >= float(low) and counted["low"] * 100 <= float(high), (arm, counted)
+    for arm, low, high in recruits:
+        needed = [
+            row["to_recruit"]
+            for row in summary["recruitment"]["rows"]
+            if row["arm"] == arm and row["counted"] == "oscillates" and row.get("to_recruit")
+        ]
+        assert float(low) <= needed[0] <= float(high), (arm, needed)
     for arm, leader, outcome, estimand in leads:
         (found,) = [
             ranked
