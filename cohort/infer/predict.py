@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 
 import numpy as np
@@ -66,14 +67,22 @@ def widened(belief: Belief, sd: float) -> Belief:
     return from_moments(mean, float(np.sqrt(min(own + sd * sd, most))))
 
 
+@functools.cache
+def _legendre() -> tuple[Array, Array]:
+    """Gauss-Legendre nodes and weights on 0..1."""
+    from scipy.special import roots_legendre
+
+    x, w = roots_legendre(NODES)
+    return 0.5 * (x + 1.0), 0.5 * w
+
+
 def _nodes(belief: Belief, factor: float) -> tuple[Array, Array]:
     """Values of factor x share and their weights: midpoints in probability, refined towards both ends."""
     if belief.exact is not None:
         return np.array([belief.exact * factor]), np.ones(1)
-    from scipy.special import betaincinv, roots_legendre
+    from scipy.special import betaincinv
 
-    x, w = roots_legendre(NODES)
-    u, w = 0.5 * (x + 1.0), 0.5 * w
+    u, w = _legendre()
     smooth = u * u * u * (u * (6.0 * u - 15.0) + 10.0)  # more nodes where quantiles move fast
     slope = 30.0 * u * u * (u - 1.0) * (u - 1.0)
     return betaincinv(belief.a, belief.b, smooth) * factor, w * slope

@@ -36,7 +36,10 @@ def rank(results: Results) -> dict[str, Any] | None:
     record = results.record.get("ranking")
     if not record or "strata" not in record:
         return None
-    facts = from_plain(record)
+    try:
+        facts = from_plain(record)
+    except (KeyError, TypeError, ValueError):
+        raise ValueError(f"{results.folder / 'run.json'}: its ranking was recorded by another version") from None
     found = findings(results.folder, facts)
     write_table(results.folder / "sensitivity.parquet", SENSITIVITY, _columns(SENSITIVITY_COLUMNS, found.rows))
     steps = [s.row for s in found.steps]

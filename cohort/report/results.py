@@ -14,6 +14,8 @@ from cohort.errors import Problem, StudyError
 if TYPE_CHECKING:
     import pyarrow as pa
 
+    from cohort.report.figures import Figure
+
 
 @dataclass(frozen=True)
 class Results:
@@ -100,6 +102,12 @@ class Results:
     def ranking(self) -> pa.Table:
         """ranking/: a row a run of the ranking."""
         return self._parts("ranking", None)
+
+    def figures(self) -> list[Figure]:
+        """The page's figures, each with its SVG text, its numbers and what it says in words."""
+        from cohort.report.gallery import gallery
+
+        return [figure for _, figure in gallery(self, self.summary())]
 
     def summary(self) -> dict[str, Any]:
         """summary.json: the headline numbers."""

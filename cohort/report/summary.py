@@ -15,6 +15,7 @@ from cohort.quantities import REGIMES
 from cohort.report.chosen import Chosen, chosen
 from cohort.report.clinic import detection_lines, fasting_lines, people_lines, recruitment_lines, sampling_lines
 from cohort.report.counting import EVERYONE, OSCILLATES, Count, count_all, write_incidence
+from cohort.report.page import write_page
 from cohort.report.ranking import rank, ranking_words
 from cohort.report.recruitment import recruit
 from cohort.report.results import Results
@@ -35,8 +36,9 @@ CAUTION = (
 )
 
 
-def rebuild(folder: Path) -> tuple[Results, dict[str, Any]]:
-    """Make incidence.parquet and summary.json anew from the result files; returns (results, summary).
+def rebuild(folder: Path, page: bool = True) -> tuple[Results, dict[str, Any]]:
+    """Make every table but the parts, summary.json and (with `page`) report.html anew from the result files; returns
+    (results, summary).
 
     Only shards of which every table is there are counted, and the summary says how many of how many. Raises StudyError
     for a folder without results, RunError where a part cannot be read or the disk refuses.
@@ -45,12 +47,12 @@ def rebuild(folder: Path) -> tuple[Results, dict[str, Any]]:
     if not results.whole_shards:
         raise StudyError([Problem("", "holds no finished shard; run the study again to carry on", str(folder))])
     try:
-        return results, _rebuild(folder, results)
+        return results, _rebuild(folder, results, page)
     except (OSError, ValueError) as error:
         raise RunError(f"{error}; run the study again to make it anew") from None
 
 
-def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
+def _rebuild(folder: Path, results: Results, page: bool) -> dict[str, Any]:
     who = chosen(results)
     counts = count_all(results, who)
     write_incidence(results, counts)
@@ -77,6 +79,8 @@ def _rebuild(folder: Path, results: Results) -> dict[str, Any]:
     if ranking is not None:
         summary["ranking"] = ranking
     write_bytes(folder / "summary.json", (json.dumps(summary, indent=2) + "\n").encode())
+    if page:
+        write_page(results, summary)
     return summary
 
 

@@ -71,7 +71,7 @@ def study(folder: Path, *overrides: str, text: str = STUDY):  # type: ignore[no-
 
 def run(folder: Path, *overrides: str, text: str = STUDY, out: str = "out", workers: int = 2) -> Results:
     run_study(study(folder, *overrides, text=text), folder / out, workers=workers, quiet=True, shard_size=1024)
-    return rebuild(folder / out)[0]
+    return rebuild(folder / out, page=False)[0]
 
 
 @pytest.fixture(scope="module")
@@ -197,7 +197,7 @@ def test_the_eligible_alone_are_counted_and_the_others_kept(tmp_path: Path) -> N
     assert f"{inside.sum()} of 600 subjects are eligible" in words
     few = text.replace('"70 mg/dL", "5.9 mmol/L"', '"30 mg/dL", "31 mg/dL"')
     with pytest.raises(RunError, match="are eligible"):
-        rebuild(run_and_return(tmp_path, few))
+        rebuild(run_and_return(tmp_path, few), page=False)
 
 
 def run_and_return(folder: Path, text: str) -> Path:

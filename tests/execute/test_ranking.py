@@ -55,7 +55,7 @@ def study(folder: Path, *overrides: str, text: str = STUDY):  # type: ignore[no-
 
 def run(folder: Path, *overrides: str, text: str = STUDY, workers: int = 2, out: str = "out") -> Results:
     run_study(study(folder, *overrides, text=text), folder / out, workers=workers, quiet=True)
-    return rebuild(folder / out)[0]
+    return rebuild(folder / out, page=False)[0]
 
 
 def files(results: Results) -> dict[str, bytes]:
@@ -215,10 +215,10 @@ def test_a_run_whose_rows_are_not_the_designs_is_not_analysed(whole: Results, tm
     table = pq.read_table(path)
     pq.write_table(pq.read_table(path).take([1, 0, *range(2, table.num_rows)]), path)
     with pytest.raises(RunError, match="not the one that the design has there"):
-        rebuild(tmp_path / "out")
+        rebuild(tmp_path / "out", page=False)
     pq.write_table(table.slice(5), path)
     with pytest.raises(RunError, match="where the design has"):
-        rebuild(tmp_path / "out")
+        rebuild(tmp_path / "out", page=False)
     again = run(tmp_path)  # found on resume, and made anew
     assert files(again) == files(whole)
 

@@ -435,7 +435,7 @@ def test_models_schema_and_certify(tmp_path: Path, capsys: pytest.CaptureFixture
 
 
 def test_results_open_in_python(whole: Path) -> None:
-    results, summary = rebuild(whole)
+    results, summary = rebuild(whole, page=False)
     assert isinstance(results, Results) and results.arms == ("steady", "lunch")
     counts = results.incidence().to_pylist()
     everyone = next(r for r in counts if r["stratum"] == "everyone" and r["regime"] == "oscillates")
@@ -487,7 +487,7 @@ insulin = [ { shape = "constant", rate = "100 mU/min" } ]
 def test_a_sobol_cohort_counts_by_its_scrambles(tmp_path: Path) -> None:
     text = STUDY.replace("count = 2500", 'count = 1024\ndraw = "sobol"')
     run_study(study(tmp_path, text=text), tmp_path / "out", quiet=True)
-    _, summary = rebuild(tmp_path / "out")
+    _, summary = rebuild(tmp_path / "out", page=False)
     counted = summary["arms"]["steady"]["strata"]["everyone"]["oscillates"]
     assert counted["method"] == "t over 8 scrambles, 95 %"
     assert counted["low"] < counted["share"] < counted["high"]

@@ -62,7 +62,7 @@ def test_a_shipped_study_gives_its_stated_answer(name: str, expected: str, tmp_p
         fewer += ["ranking.base=64", "ranking.tolerance=0.9"]
     study = load_study(ROOT / "studies" / f"{name}.toml", [*fewer, "output.time_courses=2"])
     run_study(study, tmp_path / "out", quiet=True)
-    results, summary = rebuild(tmp_path / "out")
+    results, summary = rebuild(tmp_path / "out", page=False)
     promises, leads = PROMISE.findall(expected), LEADS.findall(expected)
     detects, recruits = DETECTS.findall(expected), RECRUIT.findall(expected)
     assert len(promises) + len(leads) + len(detects) + len(recruits) == expected.count("`") // 2
