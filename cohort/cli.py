@@ -22,6 +22,26 @@ INTERRUPTED = 130
 ASSAY_CV = {"glucose": 0.02, "insulin": 0.06}
 """Usual assay errors (common practice), which the nadir-to-peak rule counts in."""
 
+EXAMPLES = {
+    "check": (
+        "cohort check studies/steady-infusion.toml",
+        "cohort check my-study.toml --set subjects.count=100_000 --workers 8",
+    ),
+    "run": (
+        "cohort run studies/steady-infusion.toml",
+        "cohort run my-study.toml --out results/wide --set subjects.parameters.td.lognormal.cv=0.4",
+        "cohort run my-study.toml --json | python3 -m json.tool",
+    ),
+    "report": ("cohort report results/steady-infusion",),
+    "certify": ("cohort certify studies/steady-infusion.toml 500",),
+    "detect": (
+        "cohort detect studies/halden-series.csv",
+        "cohort detect series.csv --time h --glucose mmol/L --study studies/sampling.toml",
+    ),
+    "models": ("cohort models", "cohort models hepatic-lag"),
+    "schema": ("cohort schema > study.schema.json",),
+}
+
 DESCRIPTION = """In-silico cohorts and sensitivity studies of ultradian insulin-glucose oscillations.
 
 For research planning. Virtual subjects are not patients; not for diagnosis, dosing or care."""
@@ -49,14 +69,14 @@ def run(words: argparse.Namespace) -> int:
     study = load_study(words.study, words.set)
     _warn(study.warnings)
     folder = Path(words.out) if words.out else Path("results") / study.path.stem
-    done = run_study(study, folder, words.workers)
+    done = run_study(study, folder, words.workers, log=Path(words.log) if words.log else None)
     _, summary = rebuild(folder)
     if words.json:
         print(json.dumps(summary, indent=2))
         return 0
     print(closing_words(summary))
     kept = f", {done.kept:,} were there" if done.kept else ""
-    print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. Results are in\n{folder}")
+    print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. To read and to share:\n{folder / 'report.html'}")
     return 0
 
 
@@ -179,7 +199,10 @@ def _parser() -> argparse.ArgumentParser:
     commands = parser.add_subparsers(metavar="COMMAND", required=True)
 
     def command(name: str, function: Callable[[argparse.Namespace], int], text: str) -> argparse.ArgumentParser:
-        made = commands.add_parser(name, help=text, description=text)
+        examples = "examples:\n" + "\n".join(f"  {line}" for line in EXAMPLES[name])
+        made = commands.add_parser(
+            name, help=text, description=text, epilog=examples, formatter_class=argparse.RawDescriptionHelpFormatter
+        )
         made.set_defaults(function=function)
         return made
 
@@ -196,6 +219,7 @@ def _parser() -> argparse.ArgumentParser:
     running.add_argument("--out", metavar="DIR", help="result folder (default: results/<study>)")
     running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
     running.add_argument("--json", action="store_true", help="print summary.json instead of words")
+    running.add_argument("--log", metavar="FILE", help="add what happens, and when, to this file")
     reporting = command("report", report, "rebuild tables and summary from the result files")
     reporting.add_argument("folder", metavar="DIR")
     reporting.add_argument("--json", action="store_true", help="print summary.json instead of words")

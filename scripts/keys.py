@@ -1,4 +1,4 @@
-"""Print README's table of study keys from the one table of keys in the code: python3 scripts/keys.py"""
+"""Print README's tables of study keys and of columns from the one place in the code: python3 scripts/keys.py"""
 
 from __future__ import annotations
 
@@ -7,6 +7,18 @@ from pathlib import Path
 
 sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
 
+from cohort.quantities import (
+    CLAMP_OUTCOMES,
+    CYCLE_OUTCOMES,
+    DETECTION_COLUMNS,
+    INCIDENCE_COLUMNS,
+    MEAL_OUTCOMES,
+    POPULATION_COLUMNS,
+    RANKING_COLUMNS,
+    RECRUITMENT_COLUMNS,
+    SENSITIVITY_COLUMNS,
+    WINDOW_OUTCOMES,
+)
 from cohort.study.keys import KEYS, Key
 
 LAW_PARTS = ("lognormal", "normal", "uniform", "loguniform", "triangular", "beta", "empirical")
@@ -25,5 +37,28 @@ def table() -> str:
     return "\n".join(lines)
 
 
+COLUMNS = {
+    "outcomes/<arm>": (*CYCLE_OUTCOMES, *WINDOW_OUTCOMES),
+    "outcomes/<arm> of clamps": CLAMP_OUTCOMES,
+    "meals/<arm>": MEAL_OUTCOMES,
+    "observations/<arm>/<schedule>": DETECTION_COLUMNS,
+    "population": POPULATION_COLUMNS,
+    "ranking": RANKING_COLUMNS,
+    "incidence.parquet": INCIDENCE_COLUMNS,
+    "recruitment.parquet": RECRUITMENT_COLUMNS,
+    "sensitivity.parquet": SENSITIVITY_COLUMNS,
+}
+
+
+def columns() -> str:
+    """The columns of every table as Markdown."""
+    lines = ["| table | column | unit | meaning |", "|---|---|---|---|"]
+    for name, found in COLUMNS.items():
+        lines += [f"| {name} | `{c.name}` | {c.unit} | {c.meaning} |" for c in found]
+    return "\n".join(lines)
+
+
 if __name__ == "__main__":
     print(table())
+    print()
+    print(columns())

@@ -26,7 +26,7 @@ def main(words: list[str]) -> int:
         [python, "-m", "ruff", "check", "."],
         [python, "-m", "ruff", "format", "--check", "."],
         [python, "-m", "mypy"],
-        [python, "-m", "pytest", *coverage, *words],
+        [python, "-m", "pytest", "-n", "auto", "--dist", "loadfile", *coverage, *words],
     ):
         code = call(command)
         if code:

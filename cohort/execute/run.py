@@ -45,10 +45,17 @@ class Finished:
 
 
 def run_study(
-    study: Study, out: Path, workers: int | None = None, shard_size: int = SHARD, quiet: bool = False
+    study: Study,
+    out: Path,
+    workers: int | None = None,
+    shard_size: int = SHARD,
+    quiet: bool = False,
+    log: Path | None = None,
 ) -> Finished:
-    """Simulate what is missing in `out` and write it there. Raises StudyError where the folder holds another study,
-    RunError where it cannot finish, KeyboardInterrupt when interrupted (also by SIGTERM); what is done stays."""
+    """Simulate what is missing in `out` and write it there; what happens, and when, is added to `log`.
+
+    Raises StudyError where the folder holds another study, RunError where it cannot finish, KeyboardInterrupt when
+    interrupted (also by SIGTERM); what is done stays."""
     if study.later:
         raise StudyError(study.later)
     workers = workers or os.cpu_count() or 1
@@ -64,7 +71,7 @@ def run_study(
             _write_record(out, record, "running")
             for path in (*strays(study, out, shard_size), *strays_of(out)):
                 path.unlink()
-            with _progress(quiet) as progress:
+            with _progress(quiet, log) as progress:
                 done, kept = _all_runs(study, out, workers, shard_size, progress, record)
             seconds = time.monotonic() - began
             record["timings"] = {"seconds": round(seconds, 3), "runs": done}
@@ -73,13 +80,20 @@ def run_study(
 
 
 @contextlib.contextmanager
-def _progress(quiet: bool) -> Iterator[Progress | None]:
-    progress = None if quiet else Progress()
+def _progress(quiet: bool, log: Path | None) -> Iterator[Progress | None]:
+    if quiet and log is None:
+        yield None
+        return
+    progress = Progress(None if quiet else sys.stderr, log)
+    progress.note(f"begins; {' '.join(sys.argv)}")
     try:
         yield progress
+        progress.note(f"ends; {progress.done:,} runs are there")
+    except BaseException as error:
+        progress.note(f"stops: {type(error).__name__}: {error}")
+        raise
     finally:
-        if progress:
-            progress.end()
+        progress.end()
 
 
 def _all_runs(

@@ -19,7 +19,8 @@ README = (ROOT / "README.md").read_text()
 
 def test_the_table_of_keys_is_the_codes() -> None:
     made = subprocess.run([sys.executable, ROOT / "scripts" / "keys.py"], capture_output=True, text=True, check=True)
-    assert made.stdout.strip() in README, "python3 scripts/keys.py prints what README should hold"
+    for table in made.stdout.strip().split("\n\n"):
+        assert table in README, "python3 scripts/keys.py prints what README should hold"
 
 
 def test_the_study_read_line_by_line_is_the_shipped_one() -> None:
@@ -99,3 +100,15 @@ def test_commands_named_are_the_ones_there_are() -> None:
     there = set(re.findall(r"(?m)^    ([a-z]+) ", said.stdout))
     assert set(re.findall(r"`cohort ([a-z]+)", README)) <= there
     assert there <= set(re.findall(r"(?m)^\| `cohort ([a-z]+)", README))
+
+
+def test_every_option_stands_beside_its_command() -> None:
+    for command in re.findall(r"(?m)^\| `cohort ([a-z]+)", README):
+        help_ = subprocess.run(
+            [sys.executable, "-m", "cohort", command, "--help"], capture_output=True, text=True, check=True, cwd=ROOT
+        ).stdout
+        (line,) = re.findall(rf"(?m)^\| `cohort {command}\b([^|]*)", README)
+        assert set(re.findall(r"(?m)^  (--[a-z-]+)", help_)) - {"--help"} == set(re.findall(r"--[a-z-]+", line)), (
+            command
+        )
+        assert "examples:" in help_
