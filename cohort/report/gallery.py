@@ -17,7 +17,7 @@ from cohort.tables import numbers, read_part, read_parts, read_table
 
 Array = NDArray[np.float64]
 
-IN_PLANE = 1500
+IN_PLANE = 800
 MOST_BINS = 40
 EXCURSIONS = ("glucose_nadir_mg_dl", "glucose_mean_mg_dl", "glucose_peak_mg_dl")
 SHOWN_FACTORS = 10
@@ -165,13 +165,22 @@ def _ranked(summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:
         where = entry["arm"] if entry["stratum"] == "all" else f"{entry['arm']}, {entry['stratum']}"
         alt = "; ".join(f"{f['name']} {f['value']:.2g} ({f['verdict'] or 'no verdict'})" for f in factors)
         yield "decides", Figure(
-            f"ranked-{k + 1:02d}", f"{entry['outcome']} in {where}",
+            f"ranked-{k + 1:02d}", f"{entry['outcome']} in {where}: {entry['estimand']}",
             f"{ESTIMANDS[entry['estimand']]}; {entry['index']} with 95 % intervals: {alt}",
             intervals([str(f["name"]) for f in factors], value, low, high, f"{entry['index']}: {ESTIMANDS[entry['estimand']]}"),
             ("parameter", "index", "value", "low", "high", "verdict"),
             tuple((f["name"], entry["index"], f["value"], f["low"], f["high"], f["verdict"]) for f in factors),
-            f"n {entry['n']:,} runs", entry["arm"],
+            f"n {entry['n']:,} runs{_verdicts(entry['factors'])}", entry["arm"],
         )  # fmt: skip
+
+
+def _verdicts(factors: list[dict[str, Any]]) -> str:
+    """Factors by verdict, in words."""
+    words: dict[str, list[str]] = {}
+    for factor in factors:
+        if factor["verdict"]:
+            words.setdefault(factor["verdict"], []).append(str(factor["name"]))
+    return "".join(f"; {verdict}: {', '.join(names)}" for verdict, names in words.items())
 
 
 def _plane(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:

@@ -137,7 +137,8 @@ def _figure(figure: Figure) -> str:
         if plane or len(figure.rows) <= MOST_ROWS_SHOWN
         else f"<p>The first {MOST_ROWS_SHOWN}; all are in the CSV file.</p>"
     )
-    caption = f"{escape(figure.alt.split('. ')[0].split(': ')[0])}. {escape(figure.n)}."
+    first = figure.alt.split(". ")[0].split(": ")[0]
+    caption = escape(f"{first[0].upper()}{first[1:]}. {figure.n[0].upper()}{figure.n[1:]}.")
     return (
         f'<figure data-arm="{escape(figure.arm)}"{plane}><h3>{escape(figure.title)}</h3>{_scrolled(svg, figure.title)}'
         f"<figcaption>{caption} Files: figures/{name}.svg and .csv.</figcaption>"
