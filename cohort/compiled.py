@@ -60,6 +60,12 @@ def kernel_identity() -> str:
 
 
 @functools.cache
+def detector_identity() -> str:
+    """A digest of every source that readings and detections can depend on, beside those of a subject's numbers."""
+    return _digest_of(("observe",))
+
+
+@functools.cache
 def _all_kernels() -> str:
     return _digest_of(("program.py", "compiled.py", "model", "simulate", "measure", "observe"))
 

@@ -11,11 +11,10 @@ from typing import Any
 
 import numpy as np
 
-from cohort.compiled import kernel_identity
+from cohort.compiled import detector_identity, kernel_identity
 from cohort.infer.ranking import Design, Ranking
 from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
-from cohort.observe.null import SIMULATED
 from cohort.observe.sampling import Schedule
 from cohort.population.laws import Empirical
 from cohort.quantities import CLAMP_OUTCOMES, COURSE_COLUMNS, CYCLE_OUTCOMES, MEAL_OUTCOMES, WINDOW_OUTCOMES
@@ -75,7 +74,7 @@ def seen_identity(study: Study, arm: str, schedule: Schedule) -> str:
     """Of an arm's observations through one schedule: the arm's own identity, the schedule, errors and the rule."""
     assert study.sampling is not None
     readings = {analyte: plain(reading) for analyte, reading in study.sampling.readings.items()}
-    return _digest(["observations", arm, plain(schedule), readings, plain(study.sampling.rule), SIMULATED])
+    return _digest(["observations", arm, plain(schedule), readings, plain(study.sampling.rule), detector_identity()])
 
 
 def population_identity(study: Study, arm: Arm) -> str:

@@ -155,7 +155,7 @@ def test_coverage_of_shares_and_predictions() -> None:
             if n == 10:
                 half = 1.96 * np.sqrt(k / n * (1 - k / n) / n)
                 wald.append(chance[np.abs(k / n - p) <= half].sum())
-    assert abs(np.mean(covered) - 0.95) < 0.01 and min(covered) > 0.8
+    assert abs(np.mean(covered) - 0.95) < 0.01 and min(covered) >= 0.9
     assert np.mean(wald) < 0.80
     rng = np.random.default_rng(9)
     hits = []
