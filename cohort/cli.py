@@ -31,6 +31,7 @@ EXAMPLES = {
         "cohort run studies/steady-infusion.toml",
         "cohort run my-study.toml --out results/wide --set subjects.parameters.td.lognormal.cv=0.4",
         "cohort run my-study.toml --json | python3 -m json.tool",
+        "cohort run my-study.toml --scheduler tcp://head:8786 --out /shared/results/my-study",
     ),
     "report": ("cohort report results/steady-infusion",),
     "certify": ("cohort certify studies/steady-infusion.toml 500",),
@@ -69,7 +70,13 @@ def run(words: argparse.Namespace) -> int:
     study = load_study(words.study, words.set)
     _warn(study.warnings)
     folder = Path(words.out) if words.out else Path("results") / study.path.stem
-    done = run_study(study, folder, words.workers, log=Path(words.log) if words.log else None)
+    done = run_study(study, folder, words.workers, log=Path(words.log) if words.log else None, scheduler=words.scheduler,
+                     mixed=words.mixed_machines, only=words.shards)  # fmt: skip
+    if words.shards:
+        print(
+            f"{done.simulated:,} runs in {done.seconds:.1f} s. When every share is done, run without --shards to finish"
+        )
+        return 0
     _, summary = rebuild(folder)
     if words.json:
         print(json.dumps(summary, indent=2))
@@ -219,6 +226,11 @@ def _parser() -> argparse.ArgumentParser:
     running.add_argument("--out", metavar="DIR", help="result folder (default: results/<study>)")
     running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
     running.add_argument("--json", action="store_true", help="print summary.json instead of words")
+    running.add_argument(
+        "--scheduler", metavar="ADDRESS", help="a dask.distributed cluster to do it on, tcp://host:8786"
+    )
+    running.add_argument("--mixed-machines", action="store_true", help="accept workers of other versions or processors")
+    running.add_argument("--shards", type=_fraction, metavar="K/N", help="only the K-th of N shares, for job arrays")
     running.add_argument("--log", metavar="FILE", help="add what happens, and when, to this file")
     reporting = command("report", report, "rebuild tables and summary from the result files")
     reporting.add_argument("folder", metavar="DIR")
@@ -259,6 +271,13 @@ def _share(text: str) -> float:
     if not 0.0 < share < 0.5:
         raise argparse.ArgumentTypeError(f"{text!r} is not a share above 0 and below 0.5")
     return share
+
+
+def _fraction(text: str) -> tuple[int, int]:
+    share, sign, shares = text.partition("/")
+    if not (sign and share.isdigit() and shares.isdigit() and 1 <= int(share) <= int(shares) <= 100_000):
+        raise argparse.ArgumentTypeError(f"{text!r} is not K/N with 1 <= K <= N, such as 3/100")
+    return int(share), int(shares)
 
 
 def _positive(text: str) -> int:

@@ -122,6 +122,12 @@ def _cpu() -> tuple[str, str]:
     return llvm.get_host_cpu_name(), llvm.get_host_cpu_features().flatten()
 
 
+def cpu_name() -> str:
+    """The processor as the compiler knows it, with a digest of its features."""
+    name, features = _cpu()
+    return f"{name} {hashlib.blake2b(features.encode(), digest_size=4).hexdigest()}"
+
+
 class _Emitter:
     """Writes one program as LLVM instructions on vectors of `lanes` doubles."""
 

@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from cohort.execute.identity import population_identity
 from cohort.execute.progress import Progress
 from cohort.execute.stages import observed, sample_times
-from cohort.execute.tasks import Job, Piece, run_jobs
+from cohort.execute.tasks import Hands, Job, Piece
 from cohort.measure.outcomes import outcomes
 from cohort.model.protocol import Arm
 from cohort.population import draw
@@ -31,7 +31,7 @@ SUBJECTS_A_PART = 16_384
 
 
 def run_population(
-    study: Study, out: Path, workers: int, progress: Progress | None, slots: Mapping[str, int]
+    study: Study, out: Path, hands: Hands, progress: Progress | None, slots: Mapping[str, int]
 ) -> tuple[int, int]:
     """Make what is missing of population/; returns (runs made, runs that were there)."""
     outer = study.recipe.population
@@ -53,7 +53,7 @@ def run_population(
     made = sum(piece.runs for job in jobs for piece in job.pieces)
     if progress:
         progress.more(made)
-    run_jobs(jobs, workers, progress)
+    hands.do(jobs, progress)
     return made, kept
 
 

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from cohort.execute.identity import ranking_identity
 from cohort.execute.progress import Progress
 from cohort.execute.stages import joined
-from cohort.execute.tasks import Job, Piece, run_jobs
+from cohort.execute.tasks import Hands, Job, Piece
 from cohort.infer.facts import INSTEAD, Facts, RankedArm, RankedStratum
 from cohort.infer.findings import at, unsettled
 from cohort.infer.ranking import PLAIN_DOUBLING, Ranking, design_rows, plain_rows, points, redrawn_rows, row_count
@@ -53,10 +53,10 @@ class Ranked:
     kept: int
 
 
-def run_ranking(study: Study, out: Path, workers: int, progress: Progress | None, slots: Mapping[str, int]) -> Ranked:
-    """Make every run that the ranking lacks, doubling its designs as far as it takes. Raises what `run_jobs` does."""
+def run_ranking(study: Study, out: Path, hands: Hands, progress: Progress | None, slots: Mapping[str, int]) -> Ranked:
+    """Make every run that the ranking lacks, doubling its designs as far as it takes. Raises what jobs raise."""
     assert study.ranking is not None
-    work = _Work(study, study.ranking, out, workers, progress, _facts(study, study.ranking, slots))
+    work = _Work(study, study.ranking, out, hands, progress, _facts(study, study.ranking, slots))
     strata = [work.design(stratum) for stratum in work.facts.strata]
     work.facts = replace(work.facts, strata=tuple(strata))
     for stratum in strata:
@@ -112,11 +112,15 @@ class _Work:
     study: Study
     ranking: Ranking
     out: Path
-    workers: int
+    hands: Hands
     progress: Progress | None
     facts: Facts
     made: int = 0
     kept: int = 0
+
+    def __getstate__(self) -> dict[str, Any]:
+        """What goes to a worker with a job: not who does the work, nor who watches."""
+        return {**self.__dict__, "hands": None, "progress": None}
 
     @functools.cached_property
     def schema(self) -> Schema:
@@ -179,7 +183,7 @@ class _Work:
         self.kept += sum(job for job in jobs if isinstance(job, int))
         if self.progress:
             self.progress.more(runs)
-        run_jobs(left, self.workers, self.progress)
+        self.hands.do(left, self.progress)
 
     def _design_jobs(self, stratum: RankedStratum, doubling: int) -> list[Job | int]:
         design = stratum.design

@@ -26,7 +26,7 @@ from cohort.execute.progress import Progress
 from cohort.execute.ranking import run_ranking, slots_of, strays_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
 from cohort.execute.stages import rows, warm
-from cohort.execute.tasks import Job, Piece, run_jobs
+from cohort.execute.tasks import Hands, Job, Piece
 from cohort.infer.facts import as_plain
 from cohort.infer.salib import load as load_salib
 from cohort.study import Study, plan
@@ -51,9 +51,14 @@ def run_study(
     shard_size: int = SHARD,
     quiet: bool = False,
     log: Path | None = None,
+    scheduler: str | None = None,
+    mixed: bool = False,
+    only: tuple[int, int] | None = None,
 ) -> Finished:
     """Simulate what is missing in `out` and write it there; what happens, and when, is added to `log`.
 
+    scheduler: address of a dask.distributed cluster to do it on, whose workers may differ from this process where `mixed`;
+    only: (k, n), the k-th of n shares of the cohort's shards and nothing else, for job arrays, several at once.
     Raises StudyError where the folder holds another study, RunError where it cannot finish, KeyboardInterrupt when
     interrupted (also by SIGTERM); what is done stays."""
     if study.later:
@@ -64,7 +69,9 @@ def run_study(
         out.mkdir(parents=True, exist_ok=True)
     except OSError as error:
         raise RunError(f"{out}: cannot be made: {_why(error)}") from None
-    with _locked(out), _terminable():
+    if only is not None:
+        return _run_share(study, out, workers, shard_size, quiet, log, only, began)
+    with _locked(out), _terminable(), _hands(workers, scheduler, out, mixed) as hands:
         before = _check_folder(study, out)
         record = _record(study, workers, shard_size, before)
         with _recorded(out, record):
@@ -72,11 +79,48 @@ def run_study(
             for path in (*strays(study, out, shard_size), *strays_of(out)):
                 path.unlink()
             with _progress(quiet, log) as progress:
-                done, kept = _all_runs(study, out, workers, shard_size, progress, record)
+                done, kept = _all_runs(study, out, hands, shard_size, progress, record)
             seconds = time.monotonic() - began
             record["timings"] = {"seconds": round(seconds, 3), "runs": done}
             _write_record(out, record, "done")
     return Finished(out, done, kept, seconds)
+
+
+def _run_share(
+    study: Study,
+    out: Path,
+    workers: int,
+    shard_size: int,
+    quiet: bool,
+    log: Path | None,
+    only: tuple[int, int],
+    began: float,
+) -> Finished:
+    """One share of the shards, beside others that write other shares into the same folder; no record is kept of it."""
+    share, shares = only
+    _refuse_foreign(out)
+    _check_folder(study, out)
+    with _terminable(), _progress(quiet, log) as progress:
+        _compile(study)
+        left = [w for w in missing(study, out, shard_size) if w.shard.number % shares == share - 1]
+        todo = sum(len(w.arms) * (w.shard.last - w.shard.first) for w in left)
+        if progress:
+            progress.begin(todo, 0)
+        if not (out / "run.json").exists():
+            _write_record(out, _record(study, workers, shard_size, {}), "running")
+        Hands(workers).do((_job(study, out, work) for work in left), progress)
+    return Finished(out, todo, 0, time.monotonic() - began)
+
+
+@contextlib.contextmanager
+def _hands(workers: int, scheduler: str | None, out: Path, mixed: bool) -> Iterator[Hands]:
+    if scheduler is None:
+        yield Hands(workers)
+        return
+    from cohort.execute.cluster import reached
+
+    with reached(scheduler, out, mixed) as cluster:
+        yield Hands(workers, cluster)
 
 
 @contextlib.contextmanager
@@ -97,20 +141,20 @@ def _progress(quiet: bool, log: Path | None) -> Iterator[Progress | None]:
 
 
 def _all_runs(
-    study: Study, out: Path, workers: int, shard_size: int, progress: Progress | None, record: dict[str, Any]
+    study: Study, out: Path, hands: Hands, shard_size: int, progress: Progress | None, record: dict[str, Any]
 ) -> tuple[int, int]:
     """The cohort, then the ranking; what the ranking did goes into the record."""
     if study.ranking:
         threading.Thread(target=load_salib, daemon=True).start()  # takes a second or two, beside the simulation
     _compile(study)
-    done, kept = _simulate(study, out, workers, shard_size, progress)
+    done, kept = _simulate(study, out, hands, shard_size, progress)
     keep_courses(study, out)
     slots = record["slots"]
     if study.recipe.population:
-        made, there = run_population(study, out, workers, progress, slots)
+        made, there = run_population(study, out, hands, progress, slots)
         done, kept = done + made, kept + there
     if study.ranking:
-        ranked = run_ranking(study, out, workers, progress, slots)
+        ranked = run_ranking(study, out, hands, progress, slots)
         record["ranking"] = as_plain(ranked.facts)
         done, kept = done + ranked.made, kept + ranked.kept
     return done, kept
@@ -138,14 +182,14 @@ def _why(error: OSError) -> str:
     return (error.strerror or str(error)).lower()
 
 
-def _simulate(study: Study, out: Path, workers: int, shard_size: int, progress: Progress | None) -> tuple[int, int]:
+def _simulate(study: Study, out: Path, hands: Hands, shard_size: int, progress: Progress | None) -> tuple[int, int]:
     """Do the missing work of the cohort; returns (runs simulated, runs that were there)."""
     left = missing(study, out, shard_size)
     todo = sum(len(w.arms) * (w.shard.last - w.shard.first) for w in left)
     there = study.recipe.count * len(study.arms) - todo
     if progress:
         progress.begin(todo + there, there)
-    run_jobs((_job(study, out, work) for work in left), workers, progress)
+    hands.do((_job(study, out, work) for work in left), progress)
     return todo, there
 
 

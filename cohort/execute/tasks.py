@@ -30,10 +30,22 @@ class Job:
     write: Callable[[Sequence[Any]], Any]
 
 
-def run_jobs(jobs: Iterable[Job], workers: int, progress: Progress | None) -> None:
-    """Do all jobs, a window of sub-batches at a time. What a job raises ends the run; no thread writes after it."""
-    for window in _windows(jobs):
-        _run_window(window, workers, progress)
+@dataclass(frozen=True)
+class Hands:
+    """Who does the work: so many threads of this process, or a cluster that was reached."""
+
+    workers: int
+    cluster: Any = None
+
+    def do(self, jobs: Iterable[Job], progress: Progress | None) -> None:
+        """Do all jobs, a window of them at a time. What a job raises ends the run; no thread writes after it."""
+        if self.cluster is not None:
+            from cohort.execute.cluster import run_on
+
+            run_on(self.cluster, jobs, progress)
+            return
+        for window in _windows(jobs):
+            _run_window(window, self.workers, progress)
 
 
 def _windows(jobs: Iterable[Job]) -> Iterator[list[Job]]:
