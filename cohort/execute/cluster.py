@@ -13,6 +13,7 @@ import sys
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from importlib import metadata
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -28,10 +29,12 @@ PACKAGES = ("numpy", "numba", "llvmlite", "pyarrow", "scipy", "dask", "distribut
 
 @dataclass(frozen=True)
 class Cluster:
-    """A scheduler that was reached, and whose workers agreed with this process."""
+    """A scheduler that was reached, and whose workers agreed with this process; scope: the folder that its tasks write
+    into, part of their keys, since a scheduler takes tasks of one key for one task."""
 
     client: Any
     threads: int
+    scope: str
 
 
 @contextlib.contextmanager
@@ -58,7 +61,7 @@ def reached(address: str, out: Path, mixed: bool) -> Iterator[Cluster]:
         if not found:
             raise RunError(f"{address}: the scheduler has no workers; start some with `dask worker {address}`")
         _agree(found, mixed)
-        yield Cluster(client, sum(client.nthreads().values()))
+        yield Cluster(client, sum(client.nthreads().values()), str(out.resolve()))
 
 
 def traits() -> dict[str, str]:
@@ -108,7 +111,7 @@ def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> 
 
     def send(number: int) -> None:
         for job in _taken(left, number):
-            key = f"cohort-{hashlib.blake2b(job.name.encode(), digest_size=12).hexdigest()}"
+            key = f"cohort-{hashlib.blake2b(f'{cluster.scope} {job.name}'.encode(), digest_size=12).hexdigest()}"
             names[key] = sum(piece.runs for piece in job.pieces)
             waiting.add(cluster.client.submit(do_job, job, key=key, pure=False, retries=2))
 
@@ -129,7 +132,7 @@ def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> 
 
 
 def _taken(jobs: Iterator[Job], number: int) -> Sequence[Job]:
-    return [job for job, _ in zip(jobs, range(number), strict=False)]
+    return list(islice(jobs, number))
 
 
 def do_job(job: Job) -> int:

@@ -360,7 +360,7 @@ def test_the_command_prints_a_ranked_list_that_fits(tmp_path: Path, capsys: pyte
     assert main(["run", str(path), "--out", str(tmp_path / "out")]) == 0
     said = capsys.readouterr().out
     assert "what decides it" in said and "matters" in said and "refused: undefined for" in said
-    assert max(map(len, said.splitlines())) <= 80
+    assert max(map(len, said.splitlines()[:-1])) <= 80  # the last is a path of this machine
     summary = json.loads((tmp_path / "out/summary.json").read_text())
     assert summary["ranking"]["lists"][0]["factors"][0]["value"] > 0
     assert main(["report", str(tmp_path / "out"), "--json"]) == 0
