@@ -33,6 +33,8 @@ GROUP_METHOD = "closed first order by nearest neighbours on independent rows; t 
 SHARE_METHOD = "Shapley effects by nearest neighbours on independent rows; t over 8 parts, 95 %"
 LEFT_METHOD = "by nearest neighbours on independent rows; t over 8 parts, 95 %"
 REDRAW_METHOD = "Jansen's form, redrawn until they oscillate; linearised ratio, 95 %"
+FEWEST_OF_A_KIND = 80
+"""Rows that must have either value of an outcome of two, so that each of the eight parts has some ten."""
 MOST_STUCK = 0.01
 """Share of redraws that never oscillated above which the mechanism is refused."""
 
@@ -91,8 +93,19 @@ def _too_few(y: Array, of: int, among: str) -> str:
     if len(y) < FEWEST_ROWS:
         who = "oscillate" if among else "have the outcome"
         return f"{len(y):,} of {of:,} independent rows {who}; at least {FEWEST_ROWS} are needed"
+    few = _rarest(y)
+    if few < FEWEST_OF_A_KIND:
+        return f"{few:,} of {len(y):,} rows differ from the rest; at least {FEWEST_OF_A_KIND} are needed of either of two values"
     spread = float(np.ptp(y))
     return f"the same in all {len(y):,} rows ({y[0]:.6g})" if spread <= 1e-12 * float(np.abs(y).max()) else ""
+
+
+def _rarest(y: Array) -> int:
+    """Of an outcome with two values, how many rows have the rarer one; of others, all."""
+    first = y == y[0]
+    count = int(first.sum())
+    two = bool((y[~first] == y[~first][:1]).all()) and count < len(y)
+    return min(count, len(y) - count) if two else len(y)
 
 
 def _association_rows(blank: Row, stratum: RankedStratum, x: Array, y: Array) -> list[Row]:

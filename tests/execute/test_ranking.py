@@ -429,3 +429,12 @@ def test_a_group_has_no_sigma_and_no_sign(tmp_path: Path) -> None:
     rows = listed(run(tmp_path, text=morris), arm="steady", outcome="growth_per_min")
     assert [r["index"] for r in rows if r["parameter"] == "both"] == ["mu_star"]
     assert {r["index"] for r in rows if r["parameter"] == "C4"} == {"mu", "mu_star", "sigma"}
+
+
+def test_given_data_indices_of_a_rare_oscillation_are_refused(tmp_path: Path) -> None:
+    """A handful of oscillators among two thousand rows would give an interval of no width around nothing."""
+    tied = STUDY.replace("[[arms]]", '[[subjects.correlations]]\npair = ["Rm", "C4"]\nspearman = 0.6\n[[arms]]', 1)
+    results = run(tmp_path, text=tied.replace('rate = "180 mg/min"', 'rate = "15 mg/min"'))
+    rows = listed(results, arm="steady", outcome="oscillates", estimand="association")
+    assert rows and all(r["value"] is None for r in rows)
+    assert all("2,048 rows differ from the rest; at least 80 are needed" in r["refused"] for r in rows)
