@@ -37,7 +37,14 @@ def arm_facts(arm: Arm) -> dict[str, Any]:
         "steady_mg_per_min": steady,
         "disagrees": steady is not None and disagrees(steady),
         "clamped": arm.clamp is not None,
+        "forcing_period_min": None if np.isnan(forcing_period_min(arm)) else forcing_period_min(arm),
     }
+
+
+def forcing_period_min(arm: Arm) -> float:
+    """The period of the arm's first periodic input; NaN without one."""
+    periods = (getattr(shape, "period_min", None) for shape in (*arm.glucose, *arm.insulin))
+    return next((float(p) for p in periods if isinstance(p, float)), np.nan)
 
 
 def sampling_facts(study: Study) -> dict[str, Any] | None:

@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import cache_folder
+from cohort.execute.facts import forcing_period_min
 from cohort.measure.outcomes import outcomes
 from cohort.model.protocol import Arm, Meal
 from cohort.observe.design import make_design
@@ -106,12 +107,6 @@ def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int) -> d
             true, schedule, plan.readings, plan.rule, study.seed, arm.name, (start, stop), forcing, null_folder()
         )
     return found
-
-
-def forcing_period_min(arm: Arm) -> float:
-    """The period of the arm's first periodic input; NaN without one."""
-    periods = (getattr(shape, "period_min", None) for shape in (*arm.glucose, *arm.insulin))
-    return next((float(p) for p in periods if isinstance(p, float)), np.nan)
 
 
 def null_folder() -> Path | None:

@@ -18,7 +18,7 @@ from cohort.infer.rows import Row, Step
 from cohort.infer.stored import Reader, read_numbers, read_words
 from cohort.infer.strata import only_of_cycles
 from cohort.infer.variance import Indices, estimates, indices
-from cohort.infer.verdicts import effect_floor, variance_floor, verdict, verdict_of_effect
+from cohort.infer.verdicts import effect_floor, engine_error, variance_floor, verdict, verdict_of_effect
 
 Array = NDArray[np.float64]
 
@@ -75,8 +75,8 @@ def read_outcome(reader: Reader, stratum: RankedStratum, name: str, unresolved: 
     count = runs if design.method == "morris" else 2 * runs // len(design.blocks)
     typical = total / count
     variance = max(squares / count - typical * typical, 0.0)
-    if variance <= (1e-12 * abs(typical)) ** 2:
-        return Outcome(f"the same in all {runs:,} runs ({typical:.6g})", runs=runs)
+    if variance <= engine_error(name, typical) ** 2:
+        return Outcome(f"the same in all {runs:,} runs as far as they are accurate ({typical:.6g})", runs=runs)
     if design.method == "morris":
         rows = design_rows(design, 0, 0, runs).u.reshape(design.replicates, len(design.blocks), -1)
         return Outcome("", (), elementary_effects(design, rows, np.array(moved)), typical, variance, runs)

@@ -18,6 +18,11 @@ RELATIVE_ERROR = 1e-6
 AMPLITUDE_ERROR = 1e-5
 
 
+SIZES = (("_mg_dl_min", 1e4), ("_mg_dl", 100.0), ("_mu_l", 10.0), ("_mg_per_min", 100.0), ("_mu_per_min", 100.0),
+         ("_mg_per_kg_min", 1.0), ("_min", 1.0))  # fmt: skip
+"""What errors are relative to where an outcome is itself small, a difference say: the size of its kind, by its unit."""
+
+
 def engine_error(outcome: str, typical: float) -> float:
     """The promised accuracy of an outcome as an absolute error; typical: its usual size. Words have none; of periods the
     logarithm is analysed."""
@@ -29,7 +34,8 @@ def engine_error(outcome: str, typical: float) -> float:
         return RELATIVE_ERROR
     if "amplitude" in outcome:
         return max(AMPLITUDE_ERROR * abs(typical), 1e-6)
-    return RELATIVE_ERROR * max(abs(typical), 1e-12)
+    usual = next((size for ending, size in SIZES if outcome.endswith(ending)), 1.0)
+    return RELATIVE_ERROR * max(abs(typical), usual)
 
 
 def variance_floor(outcome: str, typical: float, variance: float) -> float:

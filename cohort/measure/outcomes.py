@@ -107,7 +107,7 @@ def _read(read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, t
     window_rows(*_arrays(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)
     read.window[rows] = some
     if len(read.sample_min):
-        read.sampled[rows] = course.sample(read.sample_min)
+        read.sampled[rows] = course.sample(read.sample_min)[:, : len(SEEN)]  # clamps have a column more
         read.sampled[rows[course.status != DONE]] = np.nan
     if len(times):
         eating = np.full((len(rows), *read.meals.shape[1:]), np.nan)

@@ -61,8 +61,13 @@ def detection_lines(schedule: str, stratum: str, seen: dict[str, Any]) -> list[s
     head = f"{who}sampled {schedule}: {_percent(found['share'])} detected ({_percent(found['low'])} to "
     head += f"{_percent(found['high'])})"
     if DETECTED_TRUE in seen:
-        head += f"; of {found['of']:,}: {seen[DETECTED_TRUE]['n']:,} truly oscillate, {seen[DETECTED_FALSE]['n']:,} do not; "
-        head += f"{seen[DETECTED_AT_PERIOD]['n']:,} at their true period (within 10 %)"
+        head += (
+            f"; of {found['of']:,}: {seen[DETECTED_TRUE]['n']:,} truly oscillate, {seen[DETECTED_FALSE]['n']:,} do not"
+        )
+        if DETECTED_AT_PERIOD in seen:
+            head += f"; {seen[DETECTED_AT_PERIOD]['n']:,} at their true period (within 10 %)"
+        else:
+            head += "; the input is periodic itself, so a rhythm there may be its echo"
     return wrapped(head, "  ")
 
 

@@ -60,7 +60,10 @@ def count_all(results: Results, who: Chosen | None) -> list[Count]:
             found += _grouped(results, arm, None, regime_tally(results, arm, who), _regime_shares)
         for schedule in results.schedules:
             tally = detection_tally(results, arm, schedule, who)
-            found += _grouped(results, arm, schedule, tally, _detection_shares if steady else _detected_only)
+            shares = _detection_shares if steady else _detected_only
+            if steady and results.record["arm_facts"][arm].get("forcing_period_min"):
+                shares = _split_shares  # its own period is that of the body without the forcing
+            found += _grouped(results, arm, schedule, tally, shares)
     return found
 
 
@@ -199,11 +202,15 @@ def _detected_only(group: _Group) -> Iterator[tuple[str, Share]]:
 
 
 def _detection_shares(group: _Group) -> Iterator[tuple[str, Share]]:
+    yield from _split_shares(group)
+    yield DETECTED_AT_PERIOD, group.share(_cells(YES, (YES,), (1,)), _cells(UNKNOWN, (YES, UNKNOWN)))
+
+
+def _split_shares(group: _Group) -> Iterator[tuple[str, Share]]:
     yield from _detected_only(group)
     for name, truly in ((DETECTED_TRUE, YES), (DETECTED_FALSE, NO)):
         open_ = (*_cells(YES, (UNKNOWN,)), *_cells(UNKNOWN, (truly, UNKNOWN)))
         yield name, group.share(_cells(YES, (truly,)), open_)
-    yield DETECTED_AT_PERIOD, group.share(_cells(YES, (YES,), (1,)), _cells(UNKNOWN, (YES, UNKNOWN)))
 
 
 def write_incidence(results: Results, counts: list[Count]) -> None:

@@ -118,7 +118,7 @@ def _rows(results: Results, count: Count, asked: dict[str, Any]) -> Iterator[Row
                "at_least_wanted": chance}  # fmt: skip
     if want and count.regime != DETECTED_FALSE:
         n_needed = to_recruit(known.belief, want, asked["assurance"], evaluable)
-        why = None if n_needed is not None else f"more than 100,000 for {want} with probability {asked['assurance']:g}"
+        why = None if n_needed is not None else "more than 100,000 recruits"
         yield {**base, "to_recruit": n_needed, "refused": why}
 
 

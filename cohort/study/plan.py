@@ -192,7 +192,7 @@ def _sampling_lines(sampling: Sampling) -> list[str]:
         f"  {len(sampling.schedules)} sampling schedule{'s' * many}; glucose assay error {100 * glucose.cv:g} %, own",
         f"  irregularity {100 * glucose.background_sd:g} % over {glucose.background_time_min:g} min; detected in "
         f"{rule.detect_in}, false alarms {100 * rule.false_alarm:g} %",
-        "  (the first run with a schedule simulates noise for it: 5 to 30 s more)",
+        "  (the first run with a schedule simulates noise for it: 5 to 60 s more)",
     ]
 
 

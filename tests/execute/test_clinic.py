@@ -352,3 +352,22 @@ def test_the_demo_series_is_what_the_tool_makes_of_the_invented_cohort() -> None
     from demo_series import table
 
     assert table() == (root / "studies" / "halden-series.csv").read_text()
+
+
+def test_clamped_and_forced_arms_are_sampled_too_and_an_echo_is_called_one(tmp_path: Path) -> None:
+    text = STUDY.replace("[sampling]", """[[arms]]
+name = "held"
+duration = "8 h"
+clamp = { glucose = "110 mg/dL", from = "1 h" }
+[[arms]]
+name = "on-off"
+duration = "8 h"
+glucose = [ { shape = "on-off", rate = "300 mg/min", period = "2 h" } ]
+[sampling]""", 1)  # fmt: skip
+    results = run(tmp_path, "subjects.count=64", text=text)
+    held = results.observations("held", "every 20 min").to_pandas()
+    assert len(held) == 128 and held.p_value.notna().all()
+    assert not incidence(results, arm="on-off", schedule="every 20 min", regime="detected at the true period")
+    assert results.observations("on-off", "every 20 min").to_pandas().power_at_forcing.notna().all()
+    words = closing_words(json.loads((results.folder / "summary.json").read_text()))
+    assert "a rhythm there may" in words
