@@ -29,7 +29,7 @@ DASHES = ("-", "--", "-.", ":")
 @dataclass(frozen=True)
 class Figure:
     """A figure of the page. name: its file's name; title; alt: what it shows, for those who do not see it; svg; columns
-    and rows: the numbers behind it; n: how many it rests on, in words; arm: whose it is, or "" for all."""
+    and rows: the numbers behind it; n: how many it rests on, in words; arm, outcome, stratum: whose it is, "" for all."""
 
     name: str
     title: str
@@ -39,6 +39,8 @@ class Figure:
     rows: tuple[tuple[Any, ...], ...]
     n: str
     arm: str = ""
+    outcome: str = ""
+    stratum: str = ""
 
 
 @contextmanager

@@ -170,7 +170,7 @@ def _ranked(summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:
             intervals([str(f["name"]) for f in factors], value, low, high, f"{entry['index']}: {ESTIMANDS[entry['estimand']]}"),
             ("parameter", "index", "value", "low", "high", "verdict"),
             tuple((f["name"], entry["index"], f["value"], f["low"], f["high"], f["verdict"]) for f in factors),
-            f"n {entry['n']:,} runs{_verdicts(entry['factors'])}", entry["arm"],
+            f"n {entry['n']:,} runs{_verdicts(entry['factors'])}", entry["arm"], entry["outcome"], entry["stratum"],
         )  # fmt: skip
 
 

@@ -1,15 +1,17 @@
 (function () {
   "use strict";
   document.documentElement.classList.add("js");
-  var pick = document.getElementById("arm");
-  if (pick) {
-    var show = function () {
-      document.querySelectorAll("[data-arm]").forEach(function (part) {
-        part.hidden = pick.value !== "" && part.dataset.arm !== "" && part.dataset.arm !== pick.value;
+  var picks = ["arm", "outcome", "stratum"].map(function (key) { return document.getElementById(key); });
+  picks = picks.filter(function (pick) { return pick !== null; });
+  var show = function () {
+    document.querySelectorAll("[data-arm]").forEach(function (part) {
+      part.hidden = picks.some(function (pick) {
+        var own = part.dataset[pick.id];
+        return pick.value !== "" && own !== "" && own !== pick.value;
       });
-    };
-    pick.addEventListener("change", show);
-  }
+    });
+  };
+  picks.forEach(function (pick) { pick.addEventListener("change", show); });
   // hovering over a subject of a plane reads its row in the table below the figure
   var told = document.createElement("div");
   told.id = "told";

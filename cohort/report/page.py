@@ -83,11 +83,7 @@ def _page(results: Results, summary: dict[str, Any], drawn: Sequence[tuple[str, 
                 f'<section aria-labelledby="{name}"><h2 id="{name}">{escape(title)}</h2>{figures}{bodies[name]}</section>'
             )
     here = files("cohort.report")
-    arms = "".join(f'<option value="{escape(a)}">{escape(a)}</option>' for a in results.arms)
-    choose = (
-        '<p class="choose small"><label for="arm">Show figures of</label> <select id="arm"><option value="">every arm'
-    )
-    choose += f"</option>{arms}</select></p>"
+    choose = _choices(results, [f for _, f in drawn])
     unfinished = ""
     if summary["shards"] < summary["shards_planned"]:
         unfinished = _note(
@@ -101,11 +97,27 @@ def _page(results: Results, summary: dict[str, Any], drawn: Sequence[tuple[str, 
 <main id="content">{unfinished}
 <p class="answer">{escape(answer(summary))}</p>
 <p class="small">{escape(summary["caution"])}</p>
-<nav aria-label="Contents"><ul>{"".join(links)}</ul></nav>{choose if len(results.arms) > 1 else ""}
+<nav aria-label="Contents"><ul>{"".join(links)}</ul></nav>{choose}
 {"".join(parts)}</main>
 <footer><p class="small">{escape(_made(results))}</p></footer>
 <script>{(here / "page.js").read_text()}</script></body></html>
 """
+
+
+def _choices(results: Results, figures: Sequence[Figure]) -> str:
+    """What of the page is shown, where there is a choice: by arm, ranked outcome and stratum."""
+    found = []
+    for key, names in (
+        ("arm", list(results.arms)),
+        ("outcome", list(dict.fromkeys(f.outcome for f in figures if f.outcome))),
+        ("stratum", list(dict.fromkeys(f.stratum for f in figures if f.stratum))),
+    ):
+        if len(names) > 1:
+            options = "".join(f'<option value="{escape(name)}">{escape(name)}</option>' for name in names)
+            found.append(
+                f'<label for="{key}">{key}</label> <select id="{key}"><option value="">every {key}</option>{options}</select>'
+            )
+    return f'<p class="choose small">Show {" ".join(found)}</p>' if found else ""
 
 
 # ---- figures -----------------------------------------------------------------------------------------------------
@@ -140,7 +152,8 @@ def _figure(figure: Figure) -> str:
     first = figure.alt.split(". ")[0].split(": ")[0]
     caption = escape(f"{first[0].upper()}{first[1:]}. {figure.n[0].upper()}{figure.n[1:]}.")
     return (
-        f'<figure data-arm="{escape(figure.arm)}"{plane}><h3>{escape(figure.title)}</h3>{_scrolled(svg, figure.title)}'
+        f'<figure data-arm="{escape(figure.arm)}" data-outcome="{escape(figure.outcome)}" '
+        f'data-stratum="{escape(figure.stratum)}"{plane}><h3>{escape(figure.title)}</h3>{_scrolled(svg, figure.title)}'
         f"<figcaption>{caption} Files: figures/{name}.svg and .csv.</figcaption>"
         f'<details><summary>The numbers behind {escape(figure.title)}</summary>{more}<div class="wide" tabindex="0" '
         f'role="region" aria-label="Numbers behind {escape(figure.title)}">{table}</div></details></figure>'
@@ -170,7 +183,7 @@ def _cell(value: Any) -> str:
 
 def _scrolled(inner: str, label: str, arm: str = "") -> str:
     """A wide table that scrolls by itself, by keyboard too."""
-    of_arm = f' data-arm="{escape(arm)}"' if arm else ""
+    of_arm = f' data-arm="{escape(arm)}" data-outcome="" data-stratum=""' if arm else ""
     return f'<div class="wide"{of_arm} tabindex="0" role="region" aria-label="{escape(label)}">{inner}</div>'
 
 
