@@ -67,24 +67,38 @@ def _column(results: Results, arm: str, name: str) -> Array:
     return np.concatenate([numbers(p, name) for p in parts])
 
 
+def _weights(results: Results) -> Array | None:
+    """The weight of everyone in counts, 0 for who is not eligible; None where all count alike."""
+    path = results.folder / "weights.parquet"
+    asked = results.record.get("selection") or {}
+    if not (asked.get("eligible") or asked.get("match") or results.record.get("persons")) or not path.exists():
+        return None
+    return numbers(read_table(path), "weight")
+
+
 def _cycles(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:
     arms = [arm for arm, facts in summary["arms"].items() if "period_min" in facts["quantiles"]]
+    counted = _weights(results)
     for name, title, axis in (
         ("period_min", "Period of those who oscillate", "period, min"),
         ("glucose_amplitude_mg_dl", "Glucose swing of those who oscillate", "peak to trough, mg/dL"),
     ):
-        values = {arm: _column(results, arm, name) for arm in arms}
-        if name.startswith("glucose"):
-            values = {arm: v[v > 0.0] for arm, v in values.items()}
-        values = {arm: v[np.isfinite(v)] for arm, v in values.items() if np.isfinite(v).sum() > 1}
+        values: dict[str, Array] = {}
+        weights: dict[str, Array] = {}
+        for arm in arms:
+            column = _column(results, arm, name)
+            weight = np.ones(len(column)) if counted is None else counted
+            keep = np.isfinite(column) & (weight > 0.0) & ((column > 0.0) | (name == "period_min"))
+            if keep.sum() > 1:
+                values[arm], weights[arm] = column[keep], weight[keep]
         if not values:
             continue
         together = np.concatenate(list(values.values()))
         low, high = np.quantile(together, [0.002, 0.998])
         bins = int(np.clip(np.sqrt(min(len(v) for v in values.values())), 8, MOST_BINS))
         edges = np.linspace(low, high if high > low else low + 1.0, bins + 1)
-        shares = np.array([np.histogram(v, edges)[0] / len(v) for v in values.values()])
-        alt = "; ".join(f"{arm}: median {np.median(v):.0f}" for arm, v in values.items())
+        shares = np.array([np.histogram(v, edges, weights=weights[a])[0] / weights[a].sum() for a, v in values.items()])
+        alt = "; ".join(f"{arm}: median {summary['arms'][arm]['quantiles'][name]['q50']:.0f}" for arm in values)
         yield "cycles", Figure(
             name.split("_")[0] + "-distribution", title, f"{title}, by arm. {alt}",
             distributions(list(values), edges, shares, axis), ("arm", "from", "to", "share"),
@@ -193,16 +207,20 @@ def _plane(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Fig
         x_name, y_name, how = _deciding(summary, arm, varied)
         people = read_part(results.folder / "subjects", results.whole_shards[0], ["subject", x_name, y_name])
         regime = read_part(results.folder / "outcomes" / arm, results.whole_shards[0], ["regime"]).column("regime")
-        words = [str(w) for w in regime.to_pylist()[:IN_PLANE]]
-        x, y = (numbers(people, name)[:IN_PLANE] for name in (x_name, y_name))
+        weight = _weights(results)
+        there = np.arange(people.num_rows) if weight is None else np.flatnonzero(weight[: people.num_rows] > 0.0)
+        shown = there[:IN_PLANE]
+        every = regime.to_pylist()
+        words = [str(every[i]) for i in shown]
+        x, y = (numbers(people, name)[shown] for name in (x_name, y_name))
         counts = ", ".join(f"{words.count(r):,} {r}" for r in REGIMES if r in words)
         yield "decides", Figure(
             f"plane-{arm}", f"Where they oscillate: {arm}",
             f"The first {len(words):,} subjects by {x_name} and {y_name} ({how}), marked by regime: {counts}",
             plane(x, y, words, (f"{x_name}, {_unit(x_name)}", f"{y_name}, {_unit(y_name)}")),
             ("subject", x_name, y_name, "regime"),
-            tuple((i, float(a), float(b), w) for i, (a, b, w) in enumerate(zip(x, y, words, strict=True))),
-            f"n {len(words):,}, the first subjects", arm,
+            tuple((int(i), float(a), float(b), w) for i, a, b, w in zip(shown, x, y, words, strict=True)),
+            f"n {len(words):,}, the first who count", arm,
         )  # fmt: skip
 
 
