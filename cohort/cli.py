@@ -16,7 +16,7 @@ if TYPE_CHECKING:
     from cohort.observe.detector import Rule
     from cohort.observe.series import Found
     from cohort.observe.table import Series
-    from cohort.study import Study
+    from cohort.study import Plan, Study
 
 INTERRUPTED = 130
 ASSAY_CV = {"glucose": 0.02, "insulin": 0.06}
@@ -52,24 +52,36 @@ def check(words: argparse.Namespace) -> int:
     """Print the plan, or every problem."""
     from cohort.study import describe, load_study, plan
 
-    study = load_study(words.study, words.set)
-    print(describe(study, plan(study, words.workers)))
+    study = load_study(words.study, words.set, words.allow_outside)
+    found = plan(study, words.workers)
+    print(describe(study, found))
     _warn(study.warnings)
+    _fits(study, found, Path("results"))
     if study.later:
         print("note: checked, but `cohort run` refuses these until they are available:", file=sys.stderr)
     _warn(study.later)
     return 0
 
 
+def _fits(study: Study, found: Plan, out: Path) -> None:
+    """Raise StudyError where the plan needs more memory or disk than this machine has."""
+    from cohort.execute.limits import lacking
+
+    problems = lacking(found, out)
+    if problems:
+        raise StudyError([Problem("", text, str(study.path)) for text in problems])
+
+
 def run(words: argparse.Namespace) -> int:
     """Run a study and print what came out."""
     from cohort.execute.run import run_study
     from cohort.report.summary import closing_words, rebuild
-    from cohort.study import load_study
+    from cohort.study import load_study, plan
 
-    study = load_study(words.study, words.set)
+    study = load_study(words.study, words.set, words.allow_outside)
     _warn(study.warnings)
     folder = Path(words.out) if words.out else Path("results") / study.path.stem
+    _fits(study, plan(study, words.workers), folder)
     done = run_study(study, folder, words.workers, log=Path(words.log) if words.log else None, scheduler=words.scheduler,
                      mixed=words.mixed_machines, only=words.shards)  # fmt: skip
     if words.shards:
@@ -117,7 +129,7 @@ def certify(words: argparse.Namespace) -> int:
     from cohort.execute.certify import certify_study
     from cohort.study import load_study
 
-    found = certify_study(load_study(words.study, words.set), words.n)
+    found = certify_study(load_study(words.study, words.set, words.allow_outside), words.n)
     print(found.words())
     return 0 if found.kept else 3
 
@@ -129,7 +141,7 @@ def detect(words: argparse.Namespace) -> int:
     from cohort.observe.table import read_series
     from cohort.study import load_study
 
-    study = load_study(words.study, words.set) if words.study else None
+    study = load_study(words.study, words.set, words.allow_outside) if words.study else None
     rule, assay = _rule(words, study)
     units = {k: v for k, v in (("time", words.time), ("glucose", words.glucose), ("insulin", words.insulin)) if v}
     series = read_series(Path(words.series), units)
@@ -217,6 +229,7 @@ def _parser() -> argparse.ArgumentParser:
         made.add_argument("study", metavar="STUDY", help="a study file, such as studies/steady-infusion.toml")
         made.add_argument("--set", action="append", default=[], metavar="KEY=VALUE",
                           help="override a value: subjects.count=500, arms.fasting.duration='12 h'")  # fmt: skip
+        made.add_argument("--allow-outside", action="store_true", help="data files may lie outside the study's folder")
 
     checking = command("check", check, "say what a study would do, or every problem in it")
     with_study(checking)

@@ -19,7 +19,7 @@ from typing import Any
 
 from cohort.errors import RunError
 from cohort.execute.progress import Progress
-from cohort.execute.tasks import Job
+from cohort.execute.tasks import Job, Narrower
 
 IN_FLIGHT_PER_THREAD = 2
 """Tasks handed out for each thread of a worker: enough to keep it busy, few enough to lose little with it."""
@@ -103,16 +103,17 @@ def _agree(found: dict[str, dict[str, str]], mixed: bool) -> None:
 
 def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> None:
     """Do all jobs there, a window of them at a time. What a job raises ends the run; what is under way is cancelled."""
-    from distributed import as_completed
+    from distributed import KilledWorker, as_completed
 
     left = iter(jobs)
     names: dict[str, int] = {}
+    sent: dict[str, Job] = {}
     waiting = as_completed([], loop=cluster.client.loop)
 
     def send(number: int) -> None:
         for job in _taken(left, number):
             key = f"cohort-{hashlib.blake2b(f'{cluster.scope} {job.name}'.encode(), digest_size=12).hexdigest()}"
-            names[key] = sum(piece.runs for piece in job.pieces)
+            names[key], sent[key] = sum(piece.runs for piece in job.pieces), job
             waiting.add(cluster.client.submit(do_job, job, key=key, pure=False, retries=2))
 
     futures: list[Any] = []
@@ -120,7 +121,11 @@ def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> 
         send(IN_FLIGHT_PER_THREAD * max(cluster.threads, 1))
         for future in waiting:
             futures.append(future)
-            future.result()
+            try:
+                future.result()
+            except KilledWorker:
+                _narrowed(cluster, sent.pop(future.key))
+            sent.pop(future.key, None)
             if progress:
                 progress.add(names.pop(future.key))
             futures.remove(future)
@@ -133,6 +138,30 @@ def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> 
 
 def _taken(jobs: Iterator[Job], number: int) -> Sequence[Job]:
     return list(islice(jobs, number))
+
+
+def _narrowed(cluster: Cluster, job: Job) -> None:
+    """A job with which workers died again and again: its sub-batches one by one, halved down to the subjects that kill,
+    who become failed rows. Raises RunError for a job that cannot be narrowed."""
+    if any(piece.narrower is None for piece in job.pieces):
+        raise RunError(f"{job.name}: workers die with it again and again; look at their logs for why (memory, often)")
+    job.write([_survivors(cluster, piece.narrower, piece.narrower.start, piece.narrower.stop)
+               for piece in job.pieces if piece.narrower is not None])  # fmt: skip
+
+
+def _survivors(cluster: Cluster, narrower: Narrower, start: int, stop: int) -> Any:
+    from distributed import KilledWorker
+
+    from cohort.execute.stages import joined_tables
+
+    future = cluster.client.submit(narrower.make, start, stop, pure=False)
+    try:
+        return future.result()
+    except KilledWorker:
+        if stop - start == 1:
+            return narrower.lost(start)
+    middle = (start + stop) // 2
+    return joined_tables([_survivors(cluster, narrower, start, middle), _survivors(cluster, narrower, middle, stop)])
 
 
 def do_job(job: Job) -> int:

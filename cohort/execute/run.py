@@ -17,16 +17,17 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any
 
-from cohort.errors import Problem, RunError, StudyError
+from cohort.errors import CohortError, Problem, RunError, StudyError
 from cohort.execute.courses import keep_courses
 from cohort.execute.facts import arm_facts, fasting_facts, sampling_facts
 from cohort.execute.identity import arm_identity, first_difference, subjects_identity
+from cohort.execute.limits import watch_disk
 from cohort.execute.population import run_population
 from cohort.execute.progress import Progress
 from cohort.execute.ranking import run_ranking, slots_of, strays_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
-from cohort.execute.stages import rows, warm
-from cohort.execute.tasks import Hands, Job, Piece
+from cohort.execute.stages import lost_rows, rows, warm
+from cohort.execute.tasks import Hands, Job, Narrower, Piece
 from cohort.infer.facts import as_plain
 from cohort.infer.salib import load as load_salib
 from cohort.study import Study, plan
@@ -108,14 +109,14 @@ def _run_share(
             progress.begin(todo, 0)
         if not (out / "run.json").exists():
             _write_record(out, _record(study, workers, shard_size, {}), "running")
-        Hands(workers).do((_job(study, out, work) for work in left), progress)
+        Hands(workers, guard=partial(watch_disk, out)).do((_job(study, out, work) for work in left), progress)
     return Finished(out, todo, 0, time.monotonic() - began)
 
 
 @contextlib.contextmanager
 def _hands(workers: int, scheduler: str | None, out: Path, mixed: bool) -> Iterator[Hands]:
     if scheduler is None:
-        yield Hands(workers)
+        yield Hands(workers, guard=partial(watch_disk, out))
         return
     from cohort.execute.cluster import reached
 
@@ -172,7 +173,7 @@ def _recorded(out: Path, record: Mapping[str, Any]) -> Iterator[None]:
     except Exception as error:
         with contextlib.suppress(OSError):
             _write_record(out, record, "stopped")
-        if isinstance(error, StudyError):
+        if isinstance(error, CohortError):
             raise
         why = _why(error) if isinstance(error, OSError) else f"{type(error).__name__}: {error}"
         raise RunError(f"{out}: {why}; what was finished is kept, run again to carry on") from error
@@ -194,11 +195,20 @@ def _simulate(study: Study, out: Path, hands: Hands, shard_size: int, progress: 
 
 
 def _job(study: Study, out: Path, work: Work) -> Job:
+    arms = work.arms
     pieces = tuple(
-        Piece((end - start) * len(work.arms), partial(rows, study, start, end, work.arms))
+        Piece(
+            (end - start) * len(arms),
+            partial(rows, study, start, end, arms),
+            Narrower(start, end, partial(_range_rows, study, arms), partial(lost_rows, study, arms)),
+        )
         for start, end in work.shard.sub_batches()
     )
     return Job(f"shard {work.shard.number}", pieces, partial(commit, study, out, work))
+
+
+def _range_rows(study: Study, arms: tuple[str, ...], start: int, stop: int) -> dict[str, Any]:
+    return rows(study, start, stop, arms)
 
 
 def _compile(study: Study) -> None:

@@ -19,12 +19,17 @@ from cohort.observe.detector import observations
 from cohort.observe.null import null_table, tables_needed
 from cohort.observe.sampling import Schedule
 from cohort.population import draw
-from cohort.quantities import ANALYTES
+from cohort.population.recipe import Subjects
+from cohort.quantities import ANALYTES, FAILURES, REGIMES
 from cohort.study import Study
 from cohort.tables import MEALS, OBSERVATIONS, Schema, outcomes_schema, subjects_schema
 
 Array = NDArray[np.float64]
 Values = dict[str, Any]
+
+
+KEPT_OF_THE_LOST = ("subject", "meal", "meal_time_min", "analyte", "forced", "cycle_note")
+"""Columns that say who and what is meant, not what came out."""
 
 
 @dataclass(frozen=True)
@@ -61,7 +66,29 @@ def has_meals(arm: Arm) -> bool:
 def rows(study: Study, start: int, stop: int, arms: Sequence[str]) -> dict[str, Values]:
     """Rows of subjects start..stop-1, by table folder: subjects/ and the tables of the named arms."""
     people = draw(study.recipe, start, stop)
-    recipe = study.recipe
+    return _rows(study, people, people.values, arms)
+
+
+def lost_rows(study: Study, arms: Sequence[str], subject: int) -> dict[str, Values]:
+    """Rows of a subject with whom every process died: who it is, and nothing else; regime failed, process died."""
+    recipe, people = study.recipe, draw(study.recipe, subject, subject + 1)
+    nobody = np.array([[recipe.nominal.get(name, np.nan) for name in recipe.names]])
+    found = _rows(study, people, nobody, arms)
+    for folder, values in found.items():
+        if folder == "subjects":
+            continue
+        for name, column in values.items():
+            if name not in KEPT_OF_THE_LOST:
+                values[name] = np.full(column.shape, np.nan if column.dtype.kind == "f" else -1, column.dtype)
+        if folder.startswith("outcomes/"):
+            values["regime"][:] = REGIMES.index("failed")
+            values["failure"][:] = FAILURES.index("process died")
+    return found
+
+
+def _rows(study: Study, people: Subjects, integrated: Array, arms: Sequence[str]) -> dict[str, Values]:
+    recipe, start = study.recipe, int(people.subject[0])
+    stop = start + len(people.subject)
     subject = {
         "subject": people.subject,
         "stratum": np.array(recipe.stratum_names, dtype=object)[people.stratum],
@@ -76,7 +103,7 @@ def rows(study: Study, start: int, stop: int, arms: Sequence[str]) -> dict[str, 
     for arm in study.arms:
         if arm.name not in arms:
             continue
-        measured = outcomes(study.model, people.values, people.body_weight_kg, arm, sample_times(study, arm))
+        measured = outcomes(study.model, integrated, people.body_weight_kg, arm, sample_times(study, arm))
         found |= observed(study, arm, measured.sampled, start, stop)
         found[f"outcomes/{arm.name}"] = {"subject": people.subject, **measured.outcomes}
         if has_meals(arm):
@@ -122,6 +149,11 @@ def warm(study: Study) -> None:
         design = make_design(np.array(schedule.times_min), study.sampling.rule.band_min)
         for missing in tables_needed(design, schedule.missed):
             null_table(design, missing, null_folder())
+
+
+def joined_tables(pieces: Sequence[dict[str, Values]]) -> dict[str, Values]:
+    """The rows of every table of several ranges as one, in their order."""
+    return {folder: joined([piece[folder] for piece in pieces]) for folder in pieces[0]}
 
 
 def joined(pieces: Sequence[Values]) -> Values:

@@ -14,11 +14,23 @@ WINDOW_SUB_BATCHES = 64
 
 
 @dataclass(frozen=True)
+class Narrower:
+    """How a sub-batch of subjects start..stop-1 is made in smaller ranges, and what stands for a subject with whom no
+    process survives."""
+
+    start: int
+    stop: int
+    make: Callable[[int, int], Any]
+    lost: Callable[[int], Any]
+
+
+@dataclass(frozen=True)
 class Piece:
-    """One sub-batch: how many runs it makes, and what makes them."""
+    """One sub-batch: how many runs it makes, what makes them, and how it is narrowed to a subject that kills."""
 
     runs: int
     make: Callable[[], Any]
+    narrower: Narrower | None = None
 
 
 @dataclass(frozen=True)
@@ -32,10 +44,12 @@ class Job:
 
 @dataclass(frozen=True)
 class Hands:
-    """Who does the work: so many threads of this process, or a cluster that was reached."""
+    """Who does the work: so many threads of this process, or a cluster that was reached. guard is called before each part is
+    written, and raises where none should be."""
 
     workers: int
     cluster: Any = None
+    guard: Callable[[], None] | None = None
 
     def do(self, jobs: Iterable[Job], progress: Progress | None) -> None:
         """Do all jobs, a window of them at a time. What a job raises ends the run; no thread writes after it."""
@@ -45,7 +59,7 @@ class Hands:
             run_on(self.cluster, jobs, progress)
             return
         for window in _windows(jobs):
-            _run_window(window, self.workers, progress)
+            _run_window(window, self.workers, progress, self.guard)
 
 
 def _windows(jobs: Iterable[Job]) -> Iterator[list[Job]]:
@@ -61,7 +75,9 @@ def _windows(jobs: Iterable[Job]) -> Iterator[list[Job]]:
         yield window
 
 
-def _run_window(window: Sequence[Job], workers: int, progress: Progress | None) -> None:
+def _run_window(
+    window: Sequence[Job], workers: int, progress: Progress | None, guard: Callable[[], None] | None
+) -> None:
     """One graph: a task a sub-batch, and for each job one that writes its part when the last is home."""
     from concurrent.futures import ThreadPoolExecutor
 
@@ -80,6 +96,8 @@ def _run_window(window: Sequence[Job], workers: int, progress: Progress | None) 
     def write(job: Job, *pieces: Any) -> Any:
         if stop.is_set():
             raise KeyboardInterrupt
+        if guard is not None:
+            guard()
         return job.write(pieces)
 
     graph: dict[Any, Any] = {}

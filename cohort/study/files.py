@@ -28,9 +28,10 @@ class FileError(ValueError):
 
 @dataclass
 class Files:
-    """The data files of one study, read from below its folder."""
+    """The data files of one study, read from below its folder; from anywhere with `outside`."""
 
     folder: Path
+    outside: bool = False
     digests: dict[str, str] = field(default_factory=dict)
 
     def read(self, name: str) -> dict[str, list[object]]:
@@ -38,8 +39,9 @@ class Files:
         path = self.folder / name
         try:
             inside = path.resolve().is_relative_to(self.folder.resolve())
-            if not inside:
-                raise FileError(f"{name!r} lies outside the study's folder; data files must lie below it")
+            if not inside and not self.outside:
+                raise FileError(f"{name!r} lies outside the study's folder; data files must lie below it (--allow-outside "
+                                "accepts others)")  # fmt: skip
             if path.stat().st_size > LARGEST_FILE:
                 raise FileError(f"{name!r} is larger than {LARGEST_FILE:,} bytes")
             data = path.read_bytes()

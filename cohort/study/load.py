@@ -27,8 +27,9 @@ _NAMED_LISTS = ("arms", "strata", "schedules")
 MOST_COURSE_POINTS = 2_000_000_000
 
 
-def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Study:
-    """Read and check a study file; `overrides` are KEY=VALUE words. Raises StudyError with every problem found."""
+def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = (), outside: bool = False) -> Study:
+    """Read and check a study file; `overrides` are KEY=VALUE words, and with `outside` its data files may lie anywhere.
+    Raises StudyError with every problem found."""
     place = Path(path)
     try:
         data = place.read_bytes()
@@ -40,17 +41,17 @@ def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> S
         ) from None
     except ValueError as error:
         raise StudyError([Problem("", f"cannot be read: {error}", str(path))]) from None
-    return study_from(data, place, overrides)
+    return study_from(data, place, overrides, outside)
 
 
-def study_from(data: bytes, place: Path, overrides: Sequence[str] = ()) -> Study:
+def study_from(data: bytes, place: Path, overrides: Sequence[str] = (), outside: bool = False) -> Study:
     """As `load_study`, from the file's bytes."""
     raw, text = read_toml(data, str(place))
     raw, overridden = _override(raw, overrides)
     tree = check(raw, text, str(place), overridden)
     model, seed = _model_and_seed(tree)
     card = MODELS[model]
-    files = Files(place.parent)
+    files = Files(place.parent, outside)
     recipe = subjects_of.recipe(tree, card, seed, files)
     weighed = any(s.weight is not None for s in recipe.strata)
     if recipe.table is not None:

@@ -7,14 +7,19 @@ import subprocess
 import sys
 import time
 from collections.abc import Iterator
+from functools import partial
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from cohort.cli import main
 from cohort.errors import RunError
 from cohort.execute import cluster as clusters
 from cohort.execute.run import run_study
+from cohort.execute.stages import lost_rows, rows
+from cohort.execute.tasks import Job, Narrower, Piece
+from cohort.quantities import FAILURES, REGIMES
 from cohort.report.summary import rebuild
 from cohort.study import load_study
 
@@ -68,7 +73,11 @@ def address(tmp_path_factory: pytest.TempPathFactory) -> Iterator[str]:
         free.bind(("127.0.0.1", 0))
         port = free.getsockname()[1]
     where = f"tcp://127.0.0.1:{port}"
-    environment = {**os.environ, "PYTHONPATH": os.pathsep.join([str(Path(clusters.__file__).parents[2]), *sys.path])}
+    environment = {
+        **os.environ,
+        "DASK_DISTRIBUTED__SCHEDULER__ALLOWED_FAILURES": "0",
+        "PYTHONPATH": os.pathsep.join([str(Path(clusters.__file__).parents[2]), *sys.path]),
+    }
     quiet = {"stdout": subprocess.DEVNULL, "stderr": subprocess.DEVNULL, "env": environment, "cwd": folder}
     scheduler = subprocess.Popen([*DASK[0], "--host", "127.0.0.1", "--port", str(port), "--no-dashboard"], **quiet)  # type: ignore[call-overload]
     workers = [
@@ -164,3 +173,38 @@ def test_a_share_is_asked_for_as_k_of_n(tmp_path: Path, capsys: pytest.CaptureFi
     assert caught.value.code == 2 and "is not K/N" in capsys.readouterr().err
     assert main(["run", str(tmp_path / "s.toml"), "--out", str(tmp_path / "out"), "--shards", "1/1"]) == 0
     assert "When every share is done, run without --shards" in capsys.readouterr().out
+
+
+def killing_rows(start: int, stop: int) -> dict[str, dict[str, np.ndarray]]:
+    """Rows of subjects, unless it is number 11, who takes the process along."""
+    if start <= 11 < stop:
+        os.kill(os.getpid(), signal.SIGKILL)
+    return {"subjects": {"subject": np.arange(start, stop)}}
+
+
+def lost_row(subject: int) -> dict[str, dict[str, np.ndarray]]:
+    return {"subjects": {"subject": np.array([-subject])}}
+
+
+def test_a_task_that_kills_its_workers_is_narrowed_to_the_subject(address: str, tmp_path: Path) -> None:
+    written = []
+    pieces = tuple(
+        Piece(8, partial(killing_rows, a, a + 8), Narrower(a, a + 8, killing_rows, lost_row)) for a in (0, 8)
+    )
+    with clusters.reached(address, tmp_path, mixed=False) as cluster:
+        clusters._narrowed(cluster, Job("deadly", pieces, written.extend))
+        with pytest.raises(RunError, match="workers die with it again and again"):
+            clusters.run_on(cluster, [Job("hopeless", (Piece(8, partial(killing_rows, 8, 16)),), len)], None)
+    whole = np.concatenate([piece["subjects"]["subject"] for piece in written])
+    assert whole.tolist() == [*range(11), -11, *range(12, 16)]
+
+
+def test_a_lost_subject_is_a_failed_row_that_says_why(tmp_path: Path) -> None:
+    made = study(tmp_path)
+    row = lost_rows(made, ["steady"], 5)
+    seen = rows(made, 5, 6, ["steady"])
+    assert row["subjects"]["td"] == seen["subjects"]["td"]
+    outcomes = row["outcomes/steady"]
+    assert set(outcomes) == set(seen["outcomes/steady"]) and np.isnan(outcomes["glucose_mean_mg_dl"]).all()
+    assert outcomes["regime"][0] == REGIMES.index("failed") and outcomes["failure"][0] == FAILURES.index("process died")
+    assert outcomes["oscillates"][0] == -1

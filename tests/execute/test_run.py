@@ -491,3 +491,39 @@ def test_a_sobol_cohort_counts_by_its_scrambles(tmp_path: Path) -> None:
     counted = summary["arms"]["steady"]["strata"]["everyone"]["oscillates"]
     assert counted["method"] == "t over 8 scrambles, 95 %"
     assert counted["low"] < counted["share"] < counted["high"]
+
+
+def test_what_cannot_fit_is_refused_with_the_numbers(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    path = tmp_path / "small.toml"
+    path.write_text(STUDY)
+    huge = ["--set", "subjects.count=1_000_000_000", "--set", "output.time_courses=0"]
+    assert main(["check", str(path), *huge]) == 2
+    said = capsys.readouterr().err
+    assert "of disk and" in said and "are free at" in said
+    assert main(["run", str(path), *huge, "--out", str(tmp_path / "out")]) == 2
+    assert not (tmp_path / "out").exists()
+
+
+def test_a_run_stops_before_the_disk_is_full_and_carries_on(
+    whole: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    from cohort.execute import limits
+
+    left = [10**9] * 2 + [10**6] * 10
+    with monkeypatch.context() as patch:
+        patch.setattr(limits, "free_bytes", lambda _: left.pop(0))
+        with pytest.raises(RunError, match="stopped before it is full"):
+            run_study(study(tmp_path), tmp_path / "out", workers=1, shard_size=SMALL, quiet=True)
+    assert 0 < len(part_bytes(tmp_path / "out")) < len(part_bytes(whole))
+    run_study(study(tmp_path), tmp_path / "out", workers=1, shard_size=SMALL, quiet=True)
+    assert part_bytes(tmp_path / "out") == part_bytes(whole)
+
+
+def test_data_files_lie_below_the_study_unless_allowed(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    (tmp_path / "people.csv").write_text("td\n30\n40\n")
+    (tmp_path / "inner").mkdir()
+    path = tmp_path / "inner" / "s.toml"
+    path.write_text('seed = 1\n[subjects]\ntable = "../people.csv"\n[[arms]]\nname = "a"\nduration = "1 h"\n')
+    assert main(["check", str(path)]) == 2
+    assert "--allow-outside" in capsys.readouterr().err
+    assert main(["check", str(path), "--allow-outside"]) == 0
