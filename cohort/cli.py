@@ -261,6 +261,9 @@ def _parser() -> argparse.ArgumentParser:
     looking.add_argument("--detect-in", choices=("glucose", "insulin", "either", "both"),
                          help="where a rhythm must show (default glucose, or the study's)")  # fmt: skip
     looking.add_argument(
+        "--allow-outside", action="store_true", help="the study's data files may lie outside its folder"
+    )
+    looking.add_argument(
         "--study", metavar="STUDY", help="correct the share by the detector's errors on its virtual people"
     )
     looking.add_argument("--arm", metavar="NAME", help="the study's arm that the people were in")
