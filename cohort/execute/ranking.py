@@ -291,9 +291,7 @@ class _Work:
         reader = Reader(Place(self.out, stratum.index, arm.slot), stratum.design)
         yes = reader.plain(["oscillates"])["oscillates"][: stratum.redrawn] == 1.0
         left = np.repeat(yes[None, :], len(stratum.design.factors), axis=0)
-        for done, (factor, position, found) in enumerate(reader.redraws(["oscillates"]), start=1):
-            if done >= attempt:
-                break
+        for factor, position, found in reader.redraws(["oscillates"], attempt):
             kept = found["oscillates"] == 1.0
             left[factor[kept], position[kept]] = False
         factor, position = np.nonzero(left)

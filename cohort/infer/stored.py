@@ -85,11 +85,11 @@ class Reader:
             raise ValueError(f"{path}: runs are not in order of position")
         return {name: _numbers(table, name) for name in names}
 
-    def redraws(self, names: Sequence[str]) -> Iterator[tuple[Ints, Ints, Columns]]:
-        """Attempt after attempt: (factor int64[n], position int64[n], outcomes by name)."""
+    def redraws(self, names: Sequence[str], before: int | None = None) -> Iterator[tuple[Ints, Ints, Columns]]:
+        """Attempt after attempt, all or those before one: (factor int64[n], position int64[n], outcomes by name)."""
         number = {factor.name: j for j, factor in enumerate(self.design.factors)}
         attempt = 1
-        while (path := self.place.part("redraw", 0, attempt)).exists():
+        while (before is None or attempt < before) and (path := self.place.part("redraw", 0, attempt)).exists():
             table = _read(path, ("block", "position", *names))
             factor = np.array([number[word] for word in table.column("block").to_pylist()], dtype=np.int64)
             yield factor, np.asarray(table.column("position")), {name: _numbers(table, name) for name in names}

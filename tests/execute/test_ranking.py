@@ -438,3 +438,17 @@ def test_given_data_indices_of_a_rare_oscillation_are_refused(tmp_path: Path) ->
     rows = listed(results, arm="steady", outcome="oscillates", estimand="association")
     assert rows and all(r["value"] is None for r in rows)
     assert all("2,048 rows differ from the rest; at least 80 are needed" in r["refused"] for r in rows)
+
+
+def test_a_harmed_part_of_any_kind_is_found_and_made_anew(whole: Results, tmp_path: Path) -> None:
+    """Of redraws too, whose later attempts rest on earlier ones."""
+    shutil.copytree(whole.folder, tmp_path / "out")
+    names = sorted(p.name for p in (tmp_path / "out/ranking").glob("part-*.parquet"))
+    redraws = [n for n in names if n.startswith("part-2")]
+    for name in (names[0], next(n for n in names if n.startswith("part-1")), redraws[0], redraws[1], redraws[-1]):
+        path = tmp_path / "out/ranking" / name
+        path.write_bytes(path.read_bytes()[:-40])
+    assert files(run(tmp_path)) == files(whole)
+    (tmp_path / "out/ranking" / redraws[1]).write_bytes((tmp_path / "out/ranking" / redraws[0]).read_bytes())
+    (tmp_path / "out/ranking" / redraws[0]).unlink()
+    assert files(run(tmp_path)) == files(whole)
