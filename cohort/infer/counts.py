@@ -15,7 +15,7 @@ T_95_7 = 2.364624251592785
 @dataclass(frozen=True)
 class Share:
     """k of n subjects, u of them unresolved: share (unresolved counted half) and a 95 % interval of Monte Carlo error
-    that counts them once as no and once as yes."""
+    that counts them once as no and once as yes; effective: how many independent people the share is worth."""
 
     k: int
     n: int
@@ -24,6 +24,7 @@ class Share:
     low: float
     high: float
     method: str
+    effective: float
 
 
 def wilson(k: float, n: float, z: float = Z_95) -> tuple[float, float]:
@@ -41,7 +42,7 @@ def share(k: int, n: int, unresolved: int = 0) -> Share:
     """The share of independent subjects, by Wilson."""
     low, _ = wilson(k, n)
     _, high = wilson(k + unresolved, n)
-    return Share(k, n, unresolved, (k + 0.5 * unresolved) / n if n else np.nan, low, high, "Wilson 95 %")
+    return Share(k, n, unresolved, (k + 0.5 * unresolved) / n if n else np.nan, low, high, "Wilson 95 %", float(n))
 
 
 def share_of_effective(p: float, open_: float, effective: float, k: int, unresolved: int, n: int) -> Share:
@@ -50,7 +51,7 @@ def share_of_effective(p: float, open_: float, effective: float, k: int, unresol
     low, _ = wilson(p * effective, effective)
     _, high = wilson((p + open_) * effective, effective)
     low, high = (0.0 if k == 0 else low), (1.0 if k + unresolved == n else high)
-    return Share(k, n, unresolved, p + 0.5 * open_, low, high, f"Wilson 95 %, effective n {effective:,.0f}")
+    return Share(k, n, unresolved, p + 0.5 * open_, low, high, f"Wilson 95 %, effective n {effective:,.0f}", effective)
 
 
 def share_of_scrambles(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n: NDArray[np.int64]) -> Share:
@@ -66,7 +67,9 @@ def share_of_scrambles(yes: NDArray[np.int64], unresolved: NDArray[np.int64], n:
     high = high_shares.mean() + _half_width(high_shares)
     k, u = int(yes.sum()), int(unresolved.sum())
     middle = (k + 0.5 * u) / total
-    return Share(k, total, u, middle, max(low, 0.0), min(high, 1.0), f"t over {len(n)} scrambles, 95 %")
+    error = float(((low_shares + high_shares) / 2.0).std(ddof=1) / np.sqrt(len(n)))
+    worth = max(middle * (1.0 - middle) / (error * error), float(total)) if error > 0.0 else float(total)
+    return Share(k, total, u, middle, max(low, 0.0), min(high, 1.0), f"t over {len(n)} scrambles, 95 %", worth)
 
 
 def _half_width(shares: NDArray[np.float64]) -> float:

@@ -10,7 +10,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.infer.counts import Share
 from cohort.infer.predict import (
     Belief,
     at_least,
@@ -124,21 +123,20 @@ def _rows(results: Results, count: Count, asked: dict[str, Any]) -> Iterator[Row
 
 def know(results: Results, count: Count) -> Known:
     """What is known of a share: from the cohort alone, or from draws of the population where there are any."""
-    share, sd = _from_cohort(count.share)
+    share = count.share
     drawn = _draws(results, count)
     if drawn is None:
-        effective = max(share * (1.0 - share) / (sd * sd) - 1.0, 1.0) if sd > 0.0 else float(count.share.n)
-        return Known(from_counts(share * effective, effective), share, sd, None)
+        belief = from_counts(share.share * share.effective, share.effective)
+        if share.unresolved:
+            belief = widened(belief, share.unresolved / share.n / np.sqrt(12.0))  # anywhere from all no to all yes
+        total = belief.a + belief.b
+        sd = float(np.sqrt(belief.a * belief.b / (total + 1.0)) / total)
+        return Known(belief, share.share, sd, None)
     mean, population_sd = between_draws(*drawn)
     error = float(np.sqrt(max(mean * (1.0 - mean), 1e-12) / drawn[1].sum()))
     most = 0.98 * np.sqrt(mean * (1.0 - mean))
     base = from_moments(mean, float(min(population_sd, most)))
     return Known(widened(base, error), mean, error, population_sd)
-
-
-def _from_cohort(share: Share) -> tuple[float, float]:
-    """(share, SD of its Monte Carlo error, unresolved subjects included) from a counted share's interval."""
-    return share.share, (share.high - share.low) / (2.0 * 1.959963984540054)
 
 
 def _draws(results: Results, count: Count) -> tuple[Array, Array] | None:

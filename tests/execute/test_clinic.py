@@ -132,7 +132,7 @@ def test_predictions_are_those_of_the_counted_share(whole: Results) -> None:
     (count,) = incidence(whole, arm="steady", schedule=None, stratum="everyone", regime="oscillates")
     (row,) = recruited(whole, arm="steady", schedule=None, stratum="everyone", counted="oscillates", recruited=24)
     assert row["expected"] == pytest.approx(24 * 0.9 * count["share"], rel=0.01)
-    assert (row["low"], row["high"]) == pytest.approx(central(predicted(from_counts(count["n"], 600), 24, 0.9)), abs=1)
+    assert (row["low"], row["high"]) == central(predicted(from_counts(count["n"], 600), 24, 0.9))
     assert 0.0 < row["at_least_wanted"] < 1.0 and row["uncertainty"].startswith("Monte Carlo error")
     (needed,) = [r for r in recruited(whole, arm="steady", schedule=None, stratum="everyone", counted="oscillates")
                  if r["to_recruit"]]  # fmt: skip
@@ -371,3 +371,23 @@ glucose = [ { shape = "on-off", rate = "300 mg/min", period = "2 h" } ]
     assert results.observations("on-off", "every 20 min").to_pandas().power_at_forcing.notna().all()
     words = closing_words(json.loads((results.folder / "summary.json").read_text()))
     assert "a rhythm there may" in words
+
+
+def test_a_share_of_all_or_none_is_as_sure_as_its_number_of_people(tmp_path: Path) -> None:
+    """64 of 64 leave little doubt: four recruits give three oscillators, not six."""
+    text = (
+        STUDY.replace("count = 600", "count = 64")
+        .replace("cv = 0.2 }", "cv = 0.01 }")
+        .replace("cv = 0.3 }", "cv = 0.01 }")
+    )
+    text = (
+        text.replace("evaluable = 0.9", "evaluable = 1.0")
+        .replace("want = 6", "want = 3")
+        .replace("120 mU/L", "80 mU/L")
+    )
+    results = run(tmp_path, text=text)
+    (count,) = incidence(results, arm="steady", schedule=None, stratum="everyone", regime="oscillates")
+    assert count["share"] == 1.0
+    rows = recruited(results, arm="steady", schedule=None, stratum="everyone", counted="oscillates")
+    assert [r["to_recruit"] for r in rows if r["to_recruit"]] == [3]
+    assert [(r["low"], r["high"]) for r in rows if r["recruited"] == 12] == [(11.0, 12.0)]
