@@ -181,7 +181,29 @@ class _Emitter:
         return plain[name](*operands)
 
 
-def _module(program: Program, lanes: int) -> ir.Module:
+def row_width(program: Program, carried: int, lanes: int) -> int:
+    """How many places a lane's row of outputs takes, in programs whose outputs from `carried` on are stored by lane."""
+    return -(-(len(program.outputs) - carried) // lanes) * lanes
+
+
+def _transposed(builder: ir.IRBuilder, square: list[ir.Value]) -> list[ir.Value]:
+    """Row l of the result holds element l of every vector: as many vectors as lanes, exchanged in halves."""
+    lanes = len(square)
+    step = 1
+    while step < lanes:
+        # of vectors i and i + step, the blocks of `step` elements off the diagonal change places
+        mixed = list(square)
+        for i in (i for i in range(lanes) if not i & step):
+            a, b = square[i], square[i + step]
+            low = [j if not j & step else lanes + j - step for j in range(lanes)]
+            high = [j + step if not j & step else lanes + j for j in range(lanes)]
+            masks = [ir.Constant(ir.VectorType(ir.IntType(32), lanes), mask) for mask in (low, high)]
+            mixed[i], mixed[i + step] = (builder.shuffle_vector(a, b, mask) for mask in masks)
+        square, step = mixed, 2 * step
+    return square
+
+
+def _module(program: Program, lanes: int, carried: int | None) -> ir.Module:
     module = ir.Module(name=program.name)
     pointer = ir.PointerType(_F64)
     function = ir.Function(module, ir.FunctionType(ir.VoidType(), [pointer, pointer]), "program")
@@ -197,8 +219,16 @@ def _module(program: Program, lanes: int) -> ir.Module:
     values = [builder.load(place(function.args[0], i), align=8) for i in range(program.n_inputs)]
     for name, operands, value in program.ops:
         values.append(emitter.emit(name, [values[o] for o in operands], value))
-    for i, o in enumerate(program.outputs):
-        builder.store(values[o], place(function.args[1], i), align=8)
+    outputs = [values[o] for o in program.outputs]
+    by_lane = len(outputs) if carried is None or lanes == 1 else carried
+    for i, value in enumerate(outputs[:by_lane]):
+        builder.store(value, place(function.args[1], i), align=8)
+    blocks = row_width(program, by_lane, lanes) // lanes
+    for q in range(blocks):
+        square = outputs[by_lane + q * lanes : by_lane + (q + 1) * lanes]
+        square += [emitter.constant(emitter.real, 0.0)] * (lanes - len(square))
+        for l, row in enumerate(_transposed(builder, square)):
+            builder.store(row, place(function.args[1], by_lane + l * blocks + q), align=8)
     builder.ret_void()
     return module
 
@@ -209,13 +239,13 @@ def _start_llvm() -> None:
     llvm.initialize_native_asmprinter()
 
 
-def _machine_code(program: Program, lanes: int) -> bytes:
+def _machine_code(program: Program, lanes: int, carried: int | None) -> bytes:
     """Return the program's object file, from the private folder where it is kept or freshly compiled."""
     folder = cache_folder()
-    kept = folder / f"{program.key}-{lanes}.o" if folder else None
+    kept = folder / f"{program.key}-{lanes}-{carried}.o" if folder else None
     if kept is not None and kept.exists():
         return kept.read_bytes()
-    parsed = llvm.parse_assembly(str(_module(program, lanes)))
+    parsed = llvm.parse_assembly(str(_module(program, lanes, carried)))
     cpu, features = _cpu()
     target = llvm.Target.from_triple(llvm.get_process_triple())
     machine = target.create_target_machine(cpu=cpu, features=features, opt=2, reloc="pic", codemodel="default")
@@ -227,27 +257,31 @@ def _machine_code(program: Program, lanes: int) -> bytes:
     return code
 
 
-_LOADED: dict[tuple[str, int], tuple[int, Any]] = {}
+_LOADED: dict[tuple[str, int, int | None], tuple[int, Any]] = {}
 
 
-def compile_program(program: Program, lanes: int = 1) -> int:
-    """Return the address of `void f(const double *inputs, double *outputs)`, value i of lane l at [i * lanes + l]."""
-    key = (program.key, lanes)
+def compile_program(program: Program, lanes: int = 1, carried: int | None = None) -> int:
+    """Return the address of `void f(const double *inputs, double *outputs)`, value i of lane l at [i * lanes + l].
+
+    Outputs from `carried` on, where given, are stored a lane after the other instead, so that what is kept of one
+    subject is copied at once: output carried + j of lane l at [carried * lanes + l * row_width + j].
+    """
+    key = (program.key, lanes, carried)
     if key not in _LOADED:
         with global_compiler_lock:  # LLVM is not for two threads at once
             if key not in _LOADED:  # a second load would free the code that the first thread is running
-                _LOADED[key] = _load(program, lanes)
+                _LOADED[key] = _load(program, lanes, carried)
     return _LOADED[key][0]
 
 
-def _load(program: Program, lanes: int) -> tuple[int, Any]:
+def _load(program: Program, lanes: int, carried: int | None) -> tuple[int, Any]:
     """Machine code in memory: its address, and the engine that keeps it there."""
     _start_llvm()
     empty = llvm.parse_assembly("")
     empty.triple = llvm.get_process_triple()
     machine = llvm.Target.from_triple(empty.triple).create_target_machine()
     engine = llvm.create_mcjit_compiler(empty, machine)
-    engine.add_object_file(llvm.ObjectFileRef.from_data(_machine_code(program, lanes)))
+    engine.add_object_file(llvm.ObjectFileRef.from_data(_machine_code(program, lanes, carried)))
     engine.finalize_object()
     return engine.get_function_address("program"), engine
 
@@ -282,6 +316,76 @@ def fma(typing: Any, a: Any, b: Any, c: Any) -> Any:  # noqa: ARG001 - numba's s
         return builder.fma(*reals)
 
     return types.float64(a, b, c), generate
+
+
+@intrinsic  # type: ignore[untyped-decorator]
+def horner(typing: Any, kept: Any, places: Any, orders: Any, times: Any, span: Any, out: Any, rooms: Any) -> Any:  # noqa: ARG001
+    """Inside `jit` code: two polynomials of x = (t - start) inverse at 2 LANES times t, a fused operation a power.
+
+    places = (first, second): the coefficients, rising powers, begin at kept[first] and kept[second]; span = (start,
+    inverse); rooms = (at, apart): the times are times[at : at + 2 LANES], the first polynomial's values go to
+    out[at : ...], the second's `apart` further on. Arrays are flat. Four sums are under way together, since each waits for its
+    own last operation.
+    """
+    wide = ir.VectorType(_F64, LANES)
+
+    def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        a, x, y = (context.make_array(signature.args[i])(context, builder, arguments[i]).data for i in (0, 3, 5))
+        starts, ends, rooms_ = (cgutils.unpack_tuple(builder, arguments[i], 2) for i in (1, 4, 6))
+        orders_, at_ = arguments[2], rooms_[0]
+        kind = ir.FunctionType(wide, [wide] * 3)
+        fused = cgutils.get_or_insert_function(builder.module, kind, f"llvm.fma.v{LANES}f64")
+        same = ir.Constant(ir.VectorType(ir.IntType(32), LANES), [0] * LANES)
+        nothing = ir.Constant(wide, ir.Undefined)
+
+        def everywhere(number: Any) -> Any:
+            one = builder.insert_element(nothing, number, ir.Constant(ir.IntType(32), 0))
+            return builder.shuffle_vector(one, nothing, same)
+
+        def whole(base: Any, index: Any) -> Any:
+            return builder.bitcast(builder.gep(base, [index]), wide.as_pointer())
+
+        def further(index: Any, by: int) -> Any:
+            return builder.add(index, ir.Constant(_I64, by))
+
+        start, inverse = (everywhere(number) for number in ends)
+        loaded = [builder.load(whole(x, further(at_, h * LANES)), align=8) for h in (0, 1)]
+        points = [builder.fmul(builder.fsub(t, start), inverse) for t in loaded]
+        totals = [cgutils.alloca_once_value(builder, ir.Constant(wide, [0.0] * LANES)) for _ in range(4)]
+        with cgutils.for_range(builder, orders_) as loop:
+            k = builder.sub(further(orders_, -1), loop.index)
+            for c in (0, 1):
+                coefficient = everywhere(builder.load(builder.gep(a, [builder.add(starts[c], k)])))
+                for h in (0, 1):
+                    total = totals[2 * c + h]
+                    builder.store(builder.call(fused, [builder.load(total), points[h], coefficient]), total)
+        for c in (0, 1):
+            for h in (0, 1):
+                index = further(at_, h * LANES) if c == 0 else builder.add(further(at_, h * LANES), rooms_[1])
+                builder.store(builder.load(totals[2 * c + h]), whole(y, index), align=8)
+        return context.get_dummy_value()
+
+    two, reals = numba.typeof((0, 0)), numba.typeof((0.0, 0.0))
+    return types.void(kept, two, types.int64, times, reals, out, two), generate
+
+
+@intrinsic  # type: ignore[untyped-decorator]
+def copy_lanes(typing: Any, source: Any, at: Any, out: Any, to: Any, count: Any) -> Any:  # noqa: ARG001
+    """Inside `jit` code: out[to + j] = source[at + j] for j < count, `count` a multiple of LANES; both arrays flat."""
+    wide = ir.VectorType(_F64, LANES)
+
+    def generate(context: Any, builder: Any, signature: Any, arguments: Any) -> Any:
+        read, written = (context.make_array(signature.args[i])(context, builder, arguments[i]).data for i in (0, 2))
+        blocks = builder.udiv(arguments[4], ir.Constant(_I64, LANES))
+        with cgutils.for_range(builder, blocks) as loop:
+            move = builder.mul(loop.index, ir.Constant(_I64, LANES))
+            place = builder.gep(read, [builder.add(arguments[1], move)])
+            value = builder.load(builder.bitcast(place, wide.as_pointer()), align=8)
+            place = builder.gep(written, [builder.add(arguments[3], move)])
+            builder.store(value, builder.bitcast(place, wide.as_pointer()), align=8)
+        return context.get_dummy_value()
+
+    return types.void(source, types.int64, out, types.int64, types.int64), generate
 
 
 def run_compiled(program: Program, inputs: Any, outputs: Any, lanes: int = 1) -> None:

@@ -17,6 +17,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import compile_program, jit
+from cohort.measure.roots import reading
 from cohort.measure.turning import NEAR, turning_points
 from cohort.model.body import Body
 from cohort.model.inputs import held
@@ -151,7 +152,7 @@ def _run_cycles(subjects: Held, state: Array, period: Array, cycles: int) -> tup
     final = np.full(state.shape, np.nan)
     for rows, found in courses(prepared, float(np.max(cycles * period))):
         some = np.empty((len(rows), 4))
-        _marks(found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, some)
+        _marks(*reading(found), some)
         marks[rows], final[rows] = some, found.final
     return final, marks
 
@@ -174,7 +175,7 @@ def _extrapolate(subjects: Held, final: Array, period: Array, marks: Array) -> t
 
 
 @jit
-def _marks(start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
+def _marks(roots, start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
     """Of each course: its last two peak-to-trough amplitudes and its last two periods, NaN if it has none."""
     room = start.shape[1] + 8
     times, values = np.empty(room), np.empty(room)
@@ -185,7 +186,7 @@ def _marks(start, step_size, coefficients, summaries, n_steps, status, out):  # 
             continue
         n = n_steps[s]
         count = turning_points(
-            start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n], NEAR, times, values
+            roots, start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n], NEAR, times, values
         )
         peaks = 0
         for i in range(1, count - 1):
@@ -326,9 +327,7 @@ def _lead_swing(subjects: Held, x: Array, T: Array) -> Array:
         some = subjects.take(fine)
         for rows, found in orbit_courses(some, x[fine], T[fine], (_lead_column(subjects.body),)):
             out = np.full((len(rows), ORBIT_COLUMNS), np.nan)
-            orbit_rows(
-                found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, out
-            )
+            orbit_rows(*reading(found), out)
             swing[fine[rows]] = out[:, 1] - out[:, 0]
     return swing
 
@@ -338,7 +337,7 @@ ORBIT_COLUMNS = 4
 
 
 @jit
-def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
+def orbit_rows(roots, start, step_size, coefficients, summaries, n_steps, status, out):  # type: ignore[no-untyped-def]
     """Lowest, highest, mean and time of the highest of every column over one turn: out float64[n, 4 x columns]."""
     columns = coefficients.shape[1]
     room = start.shape[1] + 8
@@ -350,7 +349,7 @@ def orbit_rows(start, step_size, coefficients, summaries, n_steps, status, out):
         end = start[s, n - 1] + step_size[s, n - 1]
         for c in range(columns):
             a = coefficients[s, c, :n]
-            count = turning_points(start[s, :n], step_size[s, :n], a, summaries[s, c, :n], NEAR, times, values)
+            count = turning_points(roots, start[s, :n], step_size[s, :n], a, summaries[s, c, :n], NEAR, times, values)
             low = high = a[0, 0]
             when = 0.0
             for i in range(count):

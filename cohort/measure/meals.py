@@ -15,7 +15,7 @@ RINGING_MG_DL = 1.0
 
 
 @jit
-def meal_rows(start, step_size, coefficients, summaries, n_steps, status, times, end, periods, out):  # type: ignore[no-untyped-def]
+def meal_rows(roots, start, step_size, coefficients, summaries, n_steps, status, times, end, periods, out):  # type: ignore[no-untyped-def]
     """Write MEAL_COLUMNS of every subject and meal into out float64[n, meals, columns]; failed courses stay as they are.
 
     Peak and ringing look from the meal to the next (or the arm's end). A ringing cycle is a rise and the fall after
@@ -26,7 +26,7 @@ def meal_rows(start, step_size, coefficients, summaries, n_steps, status, times,
         if status[s] != -1:
             continue
         n = n_steps[s]
-        course = scan(start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n])
+        course = scan(roots, start[s, :n], step_size[s, :n], coefficients[s, 0, :n], summaries[s, 0, :n])
         for m in range(meals):
             begin = times[m]
             until = times[m + 1] if m + 1 < meals else end

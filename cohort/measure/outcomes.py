@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from cohort.measure.meals import MEAL_COLUMNS, meal_rows
 from cohort.measure.regime import BISTABLE, FAILED, SUSTAINED, UNDECIDED, Cycles, cycles
+from cohort.measure.roots import reading
 from cohort.measure.windows import GLUCOSE_WINDOW, INSULIN_WINDOW, LEVELS_MG_DL, column_means, window_rows
 from cohort.model.body import Body, body
 from cohort.model.inputs import People, meal_times, steady_input
@@ -104,14 +105,14 @@ def _measure(found: Body, own: Array, people: People, arm: Arm, period: Array, s
 def _read(read: _Measured, rows: NDArray[np.int64], course: Courses, arm: Arm, times: Array, period: Array) -> None:
     read.status[rows] = course.status
     some = np.full((len(rows), read.window.shape[1]), np.nan)
-    window_rows(*_arrays(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)
+    window_rows(*reading(course), arm.settle_min, arm.duration_min, period[rows], np.array(LEVELS_MG_DL), some)
     read.window[rows] = some
     if len(read.sample_min):
         read.sampled[rows] = course.sample(read.sample_min)[:, : len(SEEN)]  # clamps have a column more
         read.sampled[rows[course.status != DONE]] = np.nan
     if len(times):
         eating = np.full((len(rows), *read.meals.shape[1:]), np.nan)
-        meal_rows(*_arrays(course), times, arm.duration_min, period[rows], eating)
+        meal_rows(*reading(course), times, arm.duration_min, period[rows], eating)
         read.meals[rows] = eating
 
 
@@ -119,15 +120,11 @@ def _read_clamp(out: Array, rows: NDArray[np.int64], clamped: ClampedCourses, ar
     assert arm.clamp is not None
     begin = max(arm.settle_min, arm.clamp.from_min)
     rate = np.full(len(rows), np.nan)
-    column_means(*_arrays(clamped.courses), len(SEEN), begin, arm.duration_min, rate)
+    column_means(*reading(clamped.courses), len(SEEN), begin, arm.duration_min, rate)
     whole = clamped.courses.status == DONE
     off = np.where(whole, clamped.off_target_min, np.nan)
     dose, target = np.where(whole, clamped.dose_mg, np.nan), np.where(whole, clamped.target_mg_dl, np.nan)
     out[rows] = np.column_stack([rate, rate / weight, off, dose, target])
-
-
-def _arrays(course: Courses) -> tuple[Array, Array, Array, Array, NDArray[np.int64], NDArray[np.int64]]:
-    return course.start, course.step_size, course.coefficients, course.summaries, course.n_steps, course.status
 
 
 def eaten(arm: Arm) -> Array:

@@ -19,6 +19,7 @@ from cohort.measure.cycle import (
     orbit_courses,
     orbit_rows,
 )
+from cohort.measure.roots import reading
 from cohort.model.body import Body
 from cohort.model.rest import at_rest
 from cohort.quantities import REGIMES
@@ -132,7 +133,7 @@ def _measure(subjects: Held, rows: NDArray[np.int64], orbits: Orbits, turn: Arra
     some = subjects.take(rows)
     for here, found in orbit_courses(some, orbits.state[rows], orbits.period[rows], CYCLE_COLUMNS):
         out = np.full((len(here), len(CYCLE_COLUMNS) * ORBIT_COLUMNS), np.nan)
-        orbit_rows(found.start, found.step_size, found.coefficients, found.summaries, found.n_steps, found.status, out)
+        orbit_rows(*reading(found), out)
         turn[rows[here]] = out.reshape(len(here), len(CYCLE_COLUMNS), ORBIT_COLUMNS)
 
 

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import jit
+from cohort.measure.roots import Roots
 from cohort.measure.turning import ROUGHLY, integral, slope_and_bend, turning_points, value
 
 Array = NDArray[np.float64]
@@ -16,11 +17,12 @@ Array = NDArray[np.float64]
 class Scan(NamedTuple):
     """A column of one course, read.
 
-    start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries: float64[steps, SUMMARY]; area, square:
+    roots: `cohort.measure.roots.roots`; start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries: float64[steps, SUMMARY]; area, square:
     float64[steps + 1], the integrals of the column and of (column - centre)^2 from the course's beginning to each
     step's start; times, values: float64[turns], all turning points.
     """
 
+    roots: Roots
     start: Array
     step_size: Array
     a: Array
@@ -33,8 +35,9 @@ class Scan(NamedTuple):
 
 
 @jit
-def scan(start, step_size, a, summaries):  # type: ignore[no-untyped-def]
-    """Read one column: start, step_size float64[steps], a float64[steps, order + 1], summaries float64[steps, 6]."""
+def scan(roots, start, step_size, a, summaries):  # type: ignore[no-untyped-def]
+    """Read one column: start, step_size float64[steps], a float64[steps, order + 1], summaries float64[steps, SUMMARY];
+    roots of as many orders."""
     n = start.shape[0]
     centre = a[0, 0]
     area, square = np.zeros(n + 1), np.zeros(n + 1)
@@ -46,8 +49,8 @@ def scan(start, step_size, a, summaries):  # type: ignore[no-untyped-def]
         square[i + 1] = square[i] + part * step_size[i]
     room = n + 64
     times, values = np.empty(room), np.empty(room)
-    count = turning_points(start, step_size, a, summaries, ROUGHLY, times, values)
-    return Scan(start, step_size, a, summaries, centre, area, square, times[:count], values[:count])
+    count = turning_points(roots, start, step_size, a, summaries, ROUGHLY, times, values)
+    return Scan(roots, start, step_size, a, summaries, centre, area, square, times[:count], values[:count])
 
 
 @jit

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from cohort.compiled import jit
+from cohort.compiled import LANES, call_program, jit
 from cohort.measure.scan import (
     area_to,
     extremes,
@@ -24,6 +24,8 @@ from cohort.measure.turning import ROUGHLY, integral, level_root, turns_in_step,
 
 LEVELS_MG_DL = (54.0, 70.0, 140.0, 180.0, 250.0)
 DAY_MIN = 1440.0
+CLOSE = 1e-4
+"""How small Newton's last change of a crossing's place must be: what is left is about its square."""
 
 GLUCOSE_WINDOW = (
     "glucose_mean_mg_dl", "glucose_sd_mg_dl", "glucose_peak_mg_dl", "glucose_nadir_mg_dl", "time_to_peak_min",
@@ -37,9 +39,15 @@ INSULIN_WINDOW = ("insulin_mean_mu_l", "insulin_peak_mu_l", "insulin_nadir_mu_l"
 
 @jit
 def above(s, begin, end, level):  # type: ignore[no-untyped-def]
-    """(time above the level, area above it) within begin..end, cut at the exact crossings."""
-    places = np.empty(12)
+    """(time above the level, area above it) within begin..end, cut at the exact crossings.
+
+    Whole steps that rise or fall throughout are solved LANES at once.
+    """
     time, area = 0.0, 0.0
+    orders = s.a.shape[1]
+    source, result = np.zeros((orders + 2, LANES)), np.empty((3, LANES))
+    step = np.empty(LANES, np.int64)
+    pending = 0
     for i in range(step_at(s, begin), s.start.shape[0]):
         h = s.step_size[i]
         if s.start[i] >= end:
@@ -47,28 +55,76 @@ def above(s, begin, end, level):  # type: ignore[no-untyped-def]
         a = s.a
         if a[i, 0] + s.summaries[i, 3] < level:
             continue
-        low = max((begin - s.start[i]) / h, 0.0)
-        high = min((end - s.start[i]) / h, 1.0)
-        if not high > low:
-            continue
-        if a[i, 0] - s.summaries[i, 3] > level:
-            time += (high - low) * h
-            area += (integral(a, i, low, high) - level * (high - low)) * h
-            continue
-        pieces = turns_in_step(a, s.summaries, i, places, ROUGHLY) + 1
-        previous = low
-        for p in range(pieces):
-            following = high if p == pieces - 1 else min(max(places[p], low), high)
-            if following > previous:
-                first, last = value(a, i, previous) > level, value(a, i, following) > level
-                left, right = previous, following
-                if first != last:
-                    x = level_root(a, i, level, previous, following)
-                    left, right = (previous, x) if first else (x, following)
-                if first or last:
-                    time += (right - left) * h
-                    area += (integral(a, i, left, right) - level * (right - left)) * h
-            previous = following
+        whole = s.start[i] >= begin and s.start[i] + h <= end
+        if whole and a[i, 0] - s.summaries[i, 3] > level:
+            time += h
+            area += (s.summaries[i, 4] - level) * h
+        elif whole and abs(a[i, 1]) > s.summaries[i, 1]:
+            if (a[i, 0] > level) != (s.summaries[i, 6] > level):
+                for k in range(orders):
+                    source[k, pending] = a[i, k]
+                source[orders, pending], source[orders + 1, pending] = s.summaries[i, 6], level
+                step[pending] = i
+                pending += 1
+                if pending == LANES:
+                    more = _solve_crossings(s, source, result, step, pending, level)
+                    time, area, pending = time + more[0], area + more[1], 0
+            elif a[i, 0] > level:
+                time += h
+                area += (s.summaries[i, 4] - level) * h
+        else:
+            more = _above_in_step(s, i, begin, end, level)
+            time, area = time + more[0], area + more[1]
+    if pending > 0:
+        more = _solve_crossings(s, source, result, step, pending, level)
+        time, area = time + more[0], area + more[1]
+    return time, area
+
+
+@jit
+def _solve_crossings(s, source, result, step, pending, level):  # type: ignore[no-untyped-def]
+    """(time, area) above the level in the first `pending` of the steps `step`, each crossed once."""
+    call_program(s.roots.cross, source, result)
+    time, area = 0.0, 0.0
+    for l in range(pending):
+        i = step[l]
+        x, before = result[0, l], result[1, l]
+        if not result[2, l] <= CLOSE:
+            x = level_root(s.a, i, level, 0.0, 1.0)
+            before = integral(s.a, i, 0.0, x)
+        if s.a[i, 0] > level:
+            time += x * s.step_size[i]
+            area += (before - level * x) * s.step_size[i]
+        else:
+            time += (1.0 - x) * s.step_size[i]
+            area += (s.summaries[i, 4] - before - level * (1.0 - x)) * s.step_size[i]
+    return time, area
+
+
+@jit
+def _above_in_step(s, i, begin, end, level):  # type: ignore[no-untyped-def]
+    """(time, area) above the level in the part of step i within begin..end, whatever it does there."""
+    places = np.empty(12)
+    time, area = 0.0, 0.0
+    h, a = s.step_size[i], s.a
+    low = max((begin - s.start[i]) / h, 0.0)
+    high = min((end - s.start[i]) / h, 1.0)
+    if not high > low:
+        return time, area
+    pieces = turns_in_step(a, s.summaries, i, places, ROUGHLY) + 1
+    previous = low
+    for p in range(pieces):
+        following = high if p == pieces - 1 else min(max(places[p], low), high)
+        if following > previous:
+            first, last = value(a, i, previous) > level, value(a, i, following) > level
+            left, right = previous, following
+            if first != last:
+                x = level_root(a, i, level, previous, following)
+                left, right = (previous, x) if first else (x, following)
+            if first or last:
+                time += (right - left) * h
+                area += (integral(a, i, left, right) - level * (right - left)) * h
+        previous = following
     return time, area
 
 
@@ -196,23 +252,23 @@ def insulin_window(start, step_size, a, summaries, settle, end, out):  # type: i
 
 
 @jit
-def window_rows(start, step_size, coefficients, summaries, n_steps, status, settle, end, periods, levels, out):  # type: ignore[no-untyped-def]
+def window_rows(roots, start, step_size, coefficients, summaries, n_steps, status, settle, end, periods, levels, out):  # type: ignore[no-untyped-def]
     """GLUCOSE_WINDOW then INSULIN_WINDOW of every subject whose course is whole; rows of others are left alone."""
     for b in range(n_steps.shape[0]):
         if status[b] != -1:
             continue
         n = n_steps[b]
-        glucose = scan(start[b, :n], step_size[b, :n], coefficients[b, 0, :n], summaries[b, 0, :n])
+        glucose = scan(roots, start[b, :n], step_size[b, :n], coefficients[b, 0, :n], summaries[b, 0, :n])
         glucose_window(glucose, settle, end, periods[b], levels, out[b])
         insulin, marks = coefficients[b, 1, :n], summaries[b, 1, :n]
         insulin_window(start[b, :n], step_size[b, :n], insulin, marks, settle, end, out[b, 14:])
 
 
 @jit
-def column_means(start, step_size, coefficients, summaries, n_steps, status, column, begin, end, out):  # type: ignore[no-untyped-def]
+def column_means(roots, start, step_size, coefficients, summaries, n_steps, status, column, begin, end, out):  # type: ignore[no-untyped-def]
     """The mean of one recorded column over begin..end of every subject whose course is whole: out float64[n]."""
     for b in range(n_steps.shape[0]):
         if status[b] == -1:
             n = n_steps[b]
-            read = scan(start[b, :n], step_size[b, :n], coefficients[b, column, :n], summaries[b, column, :n])
+            read = scan(roots, start[b, :n], step_size[b, :n], coefficients[b, column, :n], summaries[b, column, :n])
             out[b] = mean_between(read, begin, end)

@@ -10,7 +10,8 @@ so that its Taylor coefficients at any time follow from a two-term recurrence. B
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -77,6 +78,12 @@ class Inputs:
     def steady(self) -> bool:
         """True where every piece is constant between stops."""
         return bool(np.all(self.kind == CONSTANT))
+
+    def take(self, rows: Sequence[int]) -> Inputs:
+        """Return the chosen subjects' inputs."""
+        some = list(rows)
+        own = ("on", "off", "amplitude", "rate", "phase", "stops", "bolus_time", "bolus_amount")
+        return replace(self, **{key: getattr(self, key)[some] for key in own})
 
 
 class _Pieces:

@@ -319,6 +319,11 @@ class Stepper:
         return evaluator("hoisted", self.traced.parameters, self._constants)
 
     @property
+    def carried(self) -> int:
+        """How many outputs of a step drive the next: states, step and health; what follows is the record."""
+        return len(self.traced.states) + 2
+
+    @property
     def n_input_orders(self) -> int:
         return 1 if self.steady else self.order
 

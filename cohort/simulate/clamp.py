@@ -62,7 +62,7 @@ def clamped_courses(body: Body, values: Array, people: People, arm: Arm, seen: t
     capacity = int(arm.duration_min / _MEAN_STEP_MIN) + _SPARE_STEPS + 2 * pieces.stops.shape[1]
     columns, size = len(seen) + 1, free.order + 1
     start, step_size = np.empty((n, capacity)), np.empty((n, capacity))
-    coefficients, summaries = np.empty((n, columns, capacity, size)), np.empty((n, columns, capacity, len(SUMMARY)))
+    record = np.empty((n, capacity, columns * (size + len(SUMMARY))))
     n_steps, status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
     final, dose, off = np.full(x0.shape, np.nan), np.zeros(n), np.zeros(n)
     i = pieces
@@ -71,9 +71,9 @@ def clamped_courses(body: Body, values: Array, people: People, arm: Arm, seen: t
         free.n_input_orders, prepared[0].x0, prepared[0].inverse_scale, prepared[0].constants, prepared[1].constants,
         i.kind, i.channel, i.on, i.off, i.amplitude, i.rate, i.phase, i.stops, i.bolus_time, i.bolus_amount,
         i.bolus_channel, prepared[0].enters, lead, target, per_mg_dl, arm.clamp.from_min, arm.settle_min,
-        start, step_size, coefficients, summaries, n_steps, status, final, dose, off,
+        columns, size, start, step_size, record, n_steps, status, final, dose, off,
     )  # fmt: skip
-    found = Courses(free.seen, start, step_size, coefficients, summaries, n_steps, status, final)
+    found = Courses(free.seen, size, start, step_size, record, n_steps, status, final)
     return ClampedCourses(found, dose, target, off)
 
 
@@ -116,17 +116,16 @@ def first_below(a, level):  # type: ignore[no-untyped-def]
 def _integrate(  # type: ignore[no-untyped-def]
     free, held, exponential, circular, orders, x0, inverse_scale, free_constants, held_constants, kind, channel, on,
     off, amplitude, rate, phase, stops, bolus_time, bolus_amount, bolus_channel, enters, lead, targets, per_mg_dl,
-    begins, settle, start, step_size, coefficients, summaries, n_steps, status, final, dose, off_target,
+    begins, settle, columns, size, start, step_size, record, n_steps, status, final, dose, off_target,
 ):  # fmt: skip
     n, states = x0.shape
-    columns, size = coefficients.shape[1], coefficients.shape[3]
     at_inputs = 2 * states + 1
     at_constants = at_inputs + 2 * orders
     sources = (
         np.zeros((at_constants + free_constants.shape[1], 1)),
         np.zeros((at_constants + held_constants.shape[1], 1)),
     )
-    result = np.zeros((states + 2 + columns * (size + summaries.shape[3]), 1))
+    result = np.zeros((states + 2 + record.shape[2], 1))
     constants = np.zeros(2)
     scratch = np.empty(4)
     for b in range(n):
@@ -174,7 +173,8 @@ def _integrate(  # type: ignore[no-untyped-def]
                 h = result[states, 0]
             if n_steps[b] == start.shape[1]:
                 break
-            _record(b, n_steps[b], time, h, result[:, 0], states, start, step_size, coefficients, summaries)
+            start[b, n_steps[b]], step_size[b, n_steps[b]] = time, h
+            record[b, n_steps[b]] = result[states + 2 :, 0]
             n_steps[b] += 1
             if clamped and mode == FREE:
                 off_target[b] += max(time + h - max(time, settle), 0.0)
@@ -192,17 +192,3 @@ def _integrate(  # type: ignore[no-untyped-def]
                     status[b] = DONE
                     break
         final[b] = x
-
-
-@jit
-def _record(b, i, time, h, result, states, start, step_size, coefficients, summaries):  # type: ignore[no-untyped-def]
-    start[b, i], step_size[b, i] = time, h
-    at = states + 2
-    for c in range(coefficients.shape[1]):
-        for k in range(coefficients.shape[3]):
-            coefficients[b, c, i, k] = result[at]
-            at += 1
-    for c in range(summaries.shape[1]):
-        for k in range(summaries.shape[3]):
-            summaries[b, c, i, k] = result[at]
-            at += 1

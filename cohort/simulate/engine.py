@@ -12,7 +12,7 @@ import functools
 
 import numpy as np
 
-from cohort.compiled import LANES, call_program, jit
+from cohort.compiled import LANES, call_program, copy_lanes, jit
 from cohort.model.inputs import CONSTANT, DECAY, RISE_DECAY, WAVE
 from cohort.program import Builder, Program
 from cohort.quantities import FAILURES
@@ -95,108 +95,117 @@ def verdict(x, h):  # type: ignore[no-untyped-def]
 def integrate(  # type: ignore[no-untyped-def]
     step, exponential, circular, orders, steady, x0, inverse_scale, constants,
     kind, channel, on, off, amplitude, rate, phase, stops, bolus_time, bolus_amount, bolus_channel, enters,
-    begin, end, record_from, start, step_size, coefficients, summaries, n_steps, status, final, overflow,
+    source, result, subject, time, until, stop, held, following, end, limit, record_from,
+    start, step_size, record, n_steps, status, final, overflow,
 ):  # fmt: skip
-    """Integrate subjects begin..end-1 from time 0 to their last stop.
+    """Integrate until every subject before `end` is done; lanes that fall free take subjects before `limit`.
 
+    Returns the subject that the next free lane takes, which the next call is given as `following`; between calls the
+    lanes' state stays in source, result, subject, time, until, stop and held (`Lanes`).
     x0, inverse_scale, final: float64[n, states]; constants: float64[n, hoisted]; inputs as in
-    `cohort.model.inputs.Inputs`; enters: state that each channel enters. Row s = b - begin of the record: start and
-    step_size float64[rows, capacity], coefficients float64[rows, columns, capacity, order + 1] and summaries
-    float64[rows, columns, capacity, SUMMARY] of the steps that end after `record_from`; n_steps int64[n];
-    status int64[n], DONE or an index into FAILURES; overflow bool[n] where the record was
-    too small (the subject must be done again with a larger one).
+    `cohort.model.inputs.Inputs`; enters: state that each channel enters. Row b modulo rows of the record: start and
+    step_size float64[rows, capacity] and record float64[rows, capacity, width] (`cohort.simulate.course.Courses`) of the
+    steps that end after `record_from`; n_steps int64[n]; status int64[n], DONE or an index into FAILURES; overflow
+    bool[n] where the record was too small (the subject must be done again with a larger one).
     """
     states = x0.shape[1]
-    columns, size, marks = coefficients.shape[1], coefficients.shape[3], summaries.shape[3]
-    capacity = start.shape[1]
+    rows, capacity, width = record.shape
+    kept = record.reshape(-1)
     at_inputs = 2 * states + 1
     at_constants = at_inputs + 2 * orders
-    source = np.zeros((at_constants + constants.shape[1], LANES))
-    result = np.zeros((states + 2 + columns * (size + marks), LANES))
-    subject = np.full(LANES, -1, dtype=np.int64)
-    time = np.zeros(LANES)
-    stop = np.zeros(LANES, dtype=np.int64)
-    held = np.zeros((LANES, 2))
+    carried = (states + 2) * LANES
     scratch = np.empty(4)
-    following = begin
-    busy = 0
+    left = 0
     for l in range(LANES):
-        if following < end:
-            subject[l] = following
-            stop[l] = -1
-            time[l] = 0.0
-            following += 1
-            busy += 1
-    while busy > 0:
+        if subject[l] < 0 and following < limit:
+            subject[l], following = following, following + 1
+            _seat(source, l, subject[l], x0, inverse_scale, constants, at_constants, time, stop, n_steps)
+            until[l] = _stretch(source, l, subject[l], at_inputs, orders, time, stop, stops, held, kind, channel, on,
+                                off, amplitude, bolus_time, bolus_amount, bolus_channel, enters)  # fmt: skip
+        left += 0 <= subject[l] < end
+    while left > 0:
         for l in range(LANES):
-            b = subject[l]
-            if b < 0:
-                continue
-            if stop[l] == -1:  # a new subject
-                for i in range(states):
-                    source[i, l] = x0[b, i]
-                    source[states + i, l] = inverse_scale[b, i]
-                for i in range(constants.shape[1]):
-                    source[at_constants + i, l] = constants[b, i]
-                n_steps[b] = 0
-                time[l] = 0.0
-            if stop[l] == -1 or time[l] == stops[b, stop[l]]:  # a new stretch
-                for q in range(bolus_channel.shape[0]):
-                    if bolus_time[b, q] == time[l]:
-                        source[enters[bolus_channel[q]], l] += bolus_amount[b, q]
-                stop[l] += 1
-                constant_rates(source, l, at_inputs, orders, time[l], b, kind, channel, on, off, amplitude)
-                held[l, 0] = source[at_inputs, l]
-                held[l, 1] = source[at_inputs + orders, l]
-            left = stops[b, stop[l]] - time[l]
-            source[2 * states, l] = left
-            if not steady:
-                moving_rates(source, l, at_inputs, orders, time[l], left, b, kind, channel, on, off, amplitude, rate,
-                             phase, exponential, circular, held[l], scratch)  # fmt: skip
+            source[2 * states, l] = until[l] - time[l]
+        if not steady:
+            for l in range(LANES):
+                if subject[l] >= 0:
+                    moving_rates(source, l, at_inputs, orders, time[l], until[l] - time[l], subject[l], kind, channel,
+                                 on, off, amplitude, rate, phase, exponential, circular, held[l], scratch)  # fmt: skip
         call_program(step, source, result)
+        for i in range(states):
+            for l in range(LANES):
+                source[i, l] = result[i * LANES + l]
         for l in range(LANES):
             b = subject[l]
             if b < 0:
                 continue
-            h = result[states, l]
-            ended = False
-            if result[states + 1, l] != 1.0:
-                status[b] = verdict(result[:states, l], h)
-                ended = True
-            else:
-                if time[l] + h > record_from:
-                    s, i = b - begin, n_steps[b]
-                    if i < capacity:
-                        start[s, i] = time[l]
-                        step_size[s, i] = h
-                        at = states + 2
-                        for c in range(columns):
-                            for j in range(size):
-                                coefficients[s, c, i, j] = result[at + j, l]
-                            at += size
-                        for c in range(columns):
-                            for j in range(marks):
-                                summaries[s, c, i, j] = result[at + j, l]
-                            at += marks
-                        n_steps[b] = i + 1
-                    else:
-                        status[b] = OUT_OF_BUDGET
-                        overflow[b] = True
-                        ended = True
-                for i in range(states):
-                    source[i, l] = result[i, l]
-                time[l] = stops[b, stop[l]] if h == source[2 * states, l] else time[l] + h
-                if time[l] == stops[b, -1] or (stop[l] + 1 < stops.shape[1] and time[l] == stops[b, stop[l]]
-                                               and stops[b, stop[l] + 1] == np.inf):  # fmt: skip
+            h = result[states * LANES + l]
+            ended = result[(states + 1) * LANES + l] != 1.0
+            if ended:
+                status[b] = verdict(source[:states, l], h)
+            elif time[l] + h > record_from:
+                s, i = b % rows, n_steps[b]
+                if i < capacity:
+                    start[s, i], step_size[s, i] = time[l], h
+                    copy_lanes(result, carried + l * width, kept, (s * capacity + i) * width, width)
+                    n_steps[b] = i + 1
+                else:
+                    status[b], overflow[b], ended = OUT_OF_BUDGET, True, True
+            if not ended:
+                if h != source[2 * states, l]:
+                    time[l] += h
+                    continue
+                time[l] = until[l]
+                ended = stop[l] == stops.shape[1] or stops[b, stop[l]] == np.inf
+                if ended:
                     status[b] = DONE
-                    ended = True
             if ended:
                 for i in range(states):
                     final[b, i] = source[i, l]
-                if following < end:
-                    subject[l] = following
-                    stop[l] = -1
-                    following += 1
-                else:
+                left -= b < end
+                if following >= limit:
                     subject[l] = -1
-                    busy -= 1
+                    continue
+                left += following < end
+                subject[l], following = following, following + 1
+                _seat(source, l, subject[l], x0, inverse_scale, constants, at_constants, time, stop, n_steps)
+            until[l] = _stretch(source, l, subject[l], at_inputs, orders, time, stop, stops, held, kind, channel, on,
+                                off, amplitude, bolus_time, bolus_amount, bolus_channel, enters)  # fmt: skip
+    return following
+
+
+class Lanes:
+    """What the integrator's lanes hold between calls; none holds a subject to begin with."""
+
+    def __init__(self, inputs: int, outputs: int) -> None:
+        self.source = np.zeros((inputs, LANES))
+        self.result = np.zeros(outputs)
+        self.subject, self.stop = np.full(LANES, -1, np.int64), np.zeros(LANES, np.int64)
+        self.time, self.until, self.held = np.zeros(LANES), np.zeros(LANES), np.zeros((LANES, 2))
+
+
+@jit
+def _seat(source, l, b, x0, inverse_scale, constants, at_constants, time, stop, n_steps):  # type: ignore[no-untyped-def]
+    """Put subject b into lane l, at time 0."""
+    states = x0.shape[1]
+    for i in range(states):
+        source[i, l] = x0[b, i]
+        source[states + i, l] = inverse_scale[b, i]
+    for i in range(constants.shape[1]):
+        source[at_constants + i, l] = constants[b, i]
+    time[l], stop[l], n_steps[b] = 0.0, 0, 0
+
+
+@jit
+def _stretch(  # type: ignore[no-untyped-def]
+    source, l, b, at, orders, time, stop, stops, held, kind, channel, on, off, amplitude, bolus_time, bolus_amount,
+    bolus_channel, enters,
+):  # fmt: skip
+    """Begin what lies between two stops in lane l: doses now, constant inputs from now on. Returns the next stop."""
+    for q in range(bolus_channel.shape[0]):
+        if bolus_time[b, q] == time[l]:
+            source[enters[bolus_channel[q]], l] += bolus_amount[b, q]
+    constant_rates(source, l, at, orders, time[l], b, kind, channel, on, off, amplitude)
+    held[l, 0], held[l, 1] = source[at, l], source[at + orders, l]
+    stop[l] += 1
+    return stops[b, stop[l] - 1]

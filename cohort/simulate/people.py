@@ -59,6 +59,6 @@ def simulate_values(
     back = np.argsort(np.concatenate(order))
     arrays = [
         np.concatenate([getattr(part, name) for part in padded])[back]
-        for name in ("start", "step_size", "coefficients", "summaries", "n_steps", "status", "final")
+        for name in ("start", "step_size", "record", "n_steps", "status", "final")
     ]
-    return Courses(seen, *arrays)
+    return Courses(seen, padded[0].orders, *arrays)

@@ -2,24 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.compiled import LANES, call_program, compile_program, jit
+from cohort.compiled import LANES, call_program, compile_program, jit, row_width
 from cohort.model.body import Body
 from cohort.model.inputs import Inputs, People, inputs, steady_input
 from cohort.model.protocol import Arm, AtEquilibrium, AtState
 from cohort.model.rest import at_rest
-from cohort.model.taylor import SUMMARY, Stepper
+from cohort.model.taylor import Stepper
 from cohort.simulate.course import Courses
-from cohort.simulate.engine import OUT_OF_BUDGET, elementary, integrate
+from cohort.simulate.engine import OUT_OF_BUDGET, Lanes, elementary, integrate
 
 Array = NDArray[np.float64]
 
-BLOCK = 128
+BLOCK = 32
 """Subjects whose courses are in memory together: enough to keep every lane busy, few enough for the cache."""
 
 _MEAN_STEP_MIN = 3.5
@@ -44,6 +44,14 @@ class Prepared:
     @property
     def count(self) -> int:
         return len(self.x0)
+
+    def take(self, rows: Sequence[int]) -> Prepared:
+        """Return the chosen subjects."""
+        some = list(rows)
+        return replace(
+            self, x0=self.x0[some], inverse_scale=self.inverse_scale[some], constants=self.constants[some],
+            inputs=self.inputs.take(some),
+        )  # fmt: skip
 
 
 @jit
@@ -113,60 +121,63 @@ def courses(
     the status `out of budget`.
     """
     capacity = int((duration_min - record_from) / _MEAN_STEP_MIN) + _SPARE_STEPS + prepared.inputs.stops.shape[1]
-    loop = _Loop(prepared, min(block, max(prepared.count, 1)), capacity)
+    loop = _Loop(prepared, min(block, max(prepared.count, 1)), capacity, record_from)
     late: list[int] = []
-    for begin in range(0, prepared.count, block):
-        end = min(begin + block, prepared.count)
-        found = loop.run(begin, end, record_from)
+    for begin in range(0, prepared.count, loop.block):
+        end = min(begin + loop.block, prepared.count)
+        found = loop.run(begin, end)
         rows = np.arange(begin, end)
         fits = ~loop.overflow[begin:end]
         late += rows[~fits].tolist()
         yield (rows, found) if fits.all() else (rows[fits], found.take(fits))
     if late:
-        loop = _Loop(prepared, 1, capacity * _LARGER)
-        for b in late:
-            yield np.array([b]), loop.run(b, b + 1, record_from)
+        del loop, found
+        again = _Loop(prepared.take(late), 1, capacity * _LARGER, record_from)
+        for i, b in enumerate(late):
+            yield np.array([b]), again.run(i, i + 1)
 
 
 class _Loop:
-    """The record's memory, reused from block to block, and the call of the compiled loop."""
+    """The record's memory, two blocks of which one is read while the other begins to fill, and the compiled loop."""
 
-    def __init__(self, prepared: Prepared, rows: int, capacity: int) -> None:
+    def __init__(self, prepared: Prepared, block: int, capacity: int, record_from: float) -> None:
         stepper, n = prepared.stepper, prepared.count
-        self.prepared = prepared
-        columns = len(stepper.seen)
+        self.prepared, self.block, self.record_from, self.following = prepared, block, record_from, 0
+        rows, width = 2 * block, row_width(stepper.step, stepper.carried, LANES)
         self.start, self.step_size = np.empty((rows, capacity)), np.empty((rows, capacity))
-        self.coefficients = np.empty((rows, columns, capacity, stepper.order + 1))
-        self.summaries = np.empty((rows, columns, capacity, len(SUMMARY) if stepper.summarised else 0))
+        self.record = np.empty((rows, capacity, width))
         self.n_steps, self.status = np.zeros(n, np.int64), np.full(n, OUT_OF_BUDGET, np.int64)
         self.final, self.overflow = np.full(prepared.x0.shape, np.nan), np.zeros(n, np.bool_)
+        self.lanes = Lanes(stepper.step.n_inputs, (stepper.carried + width) * LANES)
         self.programs = (
-            compile_program(stepper.step, LANES),
+            compile_program(stepper.step, LANES, stepper.carried),
             *(compile_program(program) for program in elementary()),
             stepper.n_input_orders,
             stepper.steady,
         )
 
-    def run(self, begin: int, end: int, record_from: float) -> Courses:
-        p, i = self.prepared, self.prepared.inputs
-        integrate(
+    def run(self, begin: int, end: int) -> Courses:
+        """The courses of subjects begin..end-1, a block or its rest; call for one block after the other."""
+        p, i, lanes = self.prepared, self.prepared.inputs, self.lanes
+        self.following = integrate(
             *self.programs, p.x0, p.inverse_scale, p.constants, i.kind, i.channel, i.on, i.off, i.amplitude, i.rate,
-            i.phase, i.stops, i.bolus_time, i.bolus_amount, i.bolus_channel, p.enters, begin, end, record_from,
-            self.start, self.step_size, self.coefficients, self.summaries, self.n_steps, self.status, self.final,
-            self.overflow,
+            i.phase, i.stops, i.bolus_time, i.bolus_amount, i.bolus_channel, p.enters,
+            lanes.source, lanes.result, lanes.subject, lanes.time, lanes.until, lanes.stop, lanes.held,
+            self.following, end, min(begin + 2 * self.block, p.count), self.record_from,
+            self.start, self.step_size, self.record, self.n_steps, self.status, self.final, self.overflow,
         )  # fmt: skip
-        rows = min(end - begin, len(self.start))
+        first = begin % len(self.start)
+        rows = slice(first, first + end - begin)
         return Courses(
-            p.stepper.seen, self.start[:rows], self.step_size[:rows], self.coefficients[:rows],
-            self.summaries[:rows],
+            p.stepper.seen, p.stepper.order + 1, self.start[rows], self.step_size[rows], self.record[rows],
             self.n_steps[begin:end], self.status[begin:end], self.final[begin:end],
         )  # fmt: skip
 
 
 def advance(prepared: Prepared) -> tuple[Array, NDArray[np.int64]]:
     """Integrate every subject to its last stop, recording nothing: (final states float64[n, states], status)."""
-    loop = _Loop(prepared, 1, 1)
-    found = loop.run(0, prepared.count, np.inf)
+    n = prepared.count
+    found = _Loop(prepared, max(n, 1), 0, np.inf).run(0, n)
     return found.final, found.status
 
 

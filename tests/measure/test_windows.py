@@ -8,8 +8,9 @@ from scipy.optimize import brentq
 
 from cohort.measure.meals import ringing
 from cohort.measure.outcomes import outcomes
+from cohort.measure.roots import cross, roots, turn
 from cohort.measure.scan import extremes, mean_between, scan, sd_between
-from cohort.measure.turning import NEAR, turning_points
+from cohort.measure.turning import NEAR, sign_changes, turning_points
 from cohort.measure.windows import above, excursions, insulin_window, mage
 from cohort.model.body import body
 from cohort.model.inputs import People
@@ -71,19 +72,19 @@ def sinusoid(mean: float, amplitude: float, period: float, end: float):  # type:
 def test_incremental_area_of_the_fao_who_example() -> None:
     # FAO Food and Nutrition Paper 66 (1998), carbohydrates in human nutrition: mmol/L at 0..120 min, published as 114
     times = [0.0, 15, 30, 45, 60, 90, 120]
-    read = scan(*lines(times, [4.3, 6.3, 7.9, 5.3, 4.1, 4.6, 4.9]))
+    read = scan(roots(ORDER + 1), *lines(times, [4.3, 6.3, 7.9, 5.3, 4.1, 4.6, 4.9]))
     assert above(read, 0.0, 120.0, 4.3)[1] == pytest.approx(113.95, abs=0.005)
 
 
 def test_time_above_by_exact_crossing() -> None:
     # exact: 120, 200, 160 mg/dL at 0, 60, 120 min are above 180 for 15 + 30 min
-    read = scan(*lines([0.0, 60, 120], [120.0, 200, 160]))
+    read = scan(roots(ORDER + 1), *lines([0.0, 60, 120], [120.0, 200, 160]))
     assert above(read, 0.0, 120.0, 180.0)[0] == pytest.approx(45.0, abs=1e-9)
 
 
 def test_a_sinusoid() -> None:
     # exact: amplitude a, period P: SD a / sqrt 2, MAGE 2 a, positive area per cycle above the mean a P / pi
-    read = scan(*sinusoid(120.0, 20.0, 120.0, 2880.0))
+    read = scan(roots(ORDER + 1), *sinusoid(120.0, 20.0, 120.0, 2880.0))
     assert mean_between(read, 0.0, 2880.0) == pytest.approx(120.0, rel=1e-10)
     assert sd_between(read, 0.0, 2880.0) == pytest.approx(20 / np.sqrt(2), rel=1e-8)
     assert mage(read, 0.0, 2880.0) == pytest.approx(40.0, rel=1e-7)
@@ -97,7 +98,7 @@ def test_a_sinusoid() -> None:
 def test_turning_points_of_a_sinusoid_are_exact() -> None:
     start, h, a, marks = sinusoid(0.0, 1.0, 110.0, 1100.0)
     times, values = np.empty(100), np.empty(100)
-    count = turning_points(start, h, a, marks, NEAR, times, values)
+    count = turning_points(roots(ORDER + 1), start, h, a, marks, NEAR, times, values)
     np.testing.assert_allclose(times[:count], 27.5 + 55.0 * np.arange(20), atol=1e-6)
     np.testing.assert_allclose(np.abs(values[:count]), 1.0, rtol=1e-10)
 
@@ -118,10 +119,10 @@ def test_ringing_counts_rises_and_falls_beyond_one() -> None:
 def test_a_corner_and_a_jump_are_turning_points() -> None:
     start, h, a, marks = lines([0.0, 10, 20, 30], [5.0, 9.0, 2.0, 4.0])
     times, values = np.empty(10), np.empty(10)
-    assert times[: turning_points(start, h, a, marks, NEAR, times, values)].tolist() == [10.0, 20.0]
+    assert times[: turning_points(roots(ORDER + 1), start, h, a, marks, NEAR, times, values)].tolist() == [10.0, 20.0]
     a[2, 0] += 50.0
     marks = summaries_of(a)
-    count = turning_points(start, h, a, marks, NEAR, times, values)
+    count = turning_points(roots(ORDER + 1), start, h, a, marks, NEAR, times, values)
     assert values[:count].tolist() == [9.0, 2.0, 52.0]
     out = np.empty(3)
     insulin_window(start, h, a, marks, 0.0, 30.0, out)
@@ -297,3 +298,43 @@ def test_the_step_program_summarises_its_polynomials() -> None:
     found = np.array(result[8 + stepper.order + 1 :])
     np.testing.assert_allclose(found, summaries_of(a[None])[0], rtol=1e-6, atol=1e-9)
     assert Builder("none", 0).finish([]).flops == 0
+
+
+# ---- roots of many steps at once ------------------------------------------------------------------------------------
+
+
+@given(
+    st.lists(st.floats(-1, 1), min_size=ORDER - 1, max_size=ORDER - 1),
+    st.floats(0.05, 0.95),
+    st.floats(0.3, 3.0),
+    st.booleans(),
+)
+def test_one_root_is_found_as_brent_finds_it(rest: list[float], place: float, steep: float, up: bool) -> None:
+    # a strictly rising (or falling) polynomial through 0 at `place`: slope at least half of `steep`
+    k = np.arange(2, ORDER + 1)
+    tail = 0.5 * steep * np.array(rest) / np.sum(k * np.abs(rest)) if np.any(rest) else np.zeros(ORDER - 1)
+    a = np.array([0.0, steep, *tail]) * (1.0 if up else -1.0)
+    a[0] = -np.polynomial.polynomial.polyval(place, a)
+    raised = a + 7.0 * (np.arange(ORDER + 1) == 0)
+    x, area, change = run(cross(ORDER + 1), [*raised, raised.sum(), 7.0])
+    assert change < 1e-4
+    assert x == pytest.approx(place, abs=1e-8)
+    exact = np.polynomial.polynomial.polyint(raised)
+    assert area == pytest.approx(np.polynomial.polynomial.polyval(x, exact), rel=1e-12)
+    bowl = np.polynomial.polynomial.polyint(a)[: ORDER + 1]  # its slope is a without the last power
+    slope = bowl[1:] * np.arange(1, ORDER + 1)
+    if slope[0] * slope.sum() < 0.0:
+        root = brentq(lambda t: np.polynomial.polynomial.polyval(t, slope), 0.0, 1.0, xtol=1e-14)
+        x, there, change = run(turn(ORDER + 1), [*bowl, slope.sum()])
+        assert x == pytest.approx(root, abs=1e-8)
+        assert there == pytest.approx(np.polynomial.polynomial.polyval(root, bowl), abs=1e-12)
+
+
+@given(st.lists(st.floats(-1, 1), min_size=ORDER + 1, max_size=ORDER + 1), st.floats(0.3, 1.2))
+def test_what_is_said_of_sign_changes_is_true(raw: list[float], shrink: float) -> None:
+    a = (np.array(raw) * shrink ** np.arange(ORDER + 1))[None, :]
+    said = sign_changes(a, summaries_of(a), 0)
+    slopes = np.polynomial.polynomial.polyval(np.linspace(0, 1, 4001), a[0, 1:] * np.arange(1, ORDER + 1))
+    signs = np.sign(slopes[np.abs(slopes) > 1e-12])
+    if said >= 0:
+        assert np.count_nonzero(np.diff(signs)) == said
