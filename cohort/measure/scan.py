@@ -17,9 +17,9 @@ Array = NDArray[np.float64]
 class Scan(NamedTuple):
     """A column of one course, read.
 
-    roots: `cohort.measure.roots.roots`; start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries: float64[steps, SUMMARY]; area, square:
-    float64[steps + 1], the integrals of the column and of (column - centre)^2 from the course's beginning to each
-    step's start; times, values: float64[turns], all turning points.
+    roots: `cohort.measure.roots.roots`; start, step_size: float64[steps]; a: float64[steps, order + 1]; summaries:
+    float64[steps, SUMMARY]; area, square: float64[steps + 1], the integrals of the column and of (column - centre)^2 from
+    the course's beginning to each step's start; times, values: float64[turns], all turning points.
     """
 
     roots: Roots

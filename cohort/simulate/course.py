@@ -76,10 +76,14 @@ class Courses:
     def sample(self, times_min: Array, out: Array | None = None) -> Array:
         """Values at rising `times_min`: float64[n, columns, times], NaN outside what was recorded.
 
-        `out`, where given, is filled and returned instead of a new array; places outside keep what they held.
+        `out`, where given, is filled and returned instead of a new array; places outside keep what they held. Raises
+        ValueError where it has another shape.
         """
+        shape = (len(self.n_steps), len(self.columns), len(times_min))
         if out is None:
-            out = np.full((len(self.n_steps), len(self.columns), len(times_min)), np.nan)
+            out = np.full(shape, np.nan)
+        elif out.shape != shape:
+            raise ValueError(f"out has shape {out.shape}, not {shape}")
         _sample(self.start, self.step_size, self.record, self.orders, self.n_steps, np.asarray(times_min, float), out)
         return out
 
