@@ -147,6 +147,18 @@ CLAMP_OUTCOMES: tuple[Column, ...] = (
     Column("clamp_target_mg_dl", "float64", "mg/dL", "the value glucose was held at"),
 )
 
+FORCED_OUTCOMES: tuple[Column, ...] = (
+    Column("forcing_period_min", "float64", "min", "period of the arm's periodic input"),
+    Column("locking", "text", "",
+           "n:m, n insulin maxima in m forcing cycles after which the state repeats; aperiodic; undecided"),
+    Column("response_period_min", "float64", "min", "m forcing periods over n; their mean spacing where aperiodic"),
+    Column("response_glucose_amplitude_mg_dl", "float64", "mg/dL", "peak to trough of glucose under the periodic input"),
+    Column("response_lag_min", "float64", "min",
+           "from the input's peak (switching on) to the highest glucose; null unless locked"),
+    Column("response_multiplier", "float64", "1",
+           "modulus of the leading Floquet multiplier of the return map; null unless locked"),
+)  # fmt: skip
+
 MEAL_OUTCOMES: tuple[Column, ...] = (
     Column("meal", "int64", "", "which meal of the arm, from 1"),
     Column("meal_time_min", "float64", "min", "when it was eaten, from the arm's beginning"),

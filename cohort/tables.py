@@ -26,6 +26,7 @@ from cohort.quantities import (
     COURSE_COLUMNS,
     CYCLE_OUTCOMES,
     DETECTION_COLUMNS,
+    FORCED_OUTCOMES,
     INCIDENCE_COLUMNS,
     INPUT_PARAMETERS,
     KEY_COLUMNS,
@@ -97,9 +98,9 @@ def subjects_schema(varied: Sequence[str], with_id: bool, with_person: bool = Fa
     return Schema("subjects", (*(KEY_COLUMNS[k] for k in keys), *parameters))
 
 
-def outcomes_schema(clamped: bool) -> Schema:
-    """outcomes/<arm>/: a row a subject."""
-    extra = CLAMP_OUTCOMES if clamped else ()
+def outcomes_schema(clamped: bool, forced: bool = False) -> Schema:
+    """outcomes/<arm>/: a row a subject; with what clamps and periodic inputs add."""
+    extra = (*(CLAMP_OUTCOMES if clamped else ()), *(FORCED_OUTCOMES if forced else ()))
     keys = tuple(KEY_COLUMNS[k] for k in ("subject", "arm", "model"))
     return Schema("outcomes", (*keys, *CYCLE_OUTCOMES, *WINDOW_OUTCOMES, *extra))
 

@@ -18,7 +18,7 @@ LOOPS = {
     "cohort.simulate.run": ("integrate", "map_rows"),
     "cohort.measure.outcomes": ("window_rows", "meal_rows"),
     "cohort.measure.regime": ("orbit_rows",),
-    "cohort.measure.cycle": ("_marks", "orbit_rows", "_spectra", "solve_each", "leading_directions", "map_rows"),
+    "cohort.measure.cycle": ("_marks", "orbit_rows", "spectra", "solve_each", "leading_directions", "map_rows"),
     "cohort.model.rest": ("_solve", "_spectra"),
 }
 """Compiled loops that Python calls in a run of outcomes."""

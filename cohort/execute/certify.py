@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.errors import Problem, StudyError
+from cohort.measure.outcomes import with_own_periods
 from cohort.model.body import Body, body
 from cohort.model.inputs import People, inputs
 from cohort.model.protocol import Arm
@@ -79,7 +80,8 @@ def certify_study(study: Study, n: int) -> Certificate:
     found = body(study.model)
     own = np.ascontiguousarray(values[:, : len(found.card.parameters)])
     them = People(weight, values[:, -2], values[:, -1], np.full(len(subject), np.nan))
-    return Certificate(tuple(ArmErrors(arm.name, subject, _errors(found, own, them, arm)) for arm in arms))
+    errors = (_errors(found, own, with_own_periods(found, own, them, arm), arm) for arm in arms)
+    return Certificate(tuple(ArmErrors(arm.name, subject, e) for arm, e in zip(arms, errors, strict=True)))
 
 
 def _errors(found: Body, own: Array, people: People, arm: Arm) -> Array:

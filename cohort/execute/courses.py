@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from cohort.execute.identity import arm_identity
 from cohort.execute.stages import times
+from cohort.measure.outcomes import with_own_periods
 from cohort.model.body import body
 from cohort.model.inputs import People
 from cohort.model.protocol import Arm
@@ -79,8 +80,8 @@ def _write(study: Study, out: Path, arm: Arm, rows: NDArray[np.int64], why: NDAr
     own = np.ascontiguousarray(values[:, : len(found.card.parameters)])
     weight = np.concatenate([p.body_weight_kg for p in people])
     grid = times(arm.duration_min, study.output.every_min)
-    nobody = np.full(len(rows), np.nan)
-    course = simulate_values(found, own, People(weight, values[:, -2], values[:, -1], nobody), arm, SEEN)
+    who = with_own_periods(found, own, People(weight, values[:, -2], values[:, -1], np.full(len(rows), np.nan)), arm)
+    course = simulate_values(found, own, who, arm, SEEN)
     sampled = course.sample(grid)
     n = len(grid)
     columns = {name: sampled[:, i].ravel() for i, name in enumerate(SEEN)}

@@ -51,7 +51,8 @@ def validate(study: Study, arm_name: str | None, times_min: Array, missed: float
                                   f"{times_min[-1] / 60:g} h; try --set \"arms.{arm.name}.duration='"
                                   f"{(arm.settle_min + times_min[-1]) / 60:g} h'\"", where)])  # fmt: skip
     people = draw(study.recipe, 0, min(study.recipe.count, MOST_PEOPLE))
-    found = outcomes(study.model, people.values, people.body_weight_kg, arm, arm.settle_min + times_min)
+    when = arm.settle_min + times_min
+    found = outcomes(study.model, people.values, people.body_weight_kg, arm, when, responses=False)
     schedule = Schedule("as sampled", tuple(float(t) for t in times_min), missed)
     true = {analyte: np.ascontiguousarray(found.sampled[:, i]) for i, analyte in enumerate(ANALYTES)}
     seen = observations(true, schedule, study.sampling.readings, rule, study.seed, arm.name, (0, len(people.subject)),

@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 
 from cohort.model.body import body
-from cohort.model.inputs import People, steady_input
+from cohort.model.inputs import People, is_forced, steady_input
 from cohort.model.protocol import Arm
 from cohort.model.rest import at_rest
 from cohort.observe.white import false_pulses_per_h
@@ -38,6 +38,7 @@ def arm_facts(arm: Arm) -> dict[str, Any]:
         "disagrees": steady is not None and disagrees(steady),
         "clamped": arm.clamp is not None,
         "forcing_period_min": None if np.isnan(forcing_period_min(arm)) else forcing_period_min(arm),
+        "forced": is_forced(arm) and steady is not None,
     }
 
 

@@ -17,10 +17,17 @@ from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
 from cohort.observe.sampling import Schedule
 from cohort.population.laws import Empirical
-from cohort.quantities import CLAMP_OUTCOMES, COURSE_COLUMNS, CYCLE_OUTCOMES, MEAL_OUTCOMES, WINDOW_OUTCOMES
+from cohort.quantities import (
+    CLAMP_OUTCOMES,
+    COURSE_COLUMNS,
+    CYCLE_OUTCOMES,
+    FORCED_OUTCOMES,
+    MEAL_OUTCOMES,
+    WINDOW_OUTCOMES,
+)
 from cohort.study import Study
 
-COLUMNS = (CYCLE_OUTCOMES, WINDOW_OUTCOMES, CLAMP_OUTCOMES, MEAL_OUTCOMES, COURSE_COLUMNS)
+COLUMNS = (CYCLE_OUTCOMES, WINDOW_OUTCOMES, CLAMP_OUTCOMES, FORCED_OUTCOMES, MEAL_OUTCOMES, COURSE_COLUMNS)
 
 GROWING = ("subjects.count", "ranking.base", "ranking.max_runs")
 """Keys that may grow in a folder that holds results; arms and outcomes to rank may be added."""

@@ -89,9 +89,9 @@ def _draw_rows(study: Study, arm: Arm, k: int) -> list[Values]:
     recipe = population_draw(study.recipe, k)
     people = draw(recipe, 0, recipe.count)
     eligible = _eligible(study, people)
-    found = outcomes(study.model, people.values, people.body_weight_kg, arm, sample_times(study, arm))
+    found = outcomes(study.model, people.values, people.body_weight_kg, arm, sample_times(study, arm), responses=False)
     truly = found.outcomes["oscillates"]
-    seen = observed(study, arm, found.sampled, 0, recipe.count)
+    seen = observed(study, arm, found.sampled, 0, recipe.count, np.full(recipe.count, np.nan))  # detected or not is all
     groups: list[tuple[str, Stratum | None, Mask]] = [
         (EVERYONE, recipe.strata[0] if len(recipe.strata) == 1 else None, eligible)
     ]
@@ -120,7 +120,7 @@ def _eligible(study: Study, people: Subjects) -> Mask:
     for arm in study.arms:
         bounds = [b for b in study.selection.eligible if b.arm == arm.name]
         if bounds:
-            found = outcomes(study.model, people.values, people.body_weight_kg, arm).outcomes
+            found = outcomes(study.model, people.values, people.body_weight_kg, arm, responses=False).outcomes
             for bound in bounds:
                 value = np.asarray(found[bound.outcome], dtype=float)
                 kept &= (value >= bound.low) & (value <= bound.high)

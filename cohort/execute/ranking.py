@@ -271,7 +271,7 @@ class _Work:
         return all(np.array_equal(stored[name], wanted[name], equal_nan=True) for name in names)
 
     def _outcomes(self, values: Array, weight: Array, arm: Arm) -> Values:
-        found = outcomes(self.study.model, values, weight, arm)
+        found = outcomes(self.study.model, values, weight, arm, responses=False)
         columns: Values = dict(found.outcomes)
         if len(found.meals["row"]):
             for name, column in found.meals.items():

@@ -11,8 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from cohort.compiled import cache_folder
-from cohort.execute.facts import forcing_period_min
 from cohort.measure.outcomes import outcomes
+from cohort.model.inputs import is_forced
 from cohort.model.protocol import Arm, Meal
 from cohort.observe.design import make_design
 from cohort.observe.detector import observations
@@ -54,7 +54,9 @@ def tables(study: Study) -> tuple[Table, ...]:
         for arm in study.arms
         for schedule in (study.sampling.schedules if study.sampling else ())
     )
-    last = tuple(Table(f"outcomes/{arm.name}", arm, outcomes_schema(arm.clamp is not None)) for arm in study.arms)
+    last = tuple(
+        Table(f"outcomes/{arm.name}", arm, outcomes_schema(arm.clamp is not None, is_forced(arm))) for arm in study.arms
+    )
     return (first, *meals, *seen, *last)
 
 
@@ -79,7 +81,8 @@ def lost_rows(study: Study, arms: Sequence[str], subject: int) -> dict[str, Valu
             continue
         for name, column in values.items():
             if name not in KEPT_OF_THE_LOST:
-                values[name] = np.full(column.shape, np.nan if column.dtype.kind == "f" else -1, column.dtype)
+                nothing = {"f": np.nan, "O": None}.get(column.dtype.kind, -1)
+                values[name] = np.full(column.shape, nothing, column.dtype)
         if folder.startswith("outcomes/"):
             values["regime"][:] = REGIMES.index("failed")
             values["failure"][:] = FAILURES.index("process died")
@@ -104,7 +107,8 @@ def _rows(study: Study, people: Subjects, integrated: Array, arms: Sequence[str]
         if arm.name not in arms:
             continue
         measured = outcomes(study.model, integrated, people.body_weight_kg, arm, sample_times(study, arm))
-        found |= observed(study, arm, measured.sampled, start, stop)
+        forcing = measured.outcomes.get("forcing_period_min", np.full(stop - start, np.nan))
+        found |= observed(study, arm, measured.sampled, start, stop, forcing)
         found[f"outcomes/{arm.name}"] = {"subject": people.subject, **measured.outcomes}
         if has_meals(arm):
             meals = dict(measured.meals)
@@ -119,8 +123,9 @@ def sample_times(study: Study, arm: Arm) -> Array | None:
     return np.unique([arm.settle_min + t for s in study.sampling.schedules for t in s.times_min])
 
 
-def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int) -> dict[str, Values]:
-    """Rows of observations/ of subjects start..stop-1, by table folder; sampled: float64[n, 2, times of sample_times]."""
+def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int, forcing: Array) -> dict[str, Values]:
+    """Rows of observations/ of subjects start..stop-1, by table folder; sampled: float64[n, 2, times of sample_times];
+    forcing: the period of each one's periodic input (min), NaN without."""
     found: dict[str, Values] = {}
     if study.sampling is None:
         return found
@@ -129,7 +134,6 @@ def observed(study: Study, arm: Arm, sampled: Array, start: int, stop: int) -> d
     for schedule in plan.schedules:
         at = np.searchsorted(times, [arm.settle_min + t for t in schedule.times_min])
         true = {analyte: np.ascontiguousarray(sampled[:, i, at]) for i, analyte in enumerate(ANALYTES)}
-        forcing = np.full(stop - start, forcing_period_min(arm))
         found[f"observations/{arm.name}/{schedule.name}"] = observations(
             true, schedule, plan.readings, plan.rule, study.seed, arm.name, (start, stop), forcing, null_folder()
         )

@@ -296,7 +296,7 @@ def _second_multiplier(monodromy: Array) -> Array:
     """Modulus of the largest Floquet multiplier, the one nearest to 1 left out: float64[n]."""
     n, size, _ = monodromy.shape
     values = np.full((n, size), np.nan + 0j)
-    _spectra(monodromy, values)
+    spectra(monodromy, values)
     distance = np.abs(values - 1.0)
     distance[np.isnan(distance)] = np.inf
     kept = np.abs(values)
@@ -305,7 +305,7 @@ def _second_multiplier(monodromy: Array) -> Array:
 
 
 @jit
-def _spectra(matrices, values):  # type: ignore[no-untyped-def]
+def spectra(matrices, values):  # type: ignore[no-untyped-def]
     for s in range(matrices.shape[0]):
         if np.all(np.isfinite(matrices[s])):
             spectrum(matrices[s], values[s])

@@ -2,17 +2,26 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
 
+from cohort.measure.entrain import respond
 from cohort.measure.meals import MEAL_COLUMNS, meal_rows
 from cohort.measure.regime import BISTABLE, FAILED, SUSTAINED, UNDECIDED, Cycles, cycles
 from cohort.measure.roots import reading
 from cohort.measure.windows import GLUCOSE_WINDOW, INSULIN_WINDOW, LEVELS_MG_DL, column_means, window_rows
 from cohort.model.body import Body, body
-from cohort.model.inputs import People, meal_times, steady_input
+from cohort.model.inputs import (
+    People,
+    has_natural,
+    is_forced,
+    meal_times,
+    own_forcing_period,
+    settles_to_forcing,
+    steady_input,
+)
 from cohort.model.protocol import Arm, Meal
 from cohort.quantities import CLAMP_OUTCOMES
 from cohort.simulate.clamp import ClampedCourses, clamped_courses
@@ -41,13 +50,19 @@ class Rows:
 
 
 def outcomes(
-    model: str | Body, values: Array, body_weight_kg: Array, arm: Arm, sample_min: Array | None = None
+    model: str | Body,
+    values: Array,
+    body_weight_kg: Array,
+    arm: Arm,
+    sample_min: Array | None = None,
+    responses: bool = True,
 ) -> Rows:
     """Simulate and measure n subjects in one arm.
 
     values: float64[n, len(parameters) + 2], canonical order, then meal_absorption (min) and meal_bioavailability
     (NaN where the arm's hold); body_weight_kg: float64[n], NaN where there is none; sample_min: rising times from the
-    arm's beginning at which courses are sampled as well. Missing numbers are NaN; words are
+    arm's beginning at which courses are sampled as well; responses: whether what periodic inputs add is
+    wanted. Missing numbers are NaN; words are
     int8 codes into REGIMES, FAILURES and CYCLE_NOTES; booleans int8; -1 is missing.
     """
     found = body(model) if isinstance(model, str) else model
@@ -55,15 +70,29 @@ def outcomes(
     people = People(body_weight_kg, values[:, -2], values[:, -1], np.full(len(values), np.nan))
     steady = steady_input(arm, people)
     tends = None if steady is None else cycles(found, with_secretion(own, arm.secretion), *steady)
+    if tends is not None:
+        people = replace(people, natural_period_min=tends.own_period)
     period = np.full(len(values), np.nan) if tends is None else tends.linear_period
     period = np.where(np.isfinite(period), period, BASELINE_MIN)
     read = _measure(found, own, people, arm, period, np.empty(0) if sample_min is None else sample_min)
-    forced = _forced(arm)
+    forced = is_forced(arm)
     columns = _cycle_columns(tends, read.status, forced) | {"forced": np.full(len(values), int(forced), np.int8)}
     columns |= _window_columns(read.window, arm.duration_min - arm.settle_min)
     if arm.clamp is not None:
         columns |= {name: read.clamp[:, i].copy() for i, name in enumerate(CLAMP_COLUMNS)}
+    if forced and responses:
+        columns |= _response_columns(
+            found, with_secretion(own, arm.secretion), people, arm, columns["regime"] == FAILED
+        )
     return Rows(columns, _meal_table(read.meals, eaten(arm)), read.sampled)
+
+
+def with_own_periods(found: Body, own: Array, people: People, arm: Arm) -> People:
+    """The same people with their own periods (min), where an input of the arm asks for them."""
+    steady = steady_input(arm, people) if has_natural(arm) else None
+    if steady is None:
+        return people
+    return replace(people, natural_period_min=cycles(found, with_secretion(own, arm.secretion), *steady).own_period)
 
 
 @dataclass
@@ -133,8 +162,18 @@ def eaten(arm: Arm) -> Array:
     return np.array(sorted(times))
 
 
-def _forced(arm: Arm) -> bool:
-    return any(hasattr(shape, "period_min") for shape in (*arm.glucose, *arm.insulin))
+def _response_columns(found: Body, parameters: Array, people: People, arm: Arm, failed: NDArray[np.bool_]) -> Columns:
+    """FORCED_OUTCOMES; null where the arm does not come to one periodic input, or the row failed."""
+    n, steady = len(parameters), steady_input(arm, people)
+    period = own_forcing_period(arm, people.natural_period_min)
+    names = ("response_period_min", "response_glucose_amplitude_mg_dl", "response_lag_min", "response_multiplier")
+    words = np.full(n, None, dtype=object)
+    columns: Columns = {"forcing_period_min": period, "locking": words} | {name: np.full(n, np.nan) for name in names}
+    if steady is None or not settles_to_forcing(arm):
+        return columns
+    seen = respond(found, parameters, people, arm, steady, np.where(failed, np.nan, period))
+    numbers = (seen.response_period, seen.amplitude, seen.lag, seen.multiplier)
+    return columns | {"locking": seen.words()} | dict(zip(names, numbers, strict=True))
 
 
 def _meal_table(meals: Array, times: Array) -> Columns:

@@ -45,7 +45,8 @@ class Cycles:
 
     regime: int8 codes into REGIMES; growth per min and linear period (min, NaN where the leading eigenvalue is real):
     float64[n]; equilibrium: float64[n, 2], glucose mg/dL and insulin mU/L; bistable_searched bool[n]; period, error
-    (relative) float64[n]; turn: float64[n, 3, 4], per CYCLE_COLUMNS lowest, highest, mean and time of the highest.
+    (relative) float64[n]; own_period float64[n]: the orbit's, else that of the slowest ringing, NaN where nothing rings;
+    turn: float64[n, 3, 4], per CYCLE_COLUMNS lowest, highest, mean and time of the highest.
     Orbit columns are NaN where there is no orbit.
     """
 
@@ -55,6 +56,7 @@ class Cycles:
     equilibrium: Array
     bistable_searched: NDArray[np.bool_]
     period: Array
+    own_period: Array
     error: Array
     turn: Array
 
@@ -78,22 +80,32 @@ def cycles(body: Body, parameters: Array, Gin: Array, Iin: Array) -> Cycles:
     _search_second_attractor(subjects, np.flatnonzero(searched), regime, orbits)
     turn = np.full((n, len(CYCLE_COLUMNS), ORBIT_COLUMNS), np.nan)
     _measure(subjects, np.flatnonzero(orbits.found), orbits, turn)
+    own = np.where(orbits.found, orbits.period, _ringing_period(rest.eigenvalues))
     return Cycles(
-        regime, growth, linear_period, _seen_at_rest(subjects), searched, orbits.period, orbits.error, turn
+        regime, growth, linear_period, _seen_at_rest(subjects), searched, orbits.period, own, orbits.error, turn
     )  # fmt: skip
 
 
 def _at_rest_regime(eigenvalues: NDArray[np.complex128]) -> NDArray[np.int8]:
     growth = eigenvalues[:, 0].real
-    complex_ones = np.where(eigenvalues.imag > 0.0, eigenvalues.real, -np.inf)
-    slowest = complex_ones.argmax(axis=1)
-    pair = eigenvalues[np.arange(len(eigenvalues)), slowest]
+    pair = _slowest_pair(eigenvalues)
     with np.errstate(divide="ignore", invalid="ignore"):
         rings = (pair.imag > 0.0) & (2.0 * np.pi * pair.real / pair.imag >= np.log(RINGING_KEPT))
     regime = np.where(rings, DAMPED, QUIET)
     regime = np.where(growth > BORDER_PER_MIN, SUSTAINED, regime)
     regime = np.where(np.abs(growth) <= BORDER_PER_MIN, UNDECIDED, regime)
     return np.where(np.isfinite(growth), regime, FAILED).astype(np.int8)
+
+
+def _slowest_pair(eigenvalues: NDArray[np.complex128]) -> NDArray[np.complex128]:
+    """Of each subject's complex eigenvalues the one that fades last; a real one where there is none."""
+    slowest = np.where(eigenvalues.imag > 0.0, eigenvalues.real, -np.inf).argmax(axis=1)
+    return np.asarray(eigenvalues[np.arange(len(eigenvalues)), slowest])
+
+
+def _ringing_period(eigenvalues: NDArray[np.complex128]) -> Array:
+    rate = _slowest_pair(eigenvalues).imag
+    return np.asarray(np.where(rate > 0.0, 2.0 * np.pi / np.where(rate > 0.0, rate, 1.0), np.nan))
 
 
 def _keep(orbits: Orbits, rows: NDArray[np.int64], found: Orbits) -> None:

@@ -114,14 +114,16 @@ class _Pieces:
         elif isinstance(shape, OnOff):
             self._on_off(shape, channel, shape.rate * scale)
         elif isinstance(shape, Sine):
-            self.add(CONSTANT, channel, 0.0, self.duration, shape.mean * scale)
-            angular = 2.0 * np.pi / self.period(shape.period_min)
-            amplitude = shape.mean * shape.relative_amplitude * scale
-            self.add(WAVE, channel, 0.0, self.duration, amplitude, angular, shape.phase)
+            self.sine(shape, channel, self.full(self.duration), self.period(shape.period_min))
         elif isinstance(shape, Meal):
             self._meal(shape, channel, shape.amount_mg * scale)
         else:
             self.boluses.append((channel, self.full(shape.time_min), self.full(shape.amount * scale)))
+
+    def sine(self, shape: Sine, channel: int, end: Array, period: Array) -> None:
+        mean = shape.mean * self.scale(shape.per_kg)
+        self.add(CONSTANT, channel, 0.0, end, mean)
+        self.add(WAVE, channel, 0.0, end, mean * shape.relative_amplitude, 2.0 * np.pi / period, shape.phase)
 
     def period(self, period: float | Natural) -> Array:
         if isinstance(period, Natural):
@@ -161,6 +163,11 @@ def inputs(arm: Arm, people: People) -> Inputs:
     for channel, shapes in ((GLUCOSE, arm.glucose), (INSULIN, arm.insulin)):
         for shape in shapes:
             pieces.shape(shape, channel)
+    return _assembled(pieces, np.full(people.count, arm.duration_min))
+
+
+def _assembled(pieces: _Pieces, duration: Array) -> Inputs:
+    people = pieces.people
     columns = [np.column_stack(part) if part else np.empty((people.count, 0)) for part in _transposed(pieces)]
     times, amounts = (
         np.column_stack([b[i] for b in pieces.boluses]) if pieces.boluses else np.empty((people.count, 0))
@@ -171,19 +178,68 @@ def inputs(arm: Arm, people: People) -> Inputs:
         np.array([r[0] for r in pieces.rows], dtype=np.int64),
         np.array([r[1] for r in pieces.rows], dtype=np.int64),
         on, off, amplitude, rate, phase,
-        _stops(np.column_stack([on, off, times]), arm.duration_min),
+        _stops(np.column_stack([on, off, times]), duration),
         np.ascontiguousarray(times), np.ascontiguousarray(amounts),
         np.array([b[0] for b in pieces.boluses], dtype=np.int64),
     )  # fmt: skip
+
+
+def forcing(arm: Arm) -> OnOff | Sine | None:
+    """The arm's first periodic input, glucose before insulin; None where it has none, or where others have another period."""
+    found = [shape for shape in (*arm.glucose, *arm.insulin) if isinstance(shape, OnOff | Sine)]
+    return found[0] if found and len({shape.period_min for shape in found}) == 1 else None
+
+
+def is_forced(arm: Arm) -> bool:
+    """Whether an arm has a periodic input."""
+    return any(isinstance(shape, OnOff | Sine) for shape in (*arm.glucose, *arm.insulin))
+
+
+def settles_to_forcing(arm: Arm) -> bool:
+    """Whether an arm's inputs come to one periodic input with nothing else that goes on changing."""
+    lasting = all(isinstance(s, Constant | Steps | OnOff | Sine) for s in (*arm.glucose, *arm.insulin))
+    return lasting and arm.clamp is None and forcing(arm) is not None
+
+
+def own_forcing_period(arm: Arm, own_period: Array) -> Array:
+    """The period of an arm's periodic input for people of these own periods, min: float64[n]; NaN where there is none."""
+    shape = forcing(arm)
+    if shape is None:
+        return np.full(len(own_period), np.nan)
+    if isinstance(shape.period_min, Natural):
+        return np.asarray(shape.period_min.factor * own_period, dtype=np.float64)
+    return np.full(len(own_period), shape.period_min)
+
+
+def has_natural(arm: Arm) -> bool:
+    """Whether an input's period is a multiple of the subject's own."""
+    shapes = (*arm.glucose, *arm.insulin)
+    return any(isinstance(getattr(shape, "period_min", None), Natural) for shape in shapes)
+
+
+def one_period(arm: Arm, people: People, period: Array) -> Inputs:
+    """One period of an arm's long-run inputs, each subject's own (min): constants, last rates of steps, periodic inputs."""
+    pieces = _Pieces(people, np.inf)
+    for channel, shapes in ((GLUCOSE, arm.glucose), (INSULIN, arm.insulin)):
+        for shape in shapes:
+            scale = pieces.scale(shape.per_kg)
+            if isinstance(shape, OnOff):
+                pieces.add(CONSTANT, channel, 0.0, shape.duty * period, shape.rate * scale)
+            elif isinstance(shape, Sine):
+                pieces.sine(shape, channel, period, period)
+            elif isinstance(shape, Constant | Steps):
+                rate = shape.rate if isinstance(shape, Constant) else shape.rates[-1]
+                pieces.add(CONSTANT, channel, 0.0, period, rate * scale)
+    return _assembled(pieces, period)
 
 
 def _transposed(pieces: _Pieces) -> list[list[Array]]:
     return [[row[2][i] for row in pieces.rows] for i in range(5)]
 
 
-def _stops(times: Array, end: float) -> Array:
+def _stops(times: Array, end: Array) -> Array:
     """Each row's distinct times in (0, end), then the end, then inf."""
-    times = np.sort(np.where((times > 0.0) & (times < end), times, np.inf), axis=1)
+    times = np.sort(np.where((times > 0.0) & (times < end[:, None]), times, np.inf), axis=1)
     repeated = np.zeros(times.shape, dtype=bool)
     repeated[:, 1:] = times[:, 1:] == times[:, :-1]
     times = np.sort(np.where(repeated, np.inf, times), axis=1)

@@ -10,8 +10,8 @@ from cohort.model.trace import Traced, derivative, name
 
 
 @functools.cache
-def tangent_stepper(body: Body, order: int, tolerance: float) -> Stepper:
-    """A stepper of states x and then v, with v' = J(x) v; the step size looks at x alone.
+def tangent_stepper(body: Body, order: int, tolerance: float, steady: bool = True) -> Stepper:
+    """A stepper of states x and then v, with v' = J(x) v; the step size looks at x alone. `steady`: as in `Body.stepper`.
 
     Lanes that hold one subject with different v therefore take the same steps, and their v are columns of the exact
     derivative of what the integrator computes.
@@ -21,4 +21,4 @@ def tangent_stepper(body: Body, order: int, tolerance: float) -> Stepper:
     slopes = {"d" + state: derivative(rate, moved) for state, rate in traced.rates.items()}
     states = (*traced.states, *slopes)
     augmented = Traced(states, traced.parameters, {**traced.rates, **slopes}, {}, traced.rest_of, traced.rest)
-    return Stepper(augmented, (), True, order, tolerance, body.card.positive, watched=len(traced.states))
+    return Stepper(augmented, (), steady, order, tolerance, body.card.positive, watched=len(traced.states))

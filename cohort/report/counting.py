@@ -23,6 +23,8 @@ EVERYONE = "everyone"
 OSCILLATES = "oscillates"
 DETECTED, DETECTED_TRUE, DETECTED_FALSE = "detected", "detected and oscillating", "detected and not oscillating"
 DETECTED_AT_PERIOD = "detected at the true period"
+LOCKED_1_1, LOCKED_OTHERWISE, APERIODIC = "locked 1:1", "locked otherwise", "aperiodic"
+CAPTURED = "oscillating and locked 1:1"
 PERIOD_WITHIN = 0.1
 """A detected period within 10 % of the limit cycle's counts as the true one; an alias does not."""
 _YES = tuple(REGIMES.index(r) for r in ("sustained", "bistable"))
@@ -58,10 +60,12 @@ def count_all(results: Results, who: Chosen | None) -> list[Count]:
         steady = results.record["arm_facts"][arm]["steady_mg_per_min"] is not None
         if steady:
             found += _grouped(results, arm, None, regime_tally(results, arm, who), _regime_shares)
+        if results.record["arm_facts"][arm].get("forced"):
+            found += _grouped(results, arm, None, locking_tally(results, arm, who), _locking_shares)
         for schedule in results.schedules:
             tally = detection_tally(results, arm, schedule, who)
             shares = _detection_shares if steady else _detected_only
-            if steady and results.record["arm_facts"][arm].get("forcing_period_min"):
+            if steady and results.record["arm_facts"][arm].get("forced"):
                 shares = _split_shares  # its own period is that of the body without the forcing
             found += _grouped(results, arm, schedule, tally, shares)
     return found
@@ -76,6 +80,23 @@ def regime_tally(results: Results, arm: str, who: Chosen | None) -> Tally:
         return np.where(regime < 0, len(REGIMES), regime).astype(np.int64)
 
     return _tally(results, who, cells, len(REGIMES) + 1)
+
+
+def locking_tally(results: Results, arm: str, who: Chosen | None) -> Tally:
+    """Subjects by how a periodic input captures them (1:1, otherwise, aperiodic, unknown) and whether they oscillate
+    without it (no, yes or unknown)."""
+
+    def cells(number: int) -> Codes:
+        table = read_part(results.folder / "outcomes" / arm, number, ["locking", "oscillates"])
+        truly = numbers(table, "oscillates")
+        kind = _codes(table.column("locking"), ("1:1", "", APERIODIC, "undecided"))
+        locked = np.array([w is not None and ":" in w for w in table.column("locking").to_pylist()], dtype=bool)
+        kind = np.where(kind >= 0, kind, np.where(locked, 1, 3))
+        return np.asarray(
+            3 * kind + np.where(np.isnan(truly), UNKNOWN, np.where(truly == 1.0, YES, NO)), dtype=np.int64
+        )
+
+    return _tally(results, who, cells, 12)
 
 
 def detection_tally(results: Results, arm: str, schedule: str, who: Chosen | None) -> Tally:
@@ -164,6 +185,12 @@ class _Group:
             return share_of_scrambles(*whole)
         return share(*(int(x.sum()) for x in (whole[0], whole[2], whole[1])))
 
+    def among(self, cells: tuple[int, ...]) -> _Group:
+        """The subjects of these cells only; weighted ones are worth as many independent people as their part of the weight."""
+        total = float(self.weights.sum()) or 1.0
+        part = float(self.weights[:, list(cells)].sum()) / total
+        return _Group(self.weights[:, list(cells)], self.numbers[:, list(cells)], self.effective * part, self.plain)
+
 
 def _grouped(
     results: Results,
@@ -190,6 +217,13 @@ def _regime_shares(group: _Group) -> Iterator[tuple[str, Share]]:
     yield OSCILLATES, group.share(_YES, _UNRESOLVED)
     for i, regime in enumerate(REGIMES):
         yield regime, group.share((i,), () if i in _UNRESOLVED else _UNRESOLVED)
+
+
+def _locking_shares(group: _Group) -> Iterator[tuple[str, Share]]:
+    every, unknown = (NO, YES, UNKNOWN), (9, 10, 11)
+    for kind, name in enumerate((LOCKED_1_1, LOCKED_OTHERWISE, APERIODIC)):
+        yield name, group.share(tuple(3 * kind + t for t in every), unknown)
+    yield CAPTURED, group.among((YES, 3 + YES, 6 + YES, 9 + YES)).share((0,), (3,))
 
 
 def _cells(detected: int, truly: tuple[int, ...], right: tuple[int, ...] = (0, 1)) -> tuple[int, ...]:

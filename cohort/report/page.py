@@ -15,7 +15,7 @@ from cohort.model.catalogue import MODELS
 from cohort.quantities import ESTIMANDS, GLUCOSE_MG_DL_PER_MMOL_L, INSULIN_PMOL_PER_MU, REGIMES
 from cohort.report.answer import answer
 from cohort.report.clinic import NO_PROOF, PUBLISHED_FASTING
-from cohort.report.counting import EVERYONE, OSCILLATES
+from cohort.report.counting import APERIODIC, CAPTURED, EVERYONE, LOCKED_1_1, LOCKED_OTHERWISE, OSCILLATES
 from cohort.report.figures import Figure
 from cohort.report.gallery import gallery
 from cohort.report.results import Results
@@ -24,6 +24,7 @@ from cohort.tables import write_bytes
 MOST_ROWS_SHOWN = 400
 SECTIONS = {
     "who": "Who oscillates",
+    "forced": "Whom the periodic input captures",
     "cycles": "Period and amplitude",
     "excursions": "Glucose excursions",
     "courses": "Time courses",
@@ -34,6 +35,12 @@ SECTIONS = {
     "fasting": "Fasting values beside published ones",
     "method": "Method, definitions and limits",
 }
+LOCKINGS = (LOCKED_1_1, LOCKED_OTHERWISE, APERIODIC)
+ENTRAINED = (
+    "A body that does not oscillate by itself follows any input 1:1, so only those that do can be captured. In seven men an "
+    "infusion swinging by 33 % at 0.8 and at 1.2 times each one's own period captured everyone 1:1 (Sturis et al., J Clin "
+    "Invest 1991;87:439-445); where fewer are captured here, the model falls short of that or its people are more unlike."
+)
 REGIME_WORDS = {
     "sustained": "the equilibrium repels, and the orbit it tends to was found and closed",
     "damped": "the equilibrium attracts, and each cycle keeps at least 5 % of the one before: it rings",
@@ -70,7 +77,7 @@ def write_page(results: Results, summary: dict[str, Any]) -> Path:
 
 def _page(results: Results, summary: dict[str, Any], drawn: Sequence[tuple[str, Figure]]) -> str:
     bodies = {
-        "who": _regimes(summary), "cycles": "", "excursions": _quantiles(summary), "courses": "",
+        "who": _regimes(summary), "forced": _forced(summary), "cycles": "", "excursions": _quantiles(summary), "courses": "",
         "decides": _deciding(summary), "clinic": _clinic(summary), "recruit": _recruit(summary),
         "refused": _refused(summary), "fasting": _fasting(summary), "method": _method(results, summary),
     }  # fmt: skip
@@ -216,6 +223,23 @@ def _regimes(summary: dict[str, Any]) -> str:
         found += [_note(f"{arm}: {n:,} failed: {word}.") for word, n in facts["failures"].items()]
     words = "; ".join(f"{name}: {REGIME_WORDS[name]}" for name in REGIMES)
     return "".join(found) + (f'<p class="small">{escape(words)}.</p>' if found else "")
+
+
+def _forced(summary: dict[str, Any]) -> str:
+    """Locking by arm and stratum; empty without a periodic input."""
+    rows = []
+    for arm, facts in summary["arms"].items():
+        for stratum, counts in facts["strata"].items():
+            if CAPTURED in counts:
+                captured, words = counts[CAPTURED], "nobody oscillates"
+                if captured["of"]:
+                    interval = f"{_percent(captured['low'])} to {_percent(captured['high'])}"
+                    words = f"{_percent(captured['share'])} ({interval}) of {captured['of']:,}"
+                rows.append((arm, stratum, words, *(counts[k]["n"] for k in LOCKINGS), counts[CAPTURED]["unresolved"]))
+    if not rows:
+        return ""
+    head = ("arm", "who", "of those that oscillate by themselves, locked 1:1 (95 %)", *LOCKINGS, "unresolved of those")
+    return _scrolled(_table(head, rows, "Locking to the periodic input"), "Locking", "") + _note(ENTRAINED)
 
 
 def _both(unit: str, x: float) -> str:

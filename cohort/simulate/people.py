@@ -9,7 +9,7 @@ import numpy as np
 
 from cohort.errors import Problem, StudyError, nearest
 from cohort.model.body import Body, body
-from cohort.model.inputs import People
+from cohort.model.inputs import People, has_natural
 from cohort.model.protocol import Arm
 from cohort.quantities import INPUT_PARAMETERS
 from cohort.simulate.clamp import clamped_courses
@@ -23,13 +23,16 @@ def simulate(model: str | Body, parameters: Mapping[str, Any], arm: Arm, body_we
     parameters: by symbol, numbers or arrays of one length n, in the units of `cohort models`; what is not named is
     at its published value. meal_absorption (min) and meal_bioavailability may be named too. body_weight_kg: number or
     array, needed by per-kg rates only. Returns the courses of n subjects (one where all are plain numbers) with
-    every column of the model and, in arms with a clamp, its rate. Raises StudyError for names that do not exist.
+    every column of the model and, in arms with a clamp, its rate. Raises StudyError for names that do not exist, and for
+    arms whose period is a multiple of the subject's own.
     """
     found = body(model) if isinstance(model, str) else model
     allowed = (*found.card.parameters, *INPUT_PARAMETERS)
     wrong = [
         Problem(p, f"not a parameter of {found.card.name}{nearest(p, allowed)}") for p in parameters if p not in allowed
     ]
+    if has_natural(arm):
+        wrong.append(Problem("arm", "a period here is stated in minutes; cohort.run knows each subject's own"))
     if wrong:
         raise StudyError(wrong)
     n = max((np.size(v) for v in (*parameters.values(), body_weight_kg)), default=1)

@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from cohort.compiled import LANES, call_program, compile_program, jit, row_width
 from cohort.model.body import Body
-from cohort.model.inputs import Inputs, People, inputs, steady_input
+from cohort.model.inputs import Inputs, People, has_natural, inputs, steady_input
 from cohort.model.protocol import Arm, AtEquilibrium, AtState
 from cohort.model.rest import at_rest
 from cohort.model.taylor import Stepper
@@ -67,7 +67,15 @@ def with_secretion(values: Array, secretion: float) -> Array:
 
 
 def start_states(body: Body, values: Array, people: People, arm: Arm) -> Array:
-    """Where subjects begin: float64[n, states]; NaN where the equilibrium they begin at does not exist."""
+    """Where subjects begin: float64[n, states]; NaN where the equilibrium they begin at does not exist, or an input has a
+    multiple of a period of their own that they do not have."""
+    begin = _begin(body, values, people, arm)
+    if has_natural(arm):
+        begin[np.isnan(people.natural_period_min)] = np.nan
+    return begin
+
+
+def _begin(body: Body, values: Array, people: People, arm: Arm) -> Array:
     n = len(values)
     if isinstance(arm.start, AtState):
         return np.tile([arm.start.values[s] for s in body.card.states], (n, 1))
