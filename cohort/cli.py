@@ -57,9 +57,6 @@ def check(words: argparse.Namespace) -> int:
     print(describe(study, found))
     _warn(study.warnings)
     _fits(study, found, Path("results"))
-    if study.later:
-        print("note: checked, but `cohort run` refuses these until they are available:", file=sys.stderr)
-    _warn(study.later)
     return 0
 
 

@@ -333,3 +333,60 @@ DETECTION_COLUMNS: tuple[Column, ...] = (
     Column("pulses", "int64", "", "rises and falls beyond the stated number of assay SDs"),
     Column("power_at_forcing", "float64", "1", "normalised power at the forcing period; null without forcing"),
 )
+
+
+# ---- maps --------------------------------------------------------------------------------------------------------
+
+_BORN = (
+    Column("kind", "text", "", "hopf: a rhythm begins; fold: the leading eigenvalue is real"),
+    Column("period_min", "float64", "min", "period of what is born there"),
+    Column("lyapunov", "float64", "1/min",
+           "first Lyapunov coefficient, states over their typical sizes: < 0 born small and attracting"),
+    Column("born", "text", "", "the same in words"),
+)  # fmt: skip
+MAP_WINDOW_COLUMNS: tuple[Column, ...] = (
+    Column("variable", "text", "", "the parameter, or infusion, that is changed alone"),
+    Column("unit", "text", "", "its unit"),
+    Column("own", "float64", "", "its value in the body that is mapped"),
+    Column("oscillates", "bool", "", "the body that is mapped oscillates"),
+    _BORN[0],
+    Column("border", "float64", "", "where stability changes; null: nowhere in the physical range"),
+    Column("oscillates_side", "text", "", "above or below the border"),
+    *_BORN[1:],
+    Column("distance", "float64", "1", "border over own, minus 1"),
+    Column(
+        "fold", "float64", "", "where the orbit beside a stable equilibrium ends; null where there is no such strip"
+    ),
+)
+_PLACE = (
+    Column("x_name", "text", "", "the first variable"),
+    Column("y_name", "text", "", "the second variable"),
+    Column("x", "float64", "", "value of the first variable, in its own unit"),
+    Column("y", "float64", "", "value of the second variable, in its own unit"),
+)
+MAP_REGION_COLUMNS: tuple[Column, ...] = (
+    *_PLACE,
+    *(c for c in CYCLE_OUTCOMES if c.name in ("growth_per_min", "oscillates", "period_min", "glucose_amplitude_mg_dl")),
+)
+MAP_BORDER_COLUMNS: tuple[Column, ...] = (
+    Column("curve", "int64", "", "which curve, from 0"),
+    Column("point", "int64", "", "which point along it"),
+    *_PLACE,
+    *_BORN,
+    Column(
+        "fold_x", "float64", "", "x where the orbit beside a stable equilibrium ends; null where there is no such strip"
+    ),
+    Column("fold_y", "float64", "", "y of the same place"),
+)
+_FORCED_PLACE = (
+    Column("forcing_period_min", "float64", "min", "period of the sine"),
+    Column("relative_amplitude", "float64", "1", "its amplitude over its mean"),
+)
+MAP_LOCKING_COLUMNS: tuple[Column, ...] = (*_FORCED_PLACE, *FORCED_OUTCOMES[1:])
+MAP_TONGUE_COLUMNS: tuple[Column, ...] = (
+    Column("curve", "int64", "", "which curve, from 0"),
+    Column("point", "int64", "", "which point along it"),
+    FORCED_OUTCOMES[1],
+    Column("kind", "text", "", "fold: meets an orbit that repels; torus: a second frequency; flip: its period doubles"),
+    *_FORCED_PLACE,
+)

@@ -30,6 +30,11 @@ from cohort.quantities import (
     INCIDENCE_COLUMNS,
     INPUT_PARAMETERS,
     KEY_COLUMNS,
+    MAP_BORDER_COLUMNS,
+    MAP_LOCKING_COLUMNS,
+    MAP_REGION_COLUMNS,
+    MAP_TONGUE_COLUMNS,
+    MAP_WINDOW_COLUMNS,
     MEAL_OUTCOMES,
     PARAMETERS,
     POPULATION_COLUMNS,
@@ -118,6 +123,11 @@ RECRUITMENT = Schema("recruitment", RECRUITMENT_COLUMNS)
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
 SENSITIVITY = Schema("sensitivity", SENSITIVITY_COLUMNS)
 CONVERGENCE = Schema("convergence", CONVERGENCE_COLUMNS)
+MAP_WINDOWS = Schema("map/windows", MAP_WINDOW_COLUMNS)
+MAP_REGION = Schema("map/region", MAP_REGION_COLUMNS)
+MAP_BORDERS = Schema("map/borders", MAP_BORDER_COLUMNS)
+MAP_LOCKING = Schema("map/locking", MAP_LOCKING_COLUMNS)
+MAP_TONGUES = Schema("map/tongues", MAP_TONGUE_COLUMNS)
 
 
 def ranking_schema(varied: Sequence[str], clamped: bool, meals: int) -> Schema:

@@ -27,7 +27,7 @@ LAW_PARTS = ("lognormal", "normal", "uniform", "loguniform", "triangular", "beta
 def shown(key: Key) -> bool:
     """Available keys, the laws' own keys once only (under subjects.parameters.*)."""
     is_law = any(f".{law}" in key.path for law in LAW_PARTS)
-    return key.available and (not is_law or key.path.startswith("subjects.parameters.*"))
+    return not is_law or key.path.startswith("subjects.parameters.*")
 
 
 def table() -> str:

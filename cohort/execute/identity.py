@@ -35,6 +35,7 @@ GROWING = ("subjects.count", "ranking.base", "ranking.max_runs")
 UNSEEN = (
     "title",
     "output.",
+    "map.",
     "ranking.tolerance",
     "recruitment.",
     "subjects.eligible.",

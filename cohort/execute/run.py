@@ -22,6 +22,7 @@ from cohort.execute.courses import keep_courses
 from cohort.execute.facts import arm_facts, fasting_facts, sampling_facts
 from cohort.execute.identity import arm_identity, first_difference, subjects_identity
 from cohort.execute.limits import watch_disk
+from cohort.execute.maps import run_maps
 from cohort.execute.population import run_population
 from cohort.execute.progress import Progress
 from cohort.execute.ranking import run_ranking, slots_of, strays_of
@@ -62,8 +63,6 @@ def run_study(
     only: (k, n), the k-th of n shares of the cohort's shards and nothing else, for job arrays, several at once.
     Raises StudyError where the folder holds another study, RunError where it cannot finish, KeyboardInterrupt when
     interrupted (also by SIGTERM); what is done stays."""
-    if study.later:
-        raise StudyError(study.later)
     workers = workers or os.cpu_count() or 1
     began = time.monotonic()
     try:
@@ -150,6 +149,7 @@ def _all_runs(
     _compile(study)
     done, kept = _simulate(study, out, hands, shard_size, progress)
     keep_courses(study, out)
+    run_maps(study, out)
     slots = record["slots"]
     if study.recipe.population:
         made, there = run_population(study, out, hands, progress, slots)

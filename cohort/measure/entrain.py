@@ -81,15 +81,15 @@ class Responses:
 
 
 @dataclass(frozen=True)
-class _Forced:
+class Forced:
     """Subjects and one period of what they are given."""
 
     body: Body
     parameters: Array
     pieces: Inputs
 
-    def take(self, rows: Rows) -> _Forced:
-        return _Forced(self.body, self.parameters[rows], self.pieces.take(rows.tolist()))
+    def take(self, rows: Rows) -> Forced:
+        return Forced(self.body, self.parameters[rows], self.pieces.take(rows.tolist()))
 
     def step(self, x: Array) -> tuple[Array, Bools]:
         """The state one forcing period later, and whether it was reached."""
@@ -98,13 +98,13 @@ class _Forced:
         after, status = advance(prepared)
         return after, status == DONE
 
-    def tangents(self, x: Array) -> tuple[Array, Array]:
+    def tangents(self, x: Array, accuracy: tuple[int, float] = FINE) -> tuple[Array, Array]:
         """(state one period later, derivative of it with respect to x: float64[n, states, states])."""
         n, size = x.shape
         scale = typical(self.body)
         starts = np.concatenate([np.repeat(x, size, axis=0), np.tile(np.diag(scale), (n, 1))], axis=1)
         rows = np.repeat(np.arange(n), size)
-        stepper = tangent_stepper(self.body, *FINE, steady=self.pieces.steady)
+        stepper = tangent_stepper(self.body, *accuracy, steady=self.pieces.steady)
         wide = np.concatenate([scale, np.full(size, np.inf)])
         some = self.take(rows)
         final, _ = advance(assemble(stepper, some.parameters, starts, wide, some.pieces, (0, 0)))
@@ -120,31 +120,29 @@ def respond(
     parameters: float64[n, len(body.parameters)]; mean: glucose (mg/min) and insulin (mU/min) inputs at their means; period:
     the forcing period (min), float64[n], NaN where there is none (such subjects fail).
     """
-    n = len(parameters)
+    pieces = one_period(arm, people, np.where(np.isfinite(period), period, 1.0))
     start = at_rest(body, parameters, *mean).states
+    return responses(body, parameters, pieces, start, period, _input_peak(arm, period))
+
+
+def responses(body: Body, parameters: Array, pieces: Inputs, start: Array, period: Array, peak: Array) -> Responses:
+    """As `respond`, from one period of inputs, the states to begin at (float64[n, states]) and the time of the input's peak."""
     known = np.flatnonzero(np.isfinite(period) & np.isfinite(start).all(axis=1))
-    some = _Forced(body, parameters[known], one_period(arm, _people(people, known), period[known]))
-    found = _empty(n, start.shape[1], period)
+    found = _empty(len(start), start.shape[1], period)
     if not len(known):
         return found
+    some = Forced(body, parameters, pieces).take(known)
     kind, periods, multiplier, state = _settle(some, start[known])
     maxima, amplitude, when = _measure(some, state, np.maximum(periods, 1))
-    locked = kind == LOCKED
-    spell = periods * period[known]
-    with np.errstate(divide="ignore", invalid="ignore"):
-        response = np.where(maxima > 0, spell / np.maximum(maxima, 1), np.nan)
-    fine = np.isin(kind, (LOCKED, APERIODIC))
+    locked, fine = kind == LOCKED, np.isin(kind, (LOCKED, APERIODIC))
+    response = np.where(maxima > 0, periods * period[known] / np.maximum(maxima, 1), np.nan)
     found.kind[known], found.periods[known] = kind, np.where(fine, periods, 0)
     found.maxima[known] = np.where(fine, maxima, 0)
     found.response_period[known] = np.where(fine, response, np.nan)
     found.amplitude[known] = np.where(fine, amplitude, np.nan)
-    found.lag[known] = np.where(locked, np.mod(when - _input_peak(arm, period[known]), period[known]), np.nan)
+    found.lag[known] = np.where(locked, np.mod(when - peak[known], period[known]), np.nan)
     found.multiplier[known], found.state[known] = np.where(locked, multiplier, np.nan), state
     return found
-
-
-def _people(people: People, rows: Rows) -> People:
-    return People(*(getattr(people, name)[rows] for name in People.__dataclass_fields__))
 
 
 def _empty(n: int, states: int, period: Array) -> Responses:
@@ -167,7 +165,7 @@ def _input_peak(arm: Arm, period: Array) -> Array:
 # ---- settling and closing -----------------------------------------------------------------------------------------
 
 
-def _settle(forced: _Forced, x: Array) -> tuple[Rows, Rows, Array, Array]:
+def _settle(forced: Forced, x: Array) -> tuple[Rows, Rows, Array, Array]:
     """(kind, m, multiplier, state on the repeat or the last one reached) of every subject."""
     n, scale = len(x), typical(forced.body)
     kind, periods, multiplier = np.full(n, UNDECIDED), np.full(n, MOST_PERIODS), np.full(n, np.nan)
@@ -193,7 +191,7 @@ def _settle(forced: _Forced, x: Array) -> tuple[Rows, Rows, Array, Array]:
     return kind, periods, multiplier, state
 
 
-def _iterate(forced: _Forced, x: Array, periods: int) -> tuple[Array, Bools]:
+def _iterate(forced: Forced, x: Array, periods: int) -> tuple[Array, Bools]:
     """The last MOST_PERIODS + 1 states of so many periods: float64[n, MOST_PERIODS + 1, states]; whether all were reached."""
     fine, trail = np.ones(len(x), bool), [x]
     for _ in range(periods):
@@ -203,7 +201,7 @@ def _iterate(forced: _Forced, x: Array, periods: int) -> tuple[Array, Bools]:
     return np.stack(trail, axis=1), fine
 
 
-def _close(forced: _Forced, x: Array, distance: Array) -> tuple[Bools, Rows, Array, Array]:
+def _close(forced: Forced, x: Array, distance: Array) -> tuple[Bools, Rows, Array, Array]:
     """Close the repeats that the distances (float64[n, MOST_PERIODS]) hint at: (found, m, multiplier, state)."""
     n = len(x)
     found, periods, multiplier, state = np.zeros(n, bool), np.zeros(n, np.int64), np.full(n, np.nan), x.copy()
@@ -232,7 +230,7 @@ def _candidates(distance: Array) -> list[Rows]:
     return found
 
 
-def newton(forced: _Forced, x: Array, m: int) -> tuple[Bools, Array, Array]:
+def newton(forced: Forced, x: Array, m: int) -> tuple[Bools, Array, Array]:
     """Solve P^m(x) = x from x: (solved, state, modulus of the leading multiplier).
 
     A solution that repeats after fewer periods is none for m.
@@ -271,7 +269,7 @@ def _leading(matrices: Array) -> Array:
     return np.asarray(np.abs(values).max(axis=1))
 
 
-def _sooner(forced: _Forced, x: Array, m: int, scale: Array) -> Bools:
+def _sooner(forced: Forced, x: Array, m: int, scale: Array) -> Bools:
     """Whether a state that repeats after m periods already does after fewer."""
     sooner, after = np.zeros(len(x), bool), x
     for j in range(1, m):
@@ -285,7 +283,7 @@ def _sooner(forced: _Forced, x: Array, m: int, scale: Array) -> Bools:
 # ---- measuring ----------------------------------------------------------------------------------------------------
 
 
-def _measure(forced: _Forced, x: Array, periods: Rows) -> tuple[Rows, Array, Array]:
+def _measure(forced: Forced, x: Array, periods: Rows) -> tuple[Rows, Array, Array]:
     """(insulin maxima, glucose peak to trough, time of the highest glucose) over each subject's periods from x."""
     n = len(x)
     stepper = forced.body.stepper(("glucose_mg_dl", "insulin_mu_l"), forced.pieces.steady, ORDER, TOLERANCE)

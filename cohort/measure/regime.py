@@ -116,6 +116,16 @@ def _keep(orbits: Orbits, rows: NDArray[np.int64], found: Orbits) -> None:
         mine[some] = theirs[found.found]
 
 
+def second_attractors(subjects: Held) -> Orbits:
+    """Attracting orbits beside attracting equilibria, from glucose x 1.5 and x 0.6."""
+    n = len(subjects.Gin)
+    orbits = Orbits(
+        np.zeros(n, bool), np.full(subjects.rest.states.shape, np.nan), *(np.full(n, np.nan) for _ in range(3))
+    )
+    _search_second_attractor(subjects, np.arange(n), np.zeros(n, np.int8), orbits)
+    return orbits
+
+
 def _search_second_attractor(subjects: Held, rows: NDArray[np.int64], regime: NDArray[np.int8], orbits: Orbits) -> None:
     """Look for an orbit beside an attracting equilibrium, from glucose x 1.5 and x 0.6.
 

@@ -12,7 +12,7 @@ from cohort.errors import Problem, StudyError, nearest
 from cohort.model import equations
 from cohort.model.catalogue import MODELS, ModelCard
 from cohort.model.taylor import ORDER, TOLERANCE, Stepper
-from cohort.model.trace import INPUTS, Symbol, Traced, derivative, evaluator, substitute, trace
+from cohort.model.trace import INPUTS, Symbol, Traced, derivative, evaluator, name, substitute, trace
 from cohort.program import Program
 
 ARM_PARAMETERS = ("secretion",)
@@ -69,6 +69,24 @@ class Body:
         columns = [{state: Symbol("const", value=1.0)} for state in self.traced.states]
         slopes = [derivative(rate, along) for rate in self.traced.rates.values() for along in columns]
         return evaluator("jacobian", self._names, slopes)
+
+    @cached_property
+    def second(self) -> Program:
+        """States, Gin, Iin, parameters, u, v -> second derivative of the rates along u and v."""
+        return self._along(("u", "v"))
+
+    @cached_property
+    def third(self) -> Program:
+        """States, Gin, Iin, parameters, u, v, w -> third derivative of the rates along u, v and w."""
+        return self._along(("u", "v", "w"))
+
+    def _along(self, directions: tuple[str, ...]) -> Program:
+        rates, names = list(self.traced.rates.values()), list(self._names)
+        for direction in directions:
+            along = {state: name(f"{direction}.{state}") for state in self.traced.states}
+            rates = [derivative(rate, along) for rate in rates]
+            names += [f"{direction}.{state}" for state in self.traced.states]
+        return evaluator("along " + " ".join(directions), names, rates)
 
     @cached_property
     def balance(self) -> Program:

@@ -233,6 +233,15 @@ def one_period(arm: Arm, people: People, period: Array) -> Inputs:
     return _assembled(pieces, period)
 
 
+def sine_period(mean: Array, relative_amplitude: Array, period: Array) -> Inputs:
+    """One period of a glucose input mean (1 + a sin(2 pi t / period)) for n subjects, float64[n] each."""
+    nobody = np.full(len(mean), np.nan)
+    pieces = _Pieces(People(nobody, nobody, nobody, nobody), np.inf)
+    pieces.add(CONSTANT, GLUCOSE, 0.0, period, mean)
+    pieces.add(WAVE, GLUCOSE, 0.0, period, mean * relative_amplitude, 2.0 * np.pi / period)
+    return _assembled(pieces, period)
+
+
 def _transposed(pieces: _Pieces) -> list[list[Array]]:
     return [[row[2][i] for row in pieces.rows] for i in range(5)]
 

@@ -220,3 +220,75 @@ def series_figure(panels: Sequence[Panel], columns: int = 3) -> str:
             ax.set_visible(False)
         text = as_svg(canvas).replace("currentColor", INK)
     return '<?xml version="1.0" encoding="utf-8"?>\n' + text
+
+
+def window_bars(names: Sequence[str], spans: Sequence[Sequence[tuple[float, float]]]) -> str:
+    """Stretches of each variable over its own value (0 and inf: open) as bars on a logarithmic axis, one a row from the top."""
+    low, high = 0.2, 5.0
+    with _drawn(7.2, 0.6 + 0.27 * len(names)) as (canvas, axes):
+        ax = axes[0, 0]
+        for i, stretches in enumerate(spans):
+            for begin, end in stretches:
+                a, b = max(begin, low), min(end, high)
+                if a < b:
+                    ax.plot([a, b], [i, i], color=MARK, linewidth=5.0, solid_capstyle="butt")
+        ax.axvline(1.0, color=INK, linewidth=1.0)
+        ax.set_xscale("log")
+        ax.set_xlim(low, high)
+        ticks = [0.2, 0.5, 1.0, 2.0, 5.0]
+        ax.set_xticks(ticks, [f"{t:g}" for t in ticks])
+        ax.set_xticks([], minor=True)
+        ax.set_yticks(range(len(names)), names)
+        ax.set_ylim(len(names) - 0.5, -0.5)
+        ax.set_xlabel("value over the body's own (line: 1); bars: it oscillates")
+        ax.grid(axis="x", color=PALE, alpha=0.3, linewidth=0.6)
+        return as_svg(canvas)
+
+
+def region_plane(
+    x: Array, y: Array, period: Array, borders: Sequence[Array], folds: Array, axis_names: Sequence[str]
+) -> str:
+    """Periods on an even grid as an image (nothing where there is no oscillation), borders as lines, folds as dots."""
+    side = round(len(x) ** 0.5)
+    with _drawn(7.2, 4.6) as (canvas, axes):
+        ax = axes[0, 0]
+        extent = (x.min(), x.max(), y.min(), y.max())
+        shown = ax.imshow(period.reshape(side, side), origin="lower", extent=extent, aspect="auto", cmap="cividis")
+        for line in borders:
+            ax.plot(line[:, 0], line[:, 1], color=MARK, linewidth=1.8)
+        if len(folds):
+            ax.plot(folds[:, 0], folds[:, 1], ".", color=THIRD, markersize=4)
+        ax.set_xlim(*extent[:2])
+        ax.set_ylim(*extent[2:])
+        ax.set_xlabel(axis_names[0])
+        ax.set_ylabel(axis_names[1])
+        canvas.colorbar(shown, ax=ax, label="period, min")
+        return as_svg(canvas)
+
+
+LOCKING_COLOURS = {"1:1": OTHER, "2:1": THIRD, "aperiodic": "#d9cdb8", "undecided": "#b89b00", "failed": "#8b1e3f"}
+
+
+def locking_plane(x: Array, y: Array, words: Sequence[str], borders: Sequence[Array]) -> str:
+    """Locking on an even grid in colours, the borders of its regions as lines."""
+    from matplotlib.colors import to_rgb
+    from matplotlib.patches import Patch
+
+    side = round(len(x) ** 0.5)
+    kinds = sorted(set(words), key=lambda w: -list(words).count(w))
+    spare = iter(c for c in (*ARM_COLOURS, *["#9aa5ad"] * len(kinds)) if c not in LOCKING_COLOURS.values())
+    colours = {kind: LOCKING_COLOURS.get(kind) or next(spare) for kind in kinds}
+    with _drawn(7.2, 4.6) as (canvas, axes):
+        ax = axes[0, 0]
+        image = np.array([to_rgb(colours[w]) for w in words]).reshape(side, side, 3)
+        extent = (x.min(), x.max(), y.min(), y.max())
+        ax.imshow(image, origin="lower", extent=extent, aspect="auto", alpha=0.75)
+        for line in borders:
+            ax.plot(line[:, 0], line[:, 1], color=INK, linewidth=1.3)
+        ax.set_xlim(*extent[:2])
+        ax.set_ylim(*extent[2:])
+        ax.set_xlabel("forcing period, min")
+        ax.set_ylabel("amplitude of the forcing over its mean")
+        handles = [Patch(color=colours[kind], alpha=0.75, label=kind) for kind in kinds[:10]]
+        ax.legend(handles=handles, loc="upper left", bbox_to_anchor=(1.0, 1.0))
+        return as_svg(canvas)

@@ -12,6 +12,7 @@ from cohort.infer.predict import Belief, at_least
 from cohort.quantities import CYCLE_OUTCOMES, ESTIMANDS, PARAMETERS, REGIMES, WINDOW_OUTCOMES
 from cohort.report.counting import DETECTED, DETECTED_AT_PERIOD, DETECTED_FALSE, DETECTED_TRUE, EVERYONE, OSCILLATES
 from cohort.report.figures import Figure, courses, distributions, intervals, lines, plane, whiskers
+from cohort.report.maps import map_figures
 from cohort.report.results import Results
 from cohort.tables import numbers, read_part, read_parts, read_table
 
@@ -36,6 +37,7 @@ def gallery(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Fi
     yield from _convergence(results, summary)
     yield from _seen(summary)
     yield from _recruitment(summary)
+    yield from map_figures(results)
 
 
 def _who(summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:

@@ -31,6 +31,7 @@ SECTIONS = {
     "decides": "What decides it",
     "clinic": "What the clinic would see",
     "recruit": "How many to recruit",
+    "map": "Where oscillation lives",
     "refused": "What was refused, and why",
     "fasting": "Fasting values beside published ones",
     "method": "Method, definitions and limits",
@@ -79,7 +80,7 @@ def _page(results: Results, summary: dict[str, Any], drawn: Sequence[tuple[str, 
     bodies = {
         "who": _regimes(summary), "forced": _forced(summary), "cycles": "", "excursions": _quantiles(summary), "courses": "",
         "decides": _deciding(summary), "clinic": _clinic(summary), "recruit": _recruit(summary),
-        "refused": _refused(summary), "fasting": _fasting(summary), "method": _method(results, summary),
+        "map": "", "refused": _refused(summary), "fasting": _fasting(summary), "method": _method(results, summary),
     }  # fmt: skip
     parts, links = [], []
     for name, title in SECTIONS.items():

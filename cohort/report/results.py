@@ -103,6 +103,12 @@ class Results:
         """ranking/: a row a run of the ranking."""
         return self._parts("ranking", None)
 
+    def map(self, name: str) -> pa.Table:
+        """map/<name>.parquet: windows, region, borders, locking or tongues."""
+        from cohort.tables import read_table
+
+        return read_table(self.folder / "map" / f"{name}.parquet")
+
     def figures(self) -> list[Figure]:
         """The page's figures, each with its SVG text, its numbers and what it says in words."""
         from cohort.report.gallery import gallery

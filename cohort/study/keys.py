@@ -14,7 +14,7 @@ from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 @dataclass(frozen=True)
 class Key:
     """One key. units: kinds of quantity it may be, the first for plain numbers (`parameter`: that of the parameter);
-    words: what is allowed; low, high: the allowed range of numbers; `available` is False for keys of later versions."""
+    words: what is allowed; low, high: the allowed range of numbers."""
 
     path: str
     kind: str
@@ -25,7 +25,6 @@ class Key:
     low: float = -float("inf")
     high: float = float("inf")
     above: bool = False
-    available: bool = True
 
 
 YEAR_MIN = 366 * 1440.0
@@ -246,6 +245,42 @@ def _ranking_keys() -> list[Key]:
     ]
 
 
+def _map_keys() -> list[Key]:
+    rate = ("mg/min",)
+    return [
+        Key("map", "table", "where oscillation lives around one body, and which forcing captures it"),
+        Key(
+            "map.infusion",
+            "quantity",
+            "glucose input where it is no axis; mean of the forcing",
+            "216 mg/min",
+            rate,
+            low=0.0,
+            high=1e5,
+        ),
+        Key("map.secretion", "number", "a factor on the pancreas's own secretion", "1", low=0.0, high=100.0),
+        Key("map.points", "whole", "points of each axis", "60", low=10, high=400),
+        Key(
+            "map.windows",
+            "texts",
+            'parameters (and infusion) to find the windows of oscillation in, one at a time; ["all"]',
+        ),
+        Key(
+            "map.region", "table", "two of infusion and the parameters, each with its range: the region of oscillation"
+        ),
+        Key("map.region.*", "table", "the range of one"),
+        Key("map.region.*.low", "quantity", "from", units=("parameter",), low=0.0),
+        Key("map.region.*.high", "quantity", "to", units=("parameter",), low=0.0, above=True),
+        Key("map.forcing", "table", "sine forcing of the infusion: locking over its period and amplitude"),
+        Key("map.forcing.period", "table", "range of the forcing period"),
+        Key("map.forcing.period.low", "quantity", "from", "50 min", ("min",), low=5.0, high=1440.0),
+        Key("map.forcing.period.high", "quantity", "to", "300 min", ("min",), low=5.0, high=1440.0),
+        Key("map.forcing.relative_amplitude", "table", "range of the amplitude over the mean"),
+        Key("map.forcing.relative_amplitude.low", "number", "from", "0.02", low=0.0, high=1.0, above=True),
+        Key("map.forcing.relative_amplitude.high", "number", "to", "0.8", low=0.0, high=1.0, above=True),
+    ]
+
+
 KEYS: dict[str, Key] = {
     key.path: key
     for key in (
@@ -259,8 +294,7 @@ KEYS: dict[str, Key] = {
         Key("output", "table", "what is kept beside the outcomes"),
         Key("output.time_courses", "whole", "how many subjects keep their time courses", "20", low=0, high=10_000),
         Key("output.every", "quantity", "time between their points", "5 min", ("min",), low=0.01, high=1440.0),
-        Key("map", "table", "where oscillation lives", available=False),
-        Key("map.*", "text", "keys of a later version", available=False),
+        *_map_keys(),
     )
 }
 

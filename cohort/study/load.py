@@ -18,6 +18,7 @@ from cohort.study import sampling as sampling_of
 from cohort.study import subjects as subjects_of
 from cohort.study.files import Files
 from cohort.study.lines import Path as KeyPath
+from cohort.study.maps import maps
 from cohort.study.oddities import oddities
 from cohort.study.selection import selection
 from cohort.study.spec import Output, Study
@@ -61,15 +62,16 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = (), outside:
     seen, recruits = sampling_of.sampling(tree, protocols), sampling_of.recruitment(tree)
     chosen = selection(tree, recipe, protocols)
     ranking = ranking_of.ranking(tree, recipe, protocols, bool(chosen.eligible or chosen.match))
+    mapped = maps(tree, MODELS[model], recipe)
     if tree.problems:
         raise StudyError(_sorted(tree.problems))
     title = tree.values.get("title", place.stem)
     study = Study(
         place, data, tuple(overrides), title, model, seed, recipe, protocols, output, ranking, seen, recruits,
-        chosen, files.digests, dict(_settings(tree.values)),
+        chosen, mapped, files.digests, dict(_settings(tree.values)),
     )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))
-    return replace(study, warnings=tuple(warnings), later=tuple(tree.later))
+    return replace(study, warnings=tuple(warnings))
 
 
 def _settings(value: Any, path: str = "") -> Iterator[tuple[str, str]]:

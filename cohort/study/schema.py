@@ -19,7 +19,7 @@ _LEAVES: dict[str, dict[str, Any]] = {
 
 
 def json_schema() -> dict[str, Any]:
-    """JSON Schema (draft 2020-12) of every key; those of later versions say so."""
+    """JSON Schema (draft 2020-12) of every key."""
     found = _table("")
     found["properties"]["model"]["enum"] = list(MODELS)
     return {"$schema": "https://json-schema.org/draft/2020-12/schema", "title": "cohort study", **found}
@@ -40,7 +40,7 @@ def _table(pattern: str) -> dict[str, Any]:
 
 def _key(key: Key) -> dict[str, Any]:
     default = f" (default: {key.default})" if key.default else ""
-    described = {"description": key.meaning + default + ("" if key.available else "; not available yet")}
+    described = {"description": key.meaning + default}
     if key.kind == "tables":
         return {"type": "array", "items": _table(f"{key.path}[]"), **described}
     if key.kind == "table":

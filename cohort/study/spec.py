@@ -10,6 +10,7 @@ from cohort.errors import Problem
 from cohort.infer.ranking import Ranking
 from cohort.model.protocol import Arm
 from cohort.population.recipe import Recipe
+from cohort.study.maps import Maps
 from cohort.study.sampling import Recruitment, Sampling
 from cohort.study.selection import Selection
 
@@ -27,10 +28,9 @@ class Study:
     """A study file, read and checked.
 
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
-    file order; ranking, sampling, recruitment: None where the study has none; selection: who is counted; files: SHA-256
-    of every data file by the name the study gives it; settings: every key as it counts (overrides applied, arms and
-    strata by name), for telling what changed; warnings: legal but odd; later: blocks that are checked and that no run
-    carries out yet.
+    file order; ranking, sampling, recruitment, maps: None where the study has none; selection: who is counted; files:
+    SHA-256 of every data file by the name the study gives it; settings: every key as it counts (overrides applied, arms
+    and strata by name), for telling what changed; warnings: legal but odd.
     """
 
     path: Path
@@ -46,10 +46,10 @@ class Study:
     sampling: Sampling | None = None
     recruitment: Recruitment | None = None
     selection: Selection = field(default_factory=Selection)
+    maps: Maps | None = None
     files: Mapping[str, str] = field(default_factory=dict)
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
-    later: tuple[Problem, ...] = ()
 
     @property
     def selected(self) -> bool:

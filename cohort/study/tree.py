@@ -15,8 +15,6 @@ from cohort.study.units import UnitError, parse
 
 LARGEST_TEXT = 2_000_000
 _ANY = "*"
-UNREAD = ("map",)
-"""Blocks whose keys are not settled yet: only their name is known."""
 
 
 @dataclass(frozen=True)
@@ -31,8 +29,7 @@ class Quantity:
 class Tree:
     """A study's values by path, converted, and every problem found on the way.
 
-    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out; later: blocks
-    that are checked but that no run carries out yet.
+    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out.
     """
 
     file: str
@@ -41,8 +38,6 @@ class Tree:
     values: dict[str, Any]
     problems: list[Problem] = field(default_factory=list)
     warnings: list[Problem] = field(default_factory=list)
-    later: list[Problem] = field(default_factory=list)
-    inside_later: bool = False
 
     def problem(self, path: Sequence[str | int], message: str) -> None:
         """Note a problem at a path."""
@@ -114,16 +109,6 @@ def _table(out: Tree, table: dict[str, Any], path: Path, pattern: str) -> dict[s
             out.problem(here, f"no such key{near}{listed}")
             continue
         key = KEYS[found]
-        if not key.available and not out.inside_later:
-            out.later.append(out.place(here, "not available yet"))
-            if key.path in UNREAD:
-                continue
-            out.inside_later = True
-            good = _value(out, value, here, key)
-            out.inside_later = False
-            if good is not None:
-                converted[name] = good
-            continue
         good = _value(out, value, here, key)
         if good is not None:
             converted[name] = good
@@ -200,9 +185,12 @@ def _quantity(out: Tree, value: Any, path: Path, key: Key) -> Quantity | str | N
     units = key.units
     if units == ("parameter",):
         symbol = next((str(p) for p in path if p in PARAMETERS or p in INPUT_PARAMETERS), None)
-        if symbol is None:
+        if symbol is None and "infusion" in path:
+            units = ("mg/min",)
+        elif symbol is None:
             return Quantity(float("nan"), "")  # the symbol itself is unknown, which has its own problem
-        units = (parameter_unit(symbol),)
+        else:
+            units = (parameter_unit(symbol),)
     try:
         number, unit = parse(value, *units)
     except UnitError as error:

@@ -394,18 +394,6 @@ def test_the_command_line_end_to_end(tmp_path: Path, capsys: pytest.CaptureFixtu
     assert "is not a result folder" in capsys.readouterr().err
 
 
-def test_what_is_not_available_yet_is_checked_and_refused_by_run(
-    tmp_path: Path, capsys: pytest.CaptureFixture[str]
-) -> None:
-    path = tmp_path / "later.toml"
-    path.write_text(STUDY + "[map]\nx = 1\n")
-    assert main(["check", str(path)]) == 0
-    assert "map: not available yet" in capsys.readouterr().err
-    assert main(["run", str(path), "--out", str(tmp_path / "out")]) == 2
-    assert "map: not available yet" in capsys.readouterr().err
-    assert not (tmp_path / "out").exists()
-
-
 def test_wrong_calls_end_with_2_and_a_line(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     path = tmp_path / "small.toml"
     path.write_text(STUDY.replace("seed = 7", "seed = -7"))

@@ -61,17 +61,6 @@ def test_the_example_says_what_it_says() -> None:
     assert steady.glucose == (Constant(180.0),) and steady.settle_min == 2880.0
 
 
-def test_blocks_of_later_versions_are_checked_and_said() -> None:
-    study = load(EXAMPLE)
-    assert not study.later
-    forced = (
-        SHORT
-        + "glucose = [ { shape = 'sine', mean = 5, relative_amplitude = 0.3, period = { natural = 0.8 } } ]\n[map]\nx = 1"
-    )
-    assert [p.key for p in load(forced).later] == ["arms[1].glucose[1].period.natural", "map"]
-    assert plan(load(forced)).runs == 10
-
-
 @pytest.mark.parametrize(
     "drop",
     [
@@ -494,7 +483,6 @@ def test_the_schema_allows_the_example_and_knows_every_available_key() -> None:
 
     walk(tomllib.loads(EXAMPLE), schema)
     walk(tomllib.loads(SHAPES), schema)
-    assert schema["properties"]["map"]["description"].endswith("not available yet")
 
 
 def test_studies_that_ship_are_valid() -> None:
