@@ -7,7 +7,9 @@ Within a tongue the m-th return map has an attracting fixed point. Its border is
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import os
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass, fields
 
 import numpy as np
 from numpy.typing import NDArray
@@ -25,6 +27,7 @@ LONGEST_BORDERED = 3
 """Borders are followed for repeats of up to so many forcing periods."""
 
 FEWEST_CELLS = 4
+_TOGETHER = 450
 _STEP, _SMALLEST = 0.02, 1e-4
 _MOST_POINTS = 600
 _DIFFERENCE = 1e-5
@@ -72,8 +75,15 @@ def locking_map(box: Box, count: int) -> Responses:
     side = np.linspace(0.0, 1.0, count)
     period = np.tile(box.period[0] + side * (box.period[1] - box.period[0]), count)
     amplitude = np.repeat(box.amplitude[0] + side * (box.amplitude[1] - box.amplitude[0]), count)
-    forced = box.forced(period, amplitude)
-    n = len(period)
+    chunks = [slice(begin, begin + _TOGETHER) for begin in range(0, count * count, _TOGETHER)]
+    _cells(box, period[:1], amplitude[:1])  # compiled before there are threads
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        found = list(pool.map(lambda some: _cells(box, period[some], amplitude[some]), chunks))
+    return Responses(*(np.concatenate([getattr(part, f.name) for part in found]) for f in fields(Responses)))
+
+
+def _cells(box: Box, period: Array, amplitude: Array) -> Responses:
+    forced, n = box.forced(period, amplitude), len(period)
     mean = np.full(n, box.setting.infusion), np.zeros(n)
     start = at_rest(box.setting.body, forced.parameters, *mean).states
     return responses(box.setting.body, forced.parameters, forced.pieces, start, period, 0.25 * period)

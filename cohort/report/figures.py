@@ -245,6 +245,12 @@ def window_bars(names: Sequence[str], spans: Sequence[Sequence[tuple[float, floa
         return as_svg(canvas)
 
 
+def _around(x: Array, y: Array, side: int) -> tuple[float, float, float, float]:
+    """The sides of an image whose pixels are centred on the points of an even grid."""
+    dx, dy = (0.5 * (v.max() - v.min()) / max(side - 1, 1) for v in (x, y))
+    return float(x.min() - dx), float(x.max() + dx), float(y.min() - dy), float(y.max() + dy)
+
+
 def region_plane(
     x: Array, y: Array, period: Array, borders: Sequence[Array], folds: Array, axis_names: Sequence[str]
 ) -> str:
@@ -252,7 +258,7 @@ def region_plane(
     side = round(len(x) ** 0.5)
     with _drawn(7.2, 4.6) as (canvas, axes):
         ax = axes[0, 0]
-        extent = (x.min(), x.max(), y.min(), y.max())
+        extent = _around(x, y, side)
         shown = ax.imshow(period.reshape(side, side), origin="lower", extent=extent, aspect="auto", cmap="cividis")
         for line in borders:
             ax.plot(line[:, 0], line[:, 1], color=MARK, linewidth=1.8)
@@ -281,7 +287,7 @@ def locking_plane(x: Array, y: Array, words: Sequence[str], borders: Sequence[Ar
     with _drawn(7.2, 4.6) as (canvas, axes):
         ax = axes[0, 0]
         image = np.array([to_rgb(colours[w]) for w in words]).reshape(side, side, 3)
-        extent = (x.min(), x.max(), y.min(), y.max())
+        extent = _around(x, y, side)
         ax.imshow(image, origin="lower", extent=extent, aspect="auto", alpha=0.75)
         for line in borders:
             ax.plot(line[:, 0], line[:, 1], color=INK, linewidth=1.3)
