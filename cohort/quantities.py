@@ -53,6 +53,12 @@ PARAMETERS: dict[str, Quantity] = {
         Quantity("Rg", "highest rate of glucose release by the liver", "mg/min", 1.0, 9000.0),
         Quantity("alpha", "steepness of insulin's braking of glucose release", "L/mU", 0.005, 15.0),
         Quantity("C5", "insulin concentration at half the highest glucose release", "mU/L", 0.5, 1300.0),
+        Quantity("gamma", "steepness of glucose's own braking of its release", "1", 0.1, 100.0),
+        Quantity("C6", "glucose over C3 Vg at half that braking", "1", 0.05, 40.0),
+        Quantity("Sb", "lowest rate of glucose's second way out", "mg/min", 0.0, 400.0),
+        Quantity("Sm", "highest rate of glucose's second way out", "mg/min", 1.0, 3000.0),
+        Quantity("delta", "steepness of glucose's second way out, negative", "1", -50.0, -0.05),
+        Quantity("C7", "glucose over C3 Vg at half of the second way out", "1", 0.05, 40.0),
     )
 }
 

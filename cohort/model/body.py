@@ -10,7 +10,7 @@ from typing import Any
 
 from cohort.errors import Problem, StudyError, nearest
 from cohort.model import equations
-from cohort.model.catalogue import MODELS, ModelCard
+from cohort.model.catalogue import MODELS, MOST_STAGES, ModelCard
 from cohort.model.taylor import ORDER, TOLERANCE, Stepper
 from cohort.model.trace import INPUTS, Symbol, Traced, derivative, evaluator, name, substitute, trace
 from cohort.program import Program
@@ -124,6 +124,8 @@ _TEXTS: dict[str, tuple[Callable[..., Any], Callable[..., Any]]] = {
     "hepatic-lag": (equations.hepatic_lag, equations.lag_at_rest),
     "prompt-liver": (equations.prompt_liver, equations.insulin_at_rest),
     "steady-liver": (equations.steady_liver, equations.insulin_at_rest),
+    "release-by-glucose": (equations.release_by_glucose, equations.lag_at_rest),
+    **{f"lag-chain-{n}": equations.lag_chain(n) for n in range(1, MOST_STAGES + 1)},
 }
 
 

@@ -46,17 +46,35 @@ _LIMITS = (
 )
 
 
-def _card(name: str, title: str, without: tuple[str, ...], states: tuple[str, ...], source: str) -> ModelCard:
-    parameters = tuple(p for p in _NOMINAL if p not in without)
+_EXTENDED = {"gamma": 5.0, "C6": 2.0, "Sb": 20.0, "Sm": 140.0, "delta": -2.4, "C7": 2.0}
+MOST_STAGES = 12
+
+
+def _card(
+    name: str,
+    title: str,
+    without: tuple[str, ...],
+    states: tuple[str, ...],
+    source: str,
+    changed: Mapping[str, float] | None = None,
+    limits: tuple[str, ...] = _LIMITS,
+) -> ModelCard:
+    nominal = {**_NOMINAL, **(changed or {})}
+    parameters = tuple(p for p in nominal if p not in without)
     return ModelCard(
-        name,
-        title,
-        states,
-        parameters,
-        {p: _NOMINAL[p] for p in parameters},
-        {s: _TYPICAL[s] for s in states},
-        source,
-        _LIMITS,
+        name, title, states, parameters, {p: nominal[p] for p in parameters},
+        {s: _TYPICAL.get(s, _TYPICAL["Ip"]) for s in states}, source, limits,
+    )  # fmt: skip
+
+
+def _chain(n: int) -> ModelCard:
+    return _card(
+        f"lag-chain-{n}",
+        f"the liver answers plasma insulin through {n} stage{'s' if n > 1 else ''} of lag with the same total delay td (3: "
+        "hepatic-lag)",
+        (),
+        ("Ip", "Ii", "G", *(f"x{k}" for k in range(1, n + 1))),
+        f"the hepatic-lag equations with {n} for 3 stages; values of {_TOLIC}",
     )
 
 
@@ -83,6 +101,20 @@ MODELS: dict[str, ModelCard] = {
             ("td", "alpha", "C5"),
             ("Ip", "Ii", "G"),
             f"the hepatic-lag equations with release held at its equilibrium under 216 mg/min; values of {_TOLIC}",
+        ),
+        *(_chain(n) for n in range(1, MOST_STAGES + 1)),
+        _card(
+            "release-by-glucose",
+            "six states; the liver's release falls with glucose too, and glucose leaves by a second way as it rises",
+            (),
+            ("Ip", "Ii", "G", "x1", "x2", "x3"),
+            f"the extended form of {_TOLIC}",
+            {"tp": 4.0, "alpha": 0.41, "C5": 29.0, **_EXTENDED},
+            (
+                *_LIMITS,
+                "Glucose leaves by its second way even where there is none: extreme bodies can run out of it (then "
+                "the row fails).",
+            ),  # fmt: skip
         ),
     )
 }

@@ -7,6 +7,10 @@ called with symbols (`cohort.model.trace`), so they may use + - * / ** exp log o
 
 from __future__ import annotations
 
+import inspect
+from collections.abc import Callable
+from typing import Any
+
 from cohort.model.trace import Symbol, exp
 
 S = Symbol
@@ -69,6 +73,56 @@ def hepatic_lag(
         "x3": 3 * (x2 - x3) / td,
     }
     return rates, _seen(G, Ip, secreted, released, Vg, Vp)
+
+
+def lag_chain(n: int) -> tuple[Callable[..., Equations], Callable[..., dict[str, S]]]:
+    """(equations, at rest) of the same body with n stages in the lag and the same total delay; n = 3 is `hepatic_lag`.
+
+    The lag is an Erlang law of n stages: mean td, variance td^2/n; it tends to a discrete delay.
+    """
+    stages = tuple(f"x{k}" for k in range(1, n + 1))
+    base = list(inspect.signature(prompt_liver, eval_str=False).parameters)
+    names = [*base[:3], *stages, *base[3:], "td"]
+
+    def equations(*given: S) -> Equations:
+        at = dict(zip(names, given, strict=True))
+        rates, seen = prompt_liver(*(at[name] for name in base))
+        released = f5(at[stages[-1]], at["Vp"], at["Rg"], at["alpha"], at["C5"])
+        rates["G"] = rates["G"] - seen["release_mg_per_min"] + released
+        before = at["Ip"]
+        for stage in stages:
+            rates[stage] = n * (before - at[stage]) / at["td"]
+            before = at[stage]
+        return rates, {**seen, "release_mg_per_min": released}
+
+    def at_rest(*given: S) -> dict[str, S]:
+        rest = insulin_at_rest(*given)
+        return {**rest, **dict.fromkeys(stages, rest["Ip"])}
+
+    return _named(equations, names), _named(at_rest, list(inspect.signature(insulin_at_rest).parameters))
+
+
+def _named(function: Callable[..., Any], names: list[str]) -> Callable[..., Any]:
+    """The same function with these names for its arguments, by which tracing hands it symbols."""
+    kind = inspect.Parameter.POSITIONAL_OR_KEYWORD
+    function.__signature__ = inspect.Signature([inspect.Parameter(name, kind) for name in names])  # type: ignore[attr-defined]
+    return function
+
+
+def release_by_glucose(
+    Ip: S, Ii: S, G: S, x1: S, x2: S, x3: S, Gin: S, Iin: S, secretion: S, Vp: S, Vi: S, Vg: S, E: S, tp: S, ti: S,
+    td: S, Rm: S, a1: S, C1: S, Ub: S, C2: S, C3: S, U0: S, Um: S, beta: S, C4: S, Rg: S, alpha: S, C5: S,
+    gamma: S, C6: S, Sb: S, Sm: S, delta: S, C7: S,
+) -> Equations:  # fmt: skip
+    """Tolic et al. 2000, extended: release falls with glucose too (f6), and glucose leaves by a second way (f7)."""
+    rates, seen = hepatic_lag(Ip, Ii, G, x1, x2, x3, Gin, Iin, secretion, Vp, Vi, Vg, E, tp, ti, td, Rm, a1, C1, Ub, C2, C3,
+                              U0, Um, beta, C4, Rg, alpha, C5)  # fmt: skip
+    level = G / (C3 * Vg)
+    f6 = 1 / (1 + exp(gamma * (level - C6)))
+    f7 = Sb + (Sm - Sb) / (1 + exp(delta * (level - C7)))
+    released = seen["release_mg_per_min"] * f6
+    rates["G"] = rates["G"] - seen["release_mg_per_min"] + released - f7
+    return rates, {**seen, "release_mg_per_min": released}
 
 
 def prompt_liver(
