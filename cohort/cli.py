@@ -52,7 +52,7 @@ def check(words: argparse.Namespace) -> int:
     """Print the plan, or every problem."""
     from cohort.study import describe, load_study, plan
 
-    study = load_study(words.study, words.set, words.allow_outside)
+    study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code)
     found = plan(study, words.workers)
     print(describe(study, found))
     _warn(study.warnings)
@@ -75,7 +75,7 @@ def run(words: argparse.Namespace) -> int:
     from cohort.report.summary import closing_words, rebuild
     from cohort.study import load_study, plan
 
-    study = load_study(words.study, words.set, words.allow_outside)
+    study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code)
     _warn(study.warnings)
     folder = Path(words.out) if words.out else Path("results") / study.path.stem
     _fits(study, plan(study, words.workers), folder)
@@ -126,7 +126,7 @@ def certify(words: argparse.Namespace) -> int:
     from cohort.execute.certify import certify_study
     from cohort.study import load_study
 
-    found = certify_study(load_study(words.study, words.set, words.allow_outside), words.n)
+    found = certify_study(load_study(words.study, words.set, words.allow_outside, words.allow_model_code), words.n)
     print(found.words())
     return 0 if found.kept else 3
 
@@ -138,7 +138,7 @@ def detect(words: argparse.Namespace) -> int:
     from cohort.observe.table import read_series
     from cohort.study import load_study
 
-    study = load_study(words.study, words.set, words.allow_outside) if words.study else None
+    study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code) if words.study else None
     rule, assay = _rule(words, study)
     units = {k: v for k, v in (("time", words.time), ("glucose", words.glucose), ("insulin", words.insulin)) if v}
     series = read_series(Path(words.series), units)
@@ -227,6 +227,7 @@ def _parser() -> argparse.ArgumentParser:
         made.add_argument("--set", action="append", default=[], metavar="KEY=VALUE",
                           help="override a value: subjects.count=500, arms.fasting.duration='12 h'")  # fmt: skip
         made.add_argument("--allow-outside", action="store_true", help="data files may lie outside the study's folder")
+        made.add_argument("--allow-model-code", action="store_true", help="run the study's own model, a Python file")
 
     checking = command("check", check, "say what a study would do, or every problem in it")
     with_study(checking)
@@ -260,6 +261,7 @@ def _parser() -> argparse.ArgumentParser:
     looking.add_argument(
         "--allow-outside", action="store_true", help="the study's data files may lie outside its folder"
     )
+    looking.add_argument("--allow-model-code", action="store_true", help="run the study's own model, a Python file")
     looking.add_argument(
         "--study", metavar="STUDY", help="correct the share by the detector's errors on its virtual people"
     )

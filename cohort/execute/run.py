@@ -31,6 +31,8 @@ from cohort.execute.stages import lost_rows, rows, warm
 from cohort.execute.tasks import Hands, Job, Narrower, Piece
 from cohort.infer.facts import as_plain
 from cohort.infer.salib import load as load_salib
+from cohort.model.catalogue import MODELS
+from cohort.quantities import PARAMETERS
 from cohort.study import Study, plan
 from cohort.study.plan import SHARD
 from cohort.tables import write_bytes
@@ -304,10 +306,12 @@ def _refusal(key: str, before: Mapping[str, str], now: Mapping[str, str], out: P
 
 def _record(study: Study, workers: int, shard_size: int, before: Mapping[str, Any]) -> dict[str, Any]:
     texts = [t for t in before.get("study_texts", []) if t != study.text.decode("utf-8", "replace")]
-    found = plan(study, workers)
+    found, card = plan(study, workers), MODELS[study.model]
     return {
         "title": study.title,
         "model": study.model,
+        "model_facts": {"title": card.title, "source": card.source, "limits": list(card.limits)},
+        "units": {p: PARAMETERS[p].unit for p in card.parameters},
         "seed": study.seed,
         "count": study.recipe.count,
         "shards": len(shards(study.recipe.count, shard_size)),

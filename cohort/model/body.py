@@ -129,10 +129,14 @@ _TEXTS: dict[str, tuple[Callable[..., Any], Callable[..., Any]]] = {
 }
 
 
+OWN: dict[str, Body] = {}
+"""Bodies of users' own models (`cohort.model.own`)."""
+
+
 @functools.cache
 def body(model: str) -> Body:
-    """Return the body of a shipped model. Raises StudyError for an unknown name."""
+    """Return the body of a model by name. Raises StudyError for an unknown one."""
     if model not in MODELS:
         allowed = ", ".join(MODELS)
         raise StudyError([Problem("model", f"{model!r} is not a model{nearest(model, MODELS)}; one of {allowed}")])
-    return make_body(MODELS[model], *_TEXTS[model])
+    return OWN[model] if model in OWN else make_body(MODELS[model], *_TEXTS[model])

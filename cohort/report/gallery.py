@@ -201,7 +201,8 @@ def _verdicts(factors: list[dict[str, Any]]) -> str:
 
 def _plane(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Figure]]:
     """Subjects in the plane of the two parameters that decide most, or of the first two varied ones."""
-    varied = [p for p in results.record["varied"] if p in PARAMETERS]
+    units = results.record.get("units") or {p: q.unit for p, q in PARAMETERS.items()}
+    varied = [p for p in results.record["varied"] if p in units]
     arms = [arm for arm, facts in summary["arms"].items() if facts["strata"]]
     if len(varied) < 2 or not arms:
         return
@@ -219,15 +220,14 @@ def _plane(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, Fig
         yield "decides", Figure(
             f"plane-{arm}", f"Where they oscillate: {arm}",
             f"The first {len(words):,} subjects by {x_name} and {y_name} ({how}), marked by regime: {counts}",
-            plane(x, y, words, (f"{x_name}, {_unit(x_name)}", f"{y_name}, {_unit(y_name)}")),
+            plane(x, y, words, (f"{x_name}, {_unit(units[x_name])}", f"{y_name}, {_unit(units[y_name])}")),
             ("subject", x_name, y_name, "regime"),
             tuple((int(i), float(a), float(b), w) for i, a, b, w in zip(shown, x, y, words, strict=True)),
             f"n {len(words):,}, the first who count", arm,
         )  # fmt: skip
 
 
-def _unit(name: str) -> str:
-    unit = PARAMETERS[name].unit
+def _unit(unit: str) -> str:
     return "no unit" if unit == "1" else unit
 
 

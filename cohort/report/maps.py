@@ -8,7 +8,6 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.quantities import PARAMETERS
 from cohort.report.figures import Figure, locking_plane, region_plane, window_bars
 from cohort.report.results import Results
 from cohort.tables import numbers, read_table
@@ -22,7 +21,8 @@ def map_figures(results: Results) -> Iterator[tuple[str, Figure]]:
     if (folder / "windows.parquet").exists():
         yield from _windows(read_table(folder / "windows.parquet"))
     if (folder / "borders.parquet").exists():
-        yield from _region(read_table(folder / "region.parquet"), read_table(folder / "borders.parquet"))
+        units = {"infusion": "mg/min", **(results.record.get("units") or {})}
+        yield from _region(read_table(folder / "region.parquet"), read_table(folder / "borders.parquet"), units)
     if (folder / "tongues.parquet").exists():
         yield from _locking(read_table(folder / "locking.parquet"), read_table(folder / "tongues.parquet"))
 
@@ -60,7 +60,7 @@ def _spans(rows: list[dict[str, Any]]) -> list[tuple[float, float]]:
     return [*found, *([(begin, np.inf)] if begin is not None else [])]
 
 
-def _region(cells: Any, borders: Any) -> Iterator[tuple[str, Figure]]:
+def _region(cells: Any, borders: Any, units: dict[str, str]) -> Iterator[tuple[str, Figure]]:
     x, y, period = (numbers(cells, name) for name in ("x", "y", "period_min"))
     names = [cells.column(name)[0].as_py() for name in ("x_name", "y_name")]
     curve = np.array(borders.column("curve").to_pylist(), dtype=np.int64)
@@ -74,13 +74,9 @@ def _region(cells: Any, borders: Any) -> Iterator[tuple[str, Figure]]:
     yield "map", Figure(
         "region-of-oscillation", f"Where oscillation lives: {names[0]} and {names[1]}",
         f"{alt}; the line is the border, by continuation; dots mark the far side of strips where rest and rhythm both attract",
-        region_plane(x, y, period, lines, folds, [_axis(n) for n in names]), tuple(cells.column_names),
+        region_plane(x, y, period, lines, folds, [f"{n}, {units[n]}" for n in names]), tuple(cells.column_names),
         tuple(tuple(r.values()) for r in cells.to_pylist()), f"one body, {len(x):,} points and {len(curve):,} on the border",
     )  # fmt: skip
-
-
-def _axis(name: str) -> str:
-    return "infusion, mg/min" if name == "infusion" else f"{name}, {PARAMETERS[name].unit}"
 
 
 def _locking(cells: Any, tongues: Any) -> Iterator[tuple[str, Figure]]:

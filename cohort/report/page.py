@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from html import escape
 from importlib.resources import files
 from pathlib import Path
@@ -354,17 +354,24 @@ def _fasting(summary: dict[str, Any]) -> str:
     return _scrolled(table, "Fasting values") + f'<p class="small">{escape(PUBLISHED_FASTING)}</p>'
 
 
+def _model(record: Mapping[str, Any]) -> Mapping[str, Any]:
+    """Title, source and limits of the run's model; folders of an earlier version hold none, and their models ship."""
+    card = MODELS.get(record["model"])
+    shipped = {} if card is None else {"title": card.title, "source": card.source, "limits": card.limits}
+    return record.get("model_facts") or shipped or {"title": "", "source": "", "limits": ()}
+
+
 def _method(results: Results, summary: dict[str, Any]) -> str:
-    record, card = results.record, MODELS[summary["model"]]
-    limits = "".join(f"<li>{escape(limit)}</li>" for limit in card.limits)
+    record, model = results.record, _model(results.record)
+    limits = "".join(f"<li>{escape(limit)}</li>" for limit in model["limits"])
     people = summary.get("people")
     counted = ""
     if people:
         counted = f"<p>{people['eligible']:,} of {people['subjects']:,} subjects are counted"
         counted += f"; effective sample size {people['effective']:,.0f}" if "effective" in people else ""
         counted += ".</p>"
-    return f"""<p>Model {escape(card.name)}: {escape(card.title)} {escape(card.source)}. {summary["subjects"]:,} virtual people,
-drawn by {escape(record["draw"])}, seed {record["seed"]}. Plasma glucose is within 1e-6 relative of a high-order reference;
+    named = f"Model {escape(record['model'])}: {escape(model['title'])} {escape(model['source'])}."
+    return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]}. Plasma glucose is within 1e-6 relative of a high-order reference;
 a subject's regime comes from the eigenvalues of its equilibrium under the arm's steady input and from a converged limit
 cycle, never from counting peaks. Intervals of shares are Monte Carlo error: what more virtual people would change. They do
 not say how far the model is from people. Unresolved subjects (undecided, failed) count once as no and once as yes. Cycle

@@ -113,7 +113,7 @@ def _arm(tree: Tree, value: Mapping[str, Any], path: Path, card: ModelCard, name
         _shapes(tree, value.get("glucose", []), (*path, "glucose"), duration),
         _shapes(tree, value.get("insulin", []), (*path, "insulin"), duration),
         _number(value.get("secretion"), 1.0),
-        _clamp(tree, value.get("clamp"), (*path, "clamp"), duration),
+        _clamp(tree, value.get("clamp"), (*path, "clamp"), duration, card),
         None if steady is None else steady.number,
         steady is not None and "/kg" in steady.unit,
     )
@@ -140,8 +140,11 @@ def _start(tree: Tree, value: Mapping[str, Any], path: Path, card: ModelCard) ->
     return AtEquilibrium(_number(value.get("displace"), 0.05)) if start == "equilibrium" else AtFasting()
 
 
-def _clamp(tree: Tree, value: Mapping[str, Any] | None, path: Path, duration: float) -> Clamp | None:
+def _clamp(tree: Tree, value: Mapping[str, Any] | None, path: Path, duration: float, card: ModelCard) -> Clamp | None:
     if value is None:
+        return None
+    if card.states[:3] != ("Ip", "Ii", "G"):
+        tree.problem(path, f"needs a model whose glucose is an amount G in Vg; {card.name} is none")
         return None
     if "glucose" not in value:
         if not _noted(tree, (*path, "glucose")):

@@ -28,9 +28,11 @@ _NAMED_LISTS = ("arms", "strata", "schedules")
 MOST_COURSE_POINTS = 2_000_000_000
 
 
-def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = (), outside: bool = False) -> Study:
-    """Read and check a study file; `overrides` are KEY=VALUE words, and with `outside` its data files may lie anywhere.
-    Raises StudyError with every problem found."""
+def load_study(
+    path: str | os.PathLike[str], overrides: Sequence[str] = (), outside: bool = False, model_code: bool = False
+) -> Study:
+    """Read and check a study file; `overrides` are KEY=VALUE words, and with `outside` its data files may lie anywhere, with
+    `model_code` its model may be a Python file, which is run. Raises StudyError with every problem found."""
     place = Path(path)
     try:
         data = place.read_bytes()
@@ -42,15 +44,25 @@ def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = (), outs
         ) from None
     except ValueError as error:
         raise StudyError([Problem("", f"cannot be read: {error}", str(path))]) from None
-    return study_from(data, place, overrides, outside)
+    return study_from(data, place, overrides, outside, model_code)
 
 
-def study_from(data: bytes, place: Path, overrides: Sequence[str] = (), outside: bool = False) -> Study:
+def study_from(
+    data: bytes, place: Path, overrides: Sequence[str] = (), outside: bool = False, model_code: bool = False
+) -> Study:
     """As `load_study`, from the file's bytes."""
     raw, text = read_toml(data, str(place))
     raw, overridden = _override(raw, overrides)
+    own = str(raw.get("model", "")).endswith(".py")
+    if own and model_code:  # its symbols and units are needed to read the rest
+        from cohort.study.own_model import known
+
+        known(str(raw["model"]), place.parent)
     tree = check(raw, text, str(place), overridden)
-    model, seed = _model_and_seed(tree)
+    model, code = _model(tree, place.parent, model_code)
+    if own and not code:  # nothing else can be judged
+        raise StudyError([p for p in tree.problems if p.key == "model"])
+    seed = _seed(tree)
     card = MODELS[model]
     files = Files(place.parent, outside)
     recipe = subjects_of.recipe(tree, card, seed, files)
@@ -71,7 +83,7 @@ def study_from(data: bytes, place: Path, overrides: Sequence[str] = (), outside:
         chosen, mapped, files.digests, dict(_settings(tree.values)),
     )  # fmt: skip
     warnings = (*tree.warnings, *oddities(study, tree))
-    return replace(study, warnings=tuple(warnings))
+    return replace(study, warnings=tuple(warnings), code=code)
 
 
 def _settings(value: Any, path: str = "") -> Iterator[tuple[str, str]]:
@@ -92,14 +104,26 @@ def _sorted(problems: list[Problem]) -> list[Problem]:
     return sorted(dict.fromkeys(problems), key=lambda p: (p.line is None, p.line or 0))
 
 
-def _model_and_seed(tree: Tree) -> tuple[str, int]:
+def _model(tree: Tree, folder: Path, model_code: bool) -> tuple[str, str]:
+    """The model's name, and its text where it is the user's own."""
     model = tree.values.get("model", "hepatic-lag")
+    if model.endswith(".py"):
+        from cohort.study.own_model import own_model
+
+        return own_model(tree, model, folder, model_code)
     if model not in MODELS:
-        tree.problem(("model",), f"{model[:60]!r} is not a model{nearest(model, MODELS)}; one of {', '.join(MODELS)}")
+        allowed = ", ".join(name for name in MODELS if "@" not in name)
+        tree.problem(
+            ("model",), f"{model[:60]!r} is not a model{nearest(model, MODELS)}; one of {allowed}, or a Python file"
+        )
         model = "hepatic-lag"
+    return model, ""
+
+
+def _seed(tree: Tree) -> int:
     if "seed" not in tree.values and not any(p.key == "seed" for p in tree.problems):
         tree.problem((), "seed is missing; any whole number >= 0 makes the study repeatable")
-    return model, tree.values.get("seed", 0)
+    return int(tree.values.get("seed", 0))
 
 
 def _output(tree: Tree, count: int, protocols: Sequence[Any]) -> Output:

@@ -75,15 +75,17 @@ def published_growth(model: str, arm: Arm) -> float | None:
 @functools.lru_cache(maxsize=256)
 def _growth(model: str, Gin: float, Iin: float, secretion: float) -> float | None:
     card, found = MODELS[model], body(model)
+    if not found.traced.rest:  # no scalar balance to bisect
+        return None
     inputs = [Gin, Iin, *card.nominal.values(), secretion]
-    low, high = 0.0, 100.0 * card.typical["G"]
+    low, high = 0.0, 100.0 * card.typical[found.traced.rest_of]
     if not run(found.balance, [high, *inputs])[0] < 0.0:
         return None
     for _ in range(40):
         middle = 0.5 * (low + high)
         low, high = (middle, high) if run(found.balance, [middle, *inputs])[0] > 0.0 else (low, middle)
     states = run(found.balance, [low, *inputs])[2:]
-    states[card.states.index("G")] = low
+    states[card.states.index(found.traced.rest_of)] = low
     slopes = np.array(run(found.jacobian, [*states, *inputs])).reshape(len(states), -1)
     if not np.isfinite(slopes).all():
         return None

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import Any
 
 from cohort.errors import Problem
 from cohort.infer.ranking import Ranking
@@ -30,7 +31,8 @@ class Study:
     path and text: the file and its bytes; overrides: `--set` words as given; recipe: how subjects are made; arms in
     file order; ranking, sampling, recruitment, maps: None where the study has none; selection: who is counted; files:
     SHA-256 of every data file by the name the study gives it; settings: every key as it counts (overrides applied, arms
-    and strata by name), for telling what changed; warnings: legal but odd.
+    and strata by name), for telling what changed; warnings: legal but odd; code: the
+    text of a user's own model, "" for a shipped one.
     """
 
     path: Path
@@ -50,6 +52,15 @@ class Study:
     files: Mapping[str, str] = field(default_factory=dict)
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
+    code: str = ""
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        """A worker that is sent a study knows its model, too."""
+        self.__dict__.update(state)
+        if self.code:
+            from cohort.model.own import register
+
+            register(self.code, self.model.partition("@")[0])
 
     @property
     def selected(self) -> bool:

@@ -298,6 +298,8 @@ def _check_correlations(tree: Tree, made: Recipe) -> None:
 
 def _check_order(tree: Tree, made: Recipe) -> None:
     """Um > U0 by the rule of every cut: mass above 1e-6 is said, above 1 % refused. Once, for the first stratum."""
+    if not {"U0", "Um"} <= set(made.names):
+        return
     for stratum in made.strata:
         most, least = (stratum.laws.get(p, Fixed(made.nominal.get(p, np.nan))) for p in ("Um", "U0"))
         if isinstance(most, Fixed) and isinstance(least, Fixed):

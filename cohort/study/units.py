@@ -94,6 +94,10 @@ def parse(value: object, *units: str) -> tuple[float, str]:
 
     A plain number is taken in the first of them. Raises UnitError.
     """
+    for kept in units:
+        if kept not in DIMENSIONS:  # a unit of a user's own model
+            plain = kept.replace(" ", "").removeprefix("1")  # "0.06 /min": a unit cannot begin with a digit
+            DIMENSIONS[kept] = Dimension(f"a quantity in {kept}", kept, {plain: 1.0})
     wanted = DIMENSIONS[units[0]].meaning
     if isinstance(value, bool) or not isinstance(value, int | float | str):
         raise UnitError(f'{value!r} is not {wanted}; write a number or a text such as "1 {units[0]}"')
