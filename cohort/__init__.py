@@ -26,11 +26,12 @@ if TYPE_CHECKING:
 __all__ = ["CohortError", "Problem", "RunError", "StudyError", "check", "load_study", "open_results", "run", "simulate"]
 
 
-def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = ()) -> Study:
-    """Read and check a study file. Raises StudyError with every problem."""
+def load_study(path: str | os.PathLike[str], overrides: Sequence[str] = (), model_code: bool = False) -> Study:
+    """Read and check a study file; with `model_code` its model may be a Python file, which is run. Raises StudyError with
+    every problem."""
     from cohort.study import load_study as load
 
-    return load(path, overrides)
+    return load(path, overrides, model_code=model_code)
 
 
 def check(study: Study) -> str:
@@ -43,11 +44,20 @@ def check(study: Study) -> str:
 def run(
     study: Study, out: str | os.PathLike[str] | None = None, workers: int | None = None, quiet: bool = True
 ) -> Results:
-    """Run a study, or carry on where it stopped; `out` is results/<study file's stem> unless named."""
+    """Run a study, or carry on where it stopped; `out` is results/<study file's stem> unless named.
+
+    With several models each has a folder of its own in there, and the first one's results are returned.
+    """
     from cohort.execute.run import run_study
+    from cohort.execute.several import run_several
+    from cohort.report.several import compare
     from cohort.report.summary import rebuild
 
     folder = Path(out) if out is not None else Path("results") / study.path.stem
+    if study.others:
+        run_several(study, folder, workers=workers, quiet=quiet)
+        compare(folder)
+        return open_results(folder / study.model)
     run_study(study, folder, workers, quiet=quiet)
     return rebuild(folder)[0]
 

@@ -53,10 +53,11 @@ def check(words: argparse.Namespace) -> int:
     from cohort.study import describe, load_study, plan
 
     study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code)
-    found = plan(study, words.workers)
-    print(describe(study, found))
-    _warn(study.warnings)
-    _fits(study, found, Path("results"))
+    for one in (study, *study.others):
+        found = plan(one, words.workers)
+        print(describe(one, found))
+        _warn(one.warnings)
+        _fits(one, found, Path("results"))
     return 0
 
 
@@ -72,25 +73,25 @@ def _fits(study: Study, found: Plan, out: Path) -> None:
 def run(words: argparse.Namespace) -> int:
     """Run a study and print what came out."""
     from cohort.execute.run import run_study
-    from cohort.report.summary import closing_words, rebuild
+    from cohort.execute.several import run_several
     from cohort.study import load_study, plan
 
     study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code)
-    _warn(study.warnings)
+    for one in (study, *study.others):
+        _warn(one.warnings)
     folder = Path(words.out) if words.out else Path("results") / study.path.stem
     _fits(study, plan(study, words.workers), folder)
-    done = run_study(study, folder, words.workers, log=Path(words.log) if words.log else None, scheduler=words.scheduler,
-                     mixed=words.mixed_machines, only=words.shards)  # fmt: skip
+    running = run_several if study.others else run_study
+    done = running(study, folder, workers=words.workers, log=Path(words.log) if words.log else None,
+                   scheduler=words.scheduler, mixed=words.mixed_machines, only=words.shards)  # fmt: skip
     if words.shards:
         print(
             f"{done.simulated:,} runs in {done.seconds:.1f} s. When every share is done, run without --shards to finish"
         )
         return 0
-    _, summary = rebuild(folder)
+    _say(folder, words.json)
     if words.json:
-        print(json.dumps(summary, indent=2))
         return 0
-    print(closing_words(summary))
     kept = f", {done.kept:,} were there" if done.kept else ""
     print(f"\n{done.simulated:,} runs in {done.seconds:.1f} s{kept}. To read and to share:\n{folder / 'report.html'}")
     return 0
@@ -98,11 +99,22 @@ def run(words: argparse.Namespace) -> int:
 
 def report(words: argparse.Namespace) -> int:
     """Rebuild tables and summary from the result files."""
+    _say(Path(words.folder), words.json)
+    return 0
+
+
+def _say(folder: Path, as_json: bool) -> None:
+    """Rebuild a result folder's tables and page, and print what came out."""
+    from cohort.report import several
     from cohort.report.summary import closing_words, rebuild
 
-    _, summary = rebuild(Path(words.folder))
-    print(json.dumps(summary, indent=2) if words.json else closing_words(summary))
-    return 0
+    if several.is_several(folder):
+        summary = several.compare(folder)
+        text = several.words(summary)
+    else:
+        _, summary = rebuild(folder)
+        text = closing_words(summary)
+    print(json.dumps(summary, indent=2) if as_json else text)
 
 
 def models(words: argparse.Namespace) -> int:

@@ -396,3 +396,17 @@ MAP_TONGUE_COLUMNS: tuple[Column, ...] = (
     Column("kind", "text", "", "fold: meets an orbit that repels; torus: a second frequency; flip: its period doubles"),
     *_FORCED_PLACE,
 )
+
+COMPARISON_COLUMNS: tuple[Column, ...] = (
+    Column("arm", "text", "", "what was done"),
+    Column("stratum", "text", "", "everyone, or a stratum"),
+    Column("model", "text", "", "the body's equations"),
+    Column("share", "float64", "1", "share that oscillates in this model"),
+    Column("low", "float64", "1", "lower end of its 95 % interval"),
+    Column("high", "float64", "1", "upper end"),
+    Column("period_min", "float64", "min", "median period of the oscillators (everyone only)"),
+    Column(
+        "glucose_amplitude_mg_dl", "float64", "mg/dL", "median glucose amplitude of the oscillators (everyone only)"
+    ),
+    Column("glucose_mean_mg_dl", "float64", "mg/dL", "median of mean glucose (everyone only)"),
+)

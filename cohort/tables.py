@@ -22,6 +22,7 @@ from numpy.typing import NDArray
 
 from cohort.quantities import (
     CLAMP_OUTCOMES,
+    COMPARISON_COLUMNS,
     CONVERGENCE_COLUMNS,
     COURSE_COLUMNS,
     CYCLE_OUTCOMES,
@@ -123,6 +124,7 @@ RECRUITMENT = Schema("recruitment", RECRUITMENT_COLUMNS)
 INCIDENCE = Schema("incidence", INCIDENCE_COLUMNS)
 SENSITIVITY = Schema("sensitivity", SENSITIVITY_COLUMNS)
 CONVERGENCE = Schema("convergence", CONVERGENCE_COLUMNS)
+COMPARISON = Schema("comparison", COMPARISON_COLUMNS)
 MAP_WINDOWS = Schema("map/windows", MAP_WINDOW_COLUMNS)
 MAP_REGION = Schema("map/region", MAP_REGION_COLUMNS)
 MAP_BORDERS = Schema("map/borders", MAP_BORDER_COLUMNS)

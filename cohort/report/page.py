@@ -151,7 +151,7 @@ def _figure(figure: Figure) -> str:
     svg = _unique(figure.svg, figure.name).replace("<svg ", f'<svg role="img" aria-label="{escape(figure.alt)}" ', 1)
     name = _file(figure.name)
     plane = " data-plane" if figure.name.startswith("plane-") else ""
-    table = _table(figure.columns, figure.rows[: MOST_ROWS_SHOWN if not plane else None], "")
+    table = table_html(figure.columns, figure.rows[: MOST_ROWS_SHOWN if not plane else None], "")
     more = (
         ""
         if plane or len(figure.rows) <= MOST_ROWS_SHOWN
@@ -176,7 +176,8 @@ def _csv(columns: Sequence[str], rows: Iterable[Sequence[Any]]) -> str:
     return out.getvalue()
 
 
-def _table(columns: Sequence[str], rows: Iterable[Sequence[Any]], caption: str) -> str:
+def table_html(columns: Sequence[str], rows: Iterable[Sequence[Any]], caption: str) -> str:
+    """A table with its head and caption, everything escaped."""
     head = "".join(f'<th scope="col">{escape(c)}</th>' for c in columns)
     body = "".join("<tr>" + "".join(_cell(v) for v in row) + "</tr>" for row in rows)
     title = f"<caption>{escape(caption)}</caption>" if caption else ""
@@ -219,7 +220,7 @@ def _regimes(summary: dict[str, Any]) -> str:
             yes = counts[OSCILLATES]
             rows.append((stratum, f"{_percent(yes['share'])} ({_percent(yes['low'])} to {_percent(yes['high'])})",
                          *(counts[r]["n"] for r in REGIMES), yes["of"]))  # fmt: skip
-        table = _table(("who", "oscillate (95 %)", *REGIMES, "of"), rows, f"{arm}: subjects by regime")
+        table = table_html(("who", "oscillate (95 %)", *REGIMES, "of"), rows, f"{arm}: subjects by regime")
         found.append(_scrolled(table, f"Regimes in {arm}", arm))
         found += [_note(f"{arm}: {n:,} failed: {word}.") for word, n in facts["failures"].items()]
     words = "; ".join(f"{name}: {REGIME_WORDS[name]}" for name in REGIMES)
@@ -240,7 +241,7 @@ def _forced(summary: dict[str, Any]) -> str:
     if not rows:
         return ""
     head = ("arm", "who", "of those that oscillate by themselves, locked 1:1 (95 %)", *LOCKINGS, "unresolved of those")
-    return _scrolled(_table(head, rows, "Locking to the periodic input"), "Locking", "") + _note(ENTRAINED)
+    return _scrolled(table_html(head, rows, "Locking to the periodic input"), "Locking", "") + _note(ENTRAINED)
 
 
 def _both(unit: str, x: float) -> str:
@@ -265,7 +266,7 @@ def _quantiles(summary: dict[str, Any]) -> str:
             if name in facts["quantiles"]
         ]
         hours = f"{arm}: the last {facts['window_hours']:g} of {facts['hours']:g} h measured"
-        table = _table(("what", "5 %", "median", "95 %", "n"), rows, hours)
+        table = table_html(("what", "5 %", "median", "95 %", "n"), rows, hours)
         found.append(_scrolled(table, f"Values in {arm}", arm))
     return "".join(found)
 
@@ -297,7 +298,7 @@ def _clinic(summary: dict[str, Any]) -> str:
     if sampling["optimistic"]:
         found.append(_note("Optimistic: the body's own irregularity is left out of some analyte."))
     rows = [(name, rate) for name, rate in sampling["false_pulses_per_h"].items()]
-    found.append(_table(("schedule", "false pulses an hour"), rows,
+    found.append(table_html(("schedule", "false pulses an hour"), rows,
                         f"The nadir-to-peak rule of {rule['swing_sds']:g} assay SDs where nothing pulses"))  # fmt: skip
     return "".join(found)
 
@@ -323,8 +324,8 @@ def _recruit(summary: dict[str, Any]) -> str:
     found = ""
     if needed:
         words = f"Fewest recruits for at least {recruitment['want']} with probability {recruitment['assurance']:g}"
-        found += _table(("where", "who", "counted", "recruit", "share", "its SD"), needed, words)
-    found += _table(head, rows, "Predictions for real people, if people are as in this model")
+        found += table_html(("where", "who", "counted", "recruit", "share", "its SD"), needed, words)
+    found += table_html(head, rows, "Predictions for real people, if people are as in this model")
     population = summary.get("population")
     if population:
         draws = f"{population['outer']:,} draws of {population['inner']:,} people"
@@ -338,7 +339,7 @@ def _refused(summary: dict[str, Any]) -> str:
     rows = [(e["outcome"], e["arm"], e["stratum"], e["estimand"], e["refused"]) for e in lists if "refused" in e]
     if not rows:
         return ""
-    table = _table(("outcome", "arm", "stratum", "what was asked", "why not"), rows, "Rankings that cannot be had")
+    table = table_html(("outcome", "arm", "stratum", "what was asked", "why not"), rows, "Rankings that cannot be had")
     return _scrolled(table, "Refused rankings")
 
 
@@ -350,7 +351,7 @@ def _fasting(summary: dict[str, Any]) -> str:
             rows.append((EVERYONE if stratum == "all" else stratum, word, *marks, facts["n"]))
     if not rows:
         return ""
-    table = _table(("who", "what", "5 %", "median", "95 %", "n"), rows, "All virtual people with nothing given")
+    table = table_html(("who", "what", "5 %", "median", "95 %", "n"), rows, "All virtual people with nothing given")
     return _scrolled(table, "Fasting values") + f'<p class="small">{escape(PUBLISHED_FASTING)}</p>'
 
 
@@ -371,9 +372,9 @@ def _method(results: Results, summary: dict[str, Any]) -> str:
         counted += f"; effective sample size {people['effective']:,.0f}" if "effective" in people else ""
         counted += ".</p>"
     named = f"Model {escape(record['model'])}: {escape(model['title'])} {escape(model['source'])}."
-    return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]}. Plasma glucose is within 1e-6 relative of a high-order reference;
-a subject's regime comes from the eigenvalues of its equilibrium under the arm's steady input and from a converged limit
-cycle, never from counting peaks. Intervals of shares are Monte Carlo error: what more virtual people would change. They do
+    return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]}.
+Plasma glucose is within 1e-6 relative of a high-order reference; a subject's regime comes from the eigenvalues of its
+equilibrium under the arm's steady input and from a converged limit cycle, never from counting peaks. Intervals of shares are Monte Carlo error: what more virtual people would change. They do
 not say how far the model is from people. Unresolved subjects (undecided, failed) count once as no and once as yes. Cycle
 outcomes are those of the limit cycle itself; window outcomes are what happens in the measured window, transients and all.
 Every column's meaning and unit stand in the files.</p>{counted}<p>Known limits of this model:</p><ul>{limits}</ul>"""

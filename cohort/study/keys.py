@@ -285,7 +285,12 @@ KEYS: dict[str, Key] = {
     key.path: key
     for key in (
         Key("title", "text", "the study's question", "the file's name"),
-        Key("model", "word", "the body: a name that `cohort models` prints", "hepatic-lag"),
+        Key(
+            "model",
+            "word",
+            "the body: a name that `cohort models` prints, a Python file of your own, or a list of these",
+            "hepatic-lag",
+        ),
         Key("seed", "whole", "where all randomness comes from", low=0, high=2**63 - 1),
         *_subject_keys(),
         *_arm_keys(),

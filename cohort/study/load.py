@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import copy
+import json
 import os
 import tomllib
 from collections.abc import Iterator, Sequence
@@ -25,6 +26,7 @@ from cohort.study.spec import Output, Study
 from cohort.study.tree import Quantity, Tree, check, dotted, read_toml
 
 _NAMED_LISTS = ("arms", "strata", "schedules")
+MOST_MODELS = 12
 MOST_COURSE_POINTS = 2_000_000_000
 
 
@@ -50,15 +52,55 @@ def load_study(
 def study_from(
     data: bytes, place: Path, overrides: Sequence[str] = (), outside: bool = False, model_code: bool = False
 ) -> Study:
-    """As `load_study`, from the file's bytes."""
+    """As `load_study`, from the file's bytes. Where `model` is a list, one study in each: the first, with the `others`."""
     raw, text = read_toml(data, str(place))
     raw, overridden = _override(raw, overrides)
+    if isinstance(raw.get("model"), list):
+        return _in_each(raw["model"], data, place, overrides, (outside, model_code))
+    return _study(raw, text, data, place, overrides, overridden, outside, model_code)
+
+
+def _in_each(names: list[Any], data: bytes, place: Path, overrides: Sequence[str], allowed: tuple[bool, bool]) -> Study:
+    """The same study in each of several models; a parameter that one of them lacks is left out there, and said."""
+    problem = Problem("model", f"a list of 2 to {MOST_MODELS} different models is wanted", str(place))
+    if not 2 <= len(names) <= MOST_MODELS or not all(isinstance(n, str) for n in names) or len(set(names)) < len(names):
+        raise StudyError([problem])
+    found: list[Study] = []
+    problems: list[Problem] = []
+    for name in names:
+        words = (*overrides, f"model={json.dumps(name)}")
+        raw, text = read_toml(data, str(place))
+        raw, overridden = _override(raw, words)
+        elsewhere = frozenset(p for n in names if n in MODELS for p in MODELS[n].parameters)
+        try:
+            made = _study(raw, text, data, place, overrides, overridden - {("model",)}, *allowed, elsewhere)
+            found.append(made)
+        except StudyError as error:
+            problems += error.problems
+    if problems:
+        raise StudyError(_sorted(problems))
+    return replace(found[0], others=tuple(found[1:]))
+
+
+def _study(
+    raw: dict[str, Any],
+    text: str,
+    data: bytes,
+    place: Path,
+    overrides: Sequence[str],
+    overridden: frozenset[KeyPath],
+    outside: bool,
+    model_code: bool,
+    elsewhere: frozenset[str] = frozenset(),
+) -> Study:
+    """A study in one model; elsewhere: parameters that may be left out, since another model of the list has them."""
     own = str(raw.get("model", "")).endswith(".py")
     if own and model_code:  # its symbols and units are needed to read the rest
         from cohort.study.own_model import known
 
         known(str(raw["model"]), place.parent)
     tree = check(raw, text, str(place), overridden)
+    tree.elsewhere = elsewhere
     model, code = _model(tree, place.parent, model_code)
     if own and not code:  # nothing else can be judged
         raise StudyError([p for p in tree.problems if p.key == "model"])

@@ -32,7 +32,7 @@ class Study:
     file order; ranking, sampling, recruitment, maps: None where the study has none; selection: who is counted; files:
     SHA-256 of every data file by the name the study gives it; settings: every key as it counts (overrides applied, arms
     and strata by name), for telling what changed; warnings: legal but odd; code: the
-    text of a user's own model, "" for a shipped one.
+    text of a user's own model, "" for a shipped one; others: the same study in the other models of a list.
     """
 
     path: Path
@@ -53,6 +53,7 @@ class Study:
     settings: Mapping[str, str] = field(default_factory=dict)
     warnings: tuple[Problem, ...] = ()
     code: str = ""
+    others: tuple[Study, ...] = ()
 
     def __setstate__(self, state: dict[str, Any]) -> None:
         """A worker that is sent a study knows its model, too."""

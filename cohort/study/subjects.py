@@ -51,7 +51,7 @@ def recipe(tree: Tree, card: ModelCard, seed: int, files: Files) -> Recipe:
     laws = _laws(tree, values.get("parameters", {}), ("subjects", "parameters"), card, files)
     size = values.get("size", {})
     weight = _weight(tree, size, ("subjects", "size"), files)
-    pairs = _correlations(tree, values.get("correlations", []), ("subjects", "correlations"))
+    pairs = _correlations(tree, values.get("correlations", []), ("subjects", "correlations"), card)
     strata = _strata(tree, values.get("strata", []), card, files, (laws, weight, pairs))
     scaling = size.get("scaling", "none")
     count, draw = _count(tree, values)
@@ -122,6 +122,9 @@ def _laws(tree: Tree, values: Mapping[str, Any], path: Path, card: ModelCard, fi
     allowed = (*card.parameters, *INPUT_PARAMETERS)
     found: dict[str, Law] = {}
     for name, value in values.items():
+        if name not in allowed and name in tree.elsewhere:
+            tree.warnings.append(tree.place((*path, name), f"{card.name} has no {name}; it is left out there"))
+            continue
         if name not in allowed:
             known = "" if name not in PARAMETERS else f" (model {card.name} has no {name})"
             tree.problem((*path, name), f"not a parameter of the model{nearest(name, allowed)}{known}")
@@ -244,7 +247,7 @@ def _strata(
         heavy = _weight(tree, value, path, files) if "weight" in value else weight
         tied = pairs
         if "correlations" in value:
-            tied = _correlations(tree, value["correlations"], (*path, "correlations"))
+            tied = _correlations(tree, value["correlations"], (*path, "correlations"), card)
         strata.append(Stratum(name, value.get("share", 0.0), {**laws, **own}, heavy, tied))
     total = sum(s.share for s in strata)
     if all("share" in v for v in values) and abs(total - 1.0) > 1e-6:
@@ -252,7 +255,7 @@ def _strata(
     return tuple(strata)
 
 
-def _correlations(tree: Tree, values: list[dict[str, Any]], path: Path) -> tuple[Correlation, ...]:
+def _correlations(tree: Tree, values: list[dict[str, Any]], path: Path, card: ModelCard) -> tuple[Correlation, ...]:
     found: dict[frozenset[str], Correlation] = {}
     for i, value in enumerate(values):
         pair, here = value.get("pair"), (*path, i)
@@ -262,7 +265,7 @@ def _correlations(tree: Tree, values: list[dict[str, Any]], path: Path) -> tuple
             tree.problem((*here, "pair"), "two different parameters are wanted")
         elif frozenset(pair) in found:
             tree.problem((*here, "pair"), f"{pair[0]} and {pair[1]} are paired twice")
-        else:
+        elif not any(p in tree.elsewhere and p not in card.parameters for p in pair):
             found[frozenset(pair)] = Correlation((pair[0], pair[1]), value["spearman"])
     return tuple(found.values())
 

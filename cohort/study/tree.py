@@ -29,7 +29,8 @@ class Quantity:
 class Tree:
     """A study's values by path, converted, and every problem found on the way.
 
-    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out.
+    values: the TOML tree with each good leaf converted (quantities to Quantity) and each bad one left out;
+    elsewhere: parameters that other models of a list have.
     """
 
     file: str
@@ -38,6 +39,7 @@ class Tree:
     values: dict[str, Any]
     problems: list[Problem] = field(default_factory=list)
     warnings: list[Problem] = field(default_factory=list)
+    elsewhere: frozenset[str] = frozenset()
 
     def problem(self, path: Sequence[str | int], message: str) -> None:
         """Note a problem at a path."""

@@ -1,0 +1,99 @@
+"""Several models side by side: comparison.parquet, summary.json and a page that leads to each model's own."""
+
+from __future__ import annotations
+
+import json
+from html import escape
+from importlib.resources import files
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from cohort.errors import Problem, StudyError
+from cohort.report.counting import EVERYONE, OSCILLATES
+from cohort.report.page import table_html
+from cohort.report.summary import CAUTION, rebuild
+from cohort.tables import COMPARISON, write_bytes, write_table
+
+SHOWN = {
+    "period_min": "period, min",
+    "glucose_amplitude_mg_dl": "glucose amplitude, mg/dL",
+    "glucose_mean_mg_dl": "mean glucose, mg/dL",
+}
+
+
+def is_several(folder: Path) -> bool:
+    """Whether a folder holds one study in several models."""
+    return (folder / "models.json").is_file()
+
+
+def compare(folder: Path) -> dict[str, Any]:
+    """Rebuild each model's folder and what compares them; returns the summary. Raises StudyError, RunError as `rebuild`."""
+    try:
+        record = json.loads((folder / "models.json").read_text())
+        names = [str(name) for name in record["models"]]
+    except (ValueError, KeyError, TypeError, OSError):
+        raise StudyError([Problem("", "is no list of models", str(folder / "models.json"))]) from None
+    if any("/" in name or name.startswith(".") for name in names):
+        raise StudyError([Problem("", "names a model that is no folder", str(folder / "models.json"))])
+    each = {name: rebuild(folder / name)[1] for name in names}
+    rows = [row for name, summary in each.items() for row in _rows(name, summary)]
+    write_table(folder / "comparison.parquet", COMPARISON, {
+        c.name: np.array([np.nan if r[j] is None else r[j] for r in rows], float) if c.kind == "float64" else [r[j] for r in rows]
+        for j, c in enumerate(COMPARISON.columns)
+    })  # fmt: skip
+    summary = {"title": record["title"], "caution": CAUTION, "lacks": record["lacks"], "models": each}
+    write_bytes(folder / "summary.json", (json.dumps(summary, indent=2) + "\n").encode())
+    write_bytes(folder / "report.html", _page(record, names, rows).encode())
+    return summary
+
+
+def _rows(name: str, summary: dict[str, Any]) -> list[tuple[Any, ...]]:
+    rows = []
+    for arm, facts in summary["arms"].items():
+        for stratum, counts in facts["strata"].items():
+            share = counts[OSCILLATES]
+            medians = [facts["quantiles"].get(key, {}).get("q50") if stratum == EVERYONE else None for key in SHOWN]
+            rows.append((arm, stratum, name, share["share"], share["low"], share["high"], *medians))
+    return sorted(rows, key=lambda r: (r[0], r[1]))
+
+
+def words(summary: dict[str, Any]) -> str:
+    """The comparison for a terminal."""
+    lines = [summary["title"], ""]
+    for name, one in summary["models"].items():
+        for row in _rows(name, one):
+            if row[1] == EVERYONE:
+                lines.append(
+                    f"{row[0]}, {name}: {100 * row[3]:.1f} % oscillate ({100 * row[4]:.1f} % to {100 * row[5]:.1f} %)"
+                )
+    for name, lacking in summary["lacks"].items():
+        if lacking:
+            lines.append(f"{name} has no {', '.join(lacking)}: its people do not differ in that")
+    return "\n".join([*lines, "", summary["caution"]])
+
+
+def _page(record: dict[str, Any], names: list[str], rows: list[tuple[Any, ...]]) -> str:
+    shown = [
+        (r[0], r[1], r[2], f"{100 * r[3]:.1f} % ({100 * r[4]:.1f} % to {100 * r[5]:.1f} %)",
+         *("" if v is None else f"{v:.1f}" for v in r[6:]))
+        for r in sorted(rows, key=lambda r: (r[0], r[1]))
+    ]  # fmt: skip
+    head = ("arm", "who", "model", "oscillate (95 %)", *(f"median {w}" for w in SHOWN.values()))
+    lacks = "".join(
+        f'<p class="note">{escape(name)} has no {escape(", ".join(p))}: its people do not differ in that.</p>'
+        for name, p in record["lacks"].items()
+        if p
+    )
+    links = "".join(f'<li><a href="{escape(name)}/report.html">{escape(name)}</a></li>' for name in names)
+    css = (files("cohort.report") / "page.css").read_text()
+    return f"""<!DOCTYPE html>
+<html lang="en"><head><meta charset="utf-8"><meta name="viewport" content="width=device-width, initial-scale=1">
+<title>{escape(record["title"])}</title><style>{css}</style></head>
+<body><header class="top"><h1>{escape(record["title"])}</h1></header><main id="content">
+<p>The same virtual people in {len(names)} models; what they share has the same values. Numbers stand side by side and are not
+pooled: models are not a sample of bodies.</p><p class="small">{escape(CAUTION)}</p>
+<div class="wide" tabindex="0" role="region" aria-label="Comparison">{table_html(head, shown, "What each model says")}</div>
+{lacks}<h2>Each model by itself</h2><ul>{links}</ul></main></body></html>
+"""
