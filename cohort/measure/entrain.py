@@ -105,7 +105,7 @@ class Forced:
         starts = np.concatenate([np.repeat(x, size, axis=0), np.tile(np.diag(scale), (n, 1))], axis=1)
         rows = np.repeat(np.arange(n), size)
         stepper = tangent_stepper(self.body, *accuracy, steady=self.pieces.steady)
-        wide = np.concatenate([scale, np.full(size, np.inf)])
+        wide = np.concatenate([scale, scale])  # on a forced orbit x may hardly move while its neighbours fall in fast
         some = self.take(rows)
         final, _ = advance(assemble(stepper, some.parameters, starts, wide, some.pieces, (0, 0)))
         columns = final[:, size:].reshape(n, size, size) / scale[None, :, None]

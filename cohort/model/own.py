@@ -15,6 +15,7 @@ The file is code and is run as such; who calls `register` has been told so. It d
 from __future__ import annotations
 
 import hashlib
+import inspect
 import traceback
 from collections.abc import Mapping
 from typing import Any
@@ -24,7 +25,7 @@ import numpy as np
 from cohort.errors import nearest
 from cohort.model import body as bodies
 from cohort.model.catalogue import MODELS, ModelCard
-from cohort.model.trace import exp, log
+from cohort.model.trace import INPUTS, exp, log
 from cohort.program import run
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS, Quantity
 
@@ -50,6 +51,7 @@ def register(code: str, name: str) -> str:
         added = _quantities(found["parameters"])
         PARAMETERS.update(added)
         try:
+            _check_names(found, card)
             made = bodies.make_body(card, found["equations"], found.get("at_rest"))
             _check(made)
         except Exception as error:
@@ -129,6 +131,17 @@ def _quantities(parameters: Mapping[str, Any]) -> dict[str, Quantity]:
         else:
             added[symbol] = Quantity(symbol, meaning, unit, low, high)
     return added
+
+
+def _check_names(found: Mapping[str, Any], card: ModelCard) -> None:
+    known = (*card.states, *INPUTS, *card.parameters, *bodies.ARM_PARAMETERS)
+    for function in ("equations", "at_rest"):
+        if function in found:
+            for name in inspect.signature(found[function]).parameters:
+                if name not in known:
+                    raise OwnModelError(
+                        f"{function} take {name!r}, which is no state, input or parameter{nearest(name, known)}"
+                    )
 
 
 def _check(made: bodies.Body) -> None:

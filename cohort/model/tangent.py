@@ -11,10 +11,11 @@ from cohort.model.trace import Traced, derivative, name
 
 @functools.cache
 def tangent_stepper(body: Body, order: int, tolerance: float, steady: bool = True) -> Stepper:
-    """A stepper of states x and then v, with v' = J(x) v; the step size looks at x alone. `steady`: as in `Body.stepper`.
+    """A stepper of states x and then v, with v' = J(x) v. `steady`: as in `Body.stepper`.
 
-    Lanes that hold one subject with different v therefore take the same steps, and their v are columns of the exact
-    derivative of what the integrator computes.
+    Where v is given an infinite scale the step size looks at x alone: lanes that hold one subject with different v take the
+    same steps, and their v are columns of the exact derivative of what the integrator computes. Where x hardly moves but
+    its neighbours fall towards it fast, v needs a scale of its own.
     """
     traced = body.traced
     moved = {state: name("d" + state) for state in traced.states}

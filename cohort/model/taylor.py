@@ -273,7 +273,8 @@ class Stepper:
           outputs x after the step[n], step, health (1 where all is well), coefficients[seen][order + 1],
           summaries[seen][SUMMARY].
     Input coefficients are orders 0..order-1 of Gin, then of Iin; only order 0 where `steady`. Coefficients are of
-    powers of (time since the step began) / step. The first `watched` states set the step size and the health. Summaries
+    powers of (time since the step began) / step. States of an infinite scale have no part in the step size, those after
+    the first `watched` none in the health. Summaries
     are what measures need; who only samples leaves them out. `relative` measures each state by its own present size in
     place of the given scale: for arms in which one may fade away.
     """
@@ -342,7 +343,7 @@ class Stepper:
             rates,
         )
         states = [Series("state", s) for s in self.traced.states]
-        h = self._step_size(builder, recurrences, states[: self.watched], left=2 * n)
+        h = self._step_size(builder, recurrences, states, left=2 * n)
         after = [self._advance(builder, recurrences, s, h) for s in states]
         health = self._health(builder, after[: self.watched], h, n)
         powers = [builder.constant(1.0), h]

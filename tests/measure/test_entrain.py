@@ -119,8 +119,8 @@ def test_a_narrow_tongue_obeys_adlers_law() -> None:
 
 def test_a_border_of_the_body_separates_locked_from_not() -> None:
     box = Box(Setting(BODY, NOMINAL, 216.0), (90.0, 125.0), (0.02, 0.12))
-    borders = [t for t in tongues(box, locking_map(box, 12), 12) if t.periods == 1]
-    assert len(borders) >= 2
+    borders = [t for t in tongues(box, locking_map(box, 12), 12) if set(t.kinds) == {"torus"}]
+    assert len(borders) >= 2  # a fold may end one locked orbit where another goes on
     for border in borders:
         middle = border.points[len(border.points) // 2]
         side = np.sign(OWN_PERIOD - middle[0])
