@@ -9,9 +9,16 @@ sys.path.insert(0, str(Path(__file__).resolve().parent.parent))
 
 from cohort.quantities import (
     CLAMP_OUTCOMES,
+    COMPARISON_COLUMNS,
     CYCLE_OUTCOMES,
     DETECTION_COLUMNS,
+    FORCED_OUTCOMES,
     INCIDENCE_COLUMNS,
+    MAP_BORDER_COLUMNS,
+    MAP_LOCKING_COLUMNS,
+    MAP_REGION_COLUMNS,
+    MAP_TONGUE_COLUMNS,
+    MAP_WINDOW_COLUMNS,
     MEAL_OUTCOMES,
     POPULATION_COLUMNS,
     RANKING_COLUMNS,
@@ -40,6 +47,7 @@ def table() -> str:
 COLUMNS = {
     "outcomes/<arm>": (*CYCLE_OUTCOMES, *WINDOW_OUTCOMES),
     "outcomes/<arm> of clamps": CLAMP_OUTCOMES,
+    "outcomes/<arm> of periodic inputs": FORCED_OUTCOMES,
     "meals/<arm>": MEAL_OUTCOMES,
     "observations/<arm>/<schedule>": DETECTION_COLUMNS,
     "population": POPULATION_COLUMNS,
@@ -47,6 +55,12 @@ COLUMNS = {
     "incidence.parquet": INCIDENCE_COLUMNS,
     "recruitment.parquet": RECRUITMENT_COLUMNS,
     "sensitivity.parquet": SENSITIVITY_COLUMNS,
+    "comparison.parquet": COMPARISON_COLUMNS,
+    "map/windows.parquet": MAP_WINDOW_COLUMNS,
+    "map/region.parquet": MAP_REGION_COLUMNS,
+    "map/borders.parquet": MAP_BORDER_COLUMNS,
+    "map/locking.parquet": MAP_LOCKING_COLUMNS,
+    "map/tongues.parquet": MAP_TONGUE_COLUMNS,
 }
 
 

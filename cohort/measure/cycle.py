@@ -306,6 +306,7 @@ def _second_multiplier(monodromy: Array) -> Array:
 
 @jit
 def spectra(matrices, values):  # type: ignore[no-untyped-def]
+    """Write the eigenvalues of each matrix, float64[n, m, m], into complex128[n, m]; those of one not finite stay."""
     for s in range(matrices.shape[0]):
         if np.all(np.isfinite(matrices[s])):
             spectrum(matrices[s], values[s])

@@ -13,7 +13,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import brentq
 
 from cohort.compiled import compile_program
 from cohort.model.body import Body
@@ -98,6 +97,8 @@ def described(setting: Setting, names: tuple[str, ...], points: Array) -> Border
 
 def crossings(setting: Setting, name: str, low: float, high: float) -> Array:
     """All values of one variable in low..high where stability changes, rising, to about 1e-12 of themselves."""
+    from scipy.optimize import brentq
+
     scan = np.geomspace(low, high, SCANNED) if low > 0.0 else np.linspace(low, high, SCANNED)
     growth = setting.growth((name,), scan[:, None])
 

@@ -374,10 +374,11 @@ def _method(results: Results, summary: dict[str, Any]) -> str:
     named = f"Model {escape(record['model'])}: {escape(model['title'])} {escape(model['source'])}."
     return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]}.
 Plasma glucose is within 1e-6 relative of a high-order reference; a subject's regime comes from the eigenvalues of its
-equilibrium under the arm's steady input and from a converged limit cycle, never from counting peaks. Intervals of shares
-are Monte Carlo error: what more virtual people would change. They do not say how far the model is from people. Unresolved subjects (undecided, failed) count once as no and once as yes. Cycle
-outcomes are those of the limit cycle itself; window outcomes are what happens in the measured window, transients and all.
-Every column's meaning and unit stand in the files.</p>{counted}<p>Known limits of this model:</p><ul>{limits}</ul>"""
+equilibrium under the arm's steady input and from a converged limit cycle, never from counting peaks. Intervals of
+shares are Monte Carlo error: what more virtual people would change. They do not say how far the model is from people.
+Unresolved subjects (undecided, failed) count once as no and once as yes. Cycle outcomes are those of the limit cycle
+itself; window outcomes are what happens in the measured window, transients and all. Every column's meaning and unit
+stand in the files.</p>{counted}<p>Known limits of this model:</p><ul>{limits}</ul>"""
 
 
 def _made(results: Results) -> str:

@@ -4,13 +4,17 @@ import re
 import subprocess
 import sys
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
 
 from cohort.execute.run import run_study
+from cohort.execute.several import run_several
+from cohort.report.results import Results
+from cohort.report.several import compare
 from cohort.report.summary import rebuild
-from cohort.study import load_study
+from cohort.study import Study, load_study
 from cohort.tables import numbers
 
 ROOT = Path(__file__).resolve().parents[2]
@@ -35,7 +39,7 @@ def test_the_study_read_line_by_line_is_the_shipped_one() -> None:
 
 def test_python_examples_run(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     blocks = re.findall(r"```python\n(.*?)```", README, re.DOTALL)
-    assert len(blocks) == 2
+    assert len(blocks) == 3
     (tmp_path / "studies").symlink_to(ROOT / "studies")
     monkeypatch.chdir(tmp_path)
     names: dict[str, object] = {}
@@ -48,11 +52,23 @@ ROWS = re.findall(r"(?m)^\| ([a-z-]+) \| [^|]+\? \| ([^|]+) \|$", README)
 PROMISE = re.compile(r"`([^`]+)`: (?:(oscillates) ([\d.]+)-([\d.]+) %|median (\w+) ([\d.]+)-([\d.]+))")
 DETECTS = re.compile(r"`([^`]+)`: ([\w ]+) detects ([\d.]+)-([\d.]+) %")
 RECRUIT = re.compile(r"`([^`]+)`: recruit ([\d.]+)-([\d.]+)")
+CAPTURES = re.compile(r"`([^`]+)`: captures ([\d.]+)-([\d.]+) %")
 LEADS = re.compile(r"`([^`]+)`: (\w+) leads (\w+) \(([^)]+)\)")
 
 
 def test_every_study_that_ships_is_in_the_table() -> None:
     assert {name for name, _ in ROWS} == {path.stem for path in (ROOT / "studies").glob("*.toml")}
+
+
+def answered(study: Study, out: Path) -> tuple[Results, dict[str, Any]]:
+    """Results and summary of a run; with several models, arms are named `model: arm`."""
+    if not study.others:
+        run_study(study, out, quiet=True)
+        return rebuild(out, page=False)
+    run_several(study, out, quiet=True)
+    each = compare(out)["models"]
+    arms = {f"{model}: {arm}": facts for model, one in each.items() for arm, facts in one["arms"].items()}
+    return Results(out / study.model), {"arms": arms}
 
 
 @pytest.mark.parametrize(("name", "expected"), ROWS, ids=[name for name, _ in ROWS])
@@ -61,12 +77,16 @@ def test_a_shipped_study_gives_its_stated_answer(name: str, expected: str, tmp_p
     text = (ROOT / "studies" / f"{name}.toml").read_text()
     if 'method = "sobol"' in text:
         fewer += ["ranking.base=64", "ranking.tolerance=0.9"]
+    fewer += ["map.points=12"] if "[map]" in text else ["subjects.count=192"] if "natural" in text else []
     study = load_study(ROOT / "studies" / f"{name}.toml", [*fewer, "output.time_courses=2"])
-    run_study(study, tmp_path / "out", quiet=True)
-    results, summary = rebuild(tmp_path / "out", page=False)
+    results, summary = answered(study, tmp_path / "out")
     promises, leads = PROMISE.findall(expected), LEADS.findall(expected)
     detects, recruits = DETECTS.findall(expected), RECRUIT.findall(expected)
-    assert len(promises) + len(leads) + len(detects) + len(recruits) == expected.count("`") // 2
+    captures = CAPTURES.findall(expected)
+    assert len(promises) + len(leads) + len(detects) + len(recruits) + len(captures) == expected.count("`") // 2
+    for arm, low, high in captures:
+        counted = summary["arms"][arm]["strata"]["everyone"]["oscillating and locked 1:1"]
+        assert counted["high"] * 100 >= float(low) and counted["low"] * 100 <= float(high), (arm, counted)
     for arm, schedule, low, high in detects:
         counted = summary["arms"][arm]["schedules"][schedule]["everyone"]["detected"]
         assert counted["high"] * 100 >= float(low) and counted["low"] * 100 <= float(high), (arm, counted)
