@@ -311,13 +311,45 @@ def row_digest(table: pa.Table, keys: Sequence[str]) -> str:
     return digest(table.sort_by([(key, "ascending") for key in keys]))
 
 
-def read_columns(path: Path) -> dict[str, list[object]]:
-    """The columns of any Parquet file as Python lists. Raises ValueError where it is none."""
+def count_cells(data: bytes) -> int:
+    """How many cells a Parquet file says it holds. Raises ValueError where it is none."""
     try:
-        table = pq.read_table(path, use_threads=False)
+        found = pq.read_metadata(pa.BufferReader(data))
+        return int(found.num_rows) * int(found.num_columns)
     except (OSError, pa.ArrowException) as error:
-        raise ValueError(str(error).splitlines()[0]) from None
-    return {name: table.column(name).to_pylist() for name in table.column_names}
+        raise ValueError(_first_line(error)) from None
+
+
+def read_columns(data: bytes) -> dict[str, list[object]]:
+    """The columns of any Parquet file of numbers, texts and truth values as Python lists. Raises ValueError where it is none.
+
+    Texts are read by their dictionary: a file of a few bytes may say one long text a million times.
+    """
+    try:
+        schema = pq.read_schema(pa.BufferReader(data))
+        odd = [f.name for f in schema if pa.types.is_nested(f.type) or isinstance(f.type, pa.BaseExtensionType)]
+        if odd or len(set(schema.names)) < len(schema.names):
+            raise ValueError(f"column {odd[0]!r} holds no plain values" if odd else "two columns have one name")
+        words = [f.name for f in schema if pa.types.is_string(f.type) or pa.types.is_large_string(f.type)]
+        table = pq.read_table(pa.BufferReader(data), use_threads=False, read_dictionary=words)
+        table.validate(full=True)
+        return {name: _cells(table.column(name)) for name in table.column_names}
+    except (OSError, pa.ArrowException) as error:
+        raise ValueError(_first_line(error)) from None
+
+
+def _cells(column: pa.ChunkedArray) -> list[object]:
+    if not pa.types.is_dictionary(column.type):
+        return list(column.to_pylist())
+    found: list[object] = []
+    for chunk in column.chunks:
+        words = chunk.dictionary.to_pylist()
+        found += [None if i is None else words[i] for i in chunk.indices.to_pylist()]
+    return found
+
+
+def _first_line(error: BaseException) -> str:
+    return (str(error).splitlines() or [type(error).__name__])[0]
 
 
 def numbers(table: pa.Table, name: str) -> NDArray[np.float64]:
