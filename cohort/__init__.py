@@ -49,7 +49,7 @@ def run(
 
     folder = Path(out) if out is not None else Path("results") / study.path.stem
     run_study(study, folder, workers, quiet=quiet)
-    return rebuild(folder)[0]
+    return rebuild(folder, verify=False)[0]
 
 
 def open_results(folder: str | os.PathLike[str]) -> Results:

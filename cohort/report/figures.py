@@ -52,7 +52,7 @@ def _drawn(width: float, height: float, rows: int = 1, columns: int = 1) -> Iter
         "font.size": 9, "svg.fonttype": "none", "svg.hashsalt": "cohort", "axes.edgecolor": PALE, "text.color": INK,
         "axes.labelcolor": INK, "xtick.color": INK, "ytick.color": INK, "figure.facecolor": "none",
         "axes.facecolor": "none", "savefig.facecolor": "none", "legend.frameon": False, "font.family": "sans-serif",
-        "axes.spines.top": False, "axes.spines.right": False, "path.simplify_threshold": 0.4,
+        "text.parse_math": False, "axes.spines.top": False, "axes.spines.right": False, "path.simplify_threshold": 0.4,
     }  # fmt: skip
     with mpl.rc_context(style):
         canvas = Canvas(figsize=(width, height), layout="constrained")

@@ -339,7 +339,7 @@ def _method(results: Results, summary: dict[str, Any]) -> str:
         counted += f"; effective sample size {people['effective']:,.0f}" if "effective" in people else ""
         counted += ".</p>"
     return f"""<p>Model {escape(card.name)}: {escape(card.title)} {escape(card.source)}. {summary["subjects"]:,} virtual people,
-drawn by {escape(record["draw"])}, seed {record["seed"]}. Plasma glucose is within 1e-6 relative of a high-order reference;
+drawn by {escape(record["draw"])}, seed {record["seed"]:d}. Plasma glucose is within 1e-6 relative of a high-order reference;
 a subject's regime comes from the eigenvalues of its equilibrium under the arm's steady input and from a converged limit
 cycle, never from counting peaks. Intervals of shares are Monte Carlo error: what more virtual people would change. They do
 not say how far the model is from people. Unresolved subjects (undecided, failed) count once as no and once as yes. Cycle
