@@ -4,6 +4,7 @@ could not finish (what is there is kept), 130 interrupted."""
 from __future__ import annotations
 
 import argparse
+import io
 import json
 import sys
 from collections.abc import Callable, Sequence
@@ -304,6 +305,9 @@ def _positive(text: str) -> int:
 
 def main(words: Sequence[str] | None = None) -> int:
     """Run one command and return its exit code; no traceback reaches a user."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")  # a terminal may not know a letter of a title
     parsed = _parser().parse_args(words)
     try:
         function: Callable[[argparse.Namespace], int] = parsed.function
@@ -315,6 +319,9 @@ def main(words: Sequence[str] | None = None) -> int:
     except CohortError as error:
         print(error, file=sys.stderr)
         return error.exit_code
+    except MemoryError:
+        print("there is not enough memory for this; what was finished is kept", file=sys.stderr)
+        return RunError.exit_code
     except KeyboardInterrupt:
         print("\ninterrupted; what was finished is kept, run again to carry on", file=sys.stderr)
         return INTERRUPTED
