@@ -20,7 +20,8 @@ from cohort.quantities import (
     WINDOW_OUTCOMES,
     Column,
 )
-from cohort.report.record import RANKING, misfit
+from cohort.reading import misfit
+from cohort.report.record import RANKING
 from cohort.report.results import Results
 from cohort.tables import CONVERGENCE, SENSITIVITY, write_table
 

@@ -2,32 +2,16 @@
 
 from __future__ import annotations
 
-import json
 import math
-from collections.abc import Callable, Mapping
-from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 from cohort.errors import unprintable
 from cohort.model.catalogue import MODELS
-from cohort.reading import read_plain
+from cohort.reading import Maybe, Shape, misfit, read_json
 
-LARGEST_RECORD = 100_000_000
 _LONGEST = 100_000
 _LARGEST = 10**15
-
-Shape = Any
-"""A predicate of one value; {name: shape} of a table's keys; {None: shape} of a table with any names; [shape] of a list;
-`Maybe(shape)` where it may be null or missing."""
-
-
-@dataclass(frozen=True)
-class Maybe:
-    """A value that may be null, and where `absent` missing too."""
-
-    shape: Shape
-    absent: bool = True
 
 
 def _text(value: Any) -> bool:
@@ -75,8 +59,9 @@ _OUTCOME = {"arm": _name, "outcome": _text}
 RECORD: dict[str, Shape] = {
     "title": _text, "model": _model, "seed": _seed, "count": _whole, "shards": _whole, "draw": _text, "state": _text,
     "arms": [_name], "strata": [_text], "varied": [_text], "overrides": [_text], "versions": {None: _text},
-    "arm_facts": {None: {"hours": _number, "window_hours": _number, "steady_mg_per_min": Maybe(_number, absent=False), "disagrees": _flag,
-                         "forcing_period_min": Maybe(_number)}},
+    "arm_facts": {None: {
+        "hours": _number, "window_hours": _number, "steady_mg_per_min": Maybe(_number, absent=False), "disagrees": _flag,
+        "forcing_period_min": Maybe(_number)}},
     "sampling": Maybe({
         "schedules": [_name], "unseen": {None: _text}, "false_pulses_per_h": {None: _number}, "optimistic": _flag,
         "rule": {"band_min": (_number, _number), "false_alarm": _number, "detect_in": _text, "swing_sds": _number}}),
@@ -100,45 +85,14 @@ RANKING: dict[str, Shape] = {
 
 def read_record(folder: Path) -> dict[str, Any]:
     """run.json of a result folder. Raises OSError or ValueError, with what is wrong, where it is none."""
-    try:
-        found = json.loads(read_plain(folder / "run.json", LARGEST_RECORD))
-    except RecursionError:
-        raise ValueError("nested too deeply") from None
+    found = read_json(folder / "run.json")
     wrong = misfit(found, RECORD)
     if wrong:
         raise ValueError(f"{wrong} is missing or not as a run writes it")
     arms = found["arms"]
-    chosen = [entry["arm"] for kind in (found.get("selection") or {}).values() for entry in kind]
+    selection = found.get("selection") or {"eligible": [], "match": []}
+    chosen = [entry["arm"] for entry in (*selection["eligible"], *selection["match"])]
     if not arms or not found["strata"] or len(set(arms)) < len(arms) or not {*arms, *chosen} <= set(found["arm_facts"]):
         raise ValueError("arms, strata and arm_facts do not belong together")
     record: dict[str, Any] = found
     return record
-
-
-def misfit(value: Any, shape: Shape, name: str = "") -> str:
-    """The dotted name of the first entry that is missing or of another shape, or an empty text."""
-    if isinstance(shape, Maybe):
-        return "" if value is None else misfit(value, shape.shape, name)
-    if isinstance(shape, Callable):  # type: ignore[arg-type]
-        return "" if shape(value) else name or "it"
-    if isinstance(shape, dict):
-        return _misfit_table(value, shape, name)
-    if not isinstance(value, list) or (isinstance(shape, tuple) and len(value) != len(shape)):
-        return name or "it"
-    shapes = shape if isinstance(shape, tuple) else shape * len(value)
-    return next(
-        filter(None, (misfit(v, s, f"{name}[{i + 1}]") for i, (v, s) in enumerate(zip(value, shapes, strict=True)))), ""
-    )
-
-
-def _misfit_table(value: Any, shape: Mapping[str | None, Shape], name: str) -> str:
-    if not isinstance(value, dict):
-        return name or "it"
-    if None in shape:
-        odd = next((key for key in value if not _text(key)), None)
-        shape = dict.fromkeys(value, shape[None]) if odd is None else {f"{odd:.20}": lambda _: False}
-    base = f"{name}." if name else ""
-    lacking = [key for key, s in shape.items() if key not in value and not (isinstance(s, Maybe) and s.absent)]
-    if lacking:
-        return f"{base}{lacking[0]}"
-    return next(filter(None, (misfit(value.get(key), s, f"{base}{key}") for key, s in shape.items())), "")

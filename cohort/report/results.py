@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -11,8 +10,8 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 from cohort.errors import Problem, RunError, StudyError
-from cohort.reading import read_plain
-from cohort.report.record import LARGEST_RECORD, read_record
+from cohort.reading import read_json
+from cohort.report.record import read_record
 
 if TYPE_CHECKING:
     import pyarrow as pa
@@ -89,11 +88,13 @@ class Results:
 
     def verify(self) -> None:
         """Raise ValueError where a part's values are not those it was written with."""
-        from cohort.tables import check_digest, part_paths
+        from cohort.tables import check_digest, part_name, part_paths
 
-        kinds = ("time_courses", "meals")
-        more = [f"{kind}/{arm}" for kind in kinds for arm in self.arms]
-        for table in (*self._tables, *more, "population", "ranking"):
+        for table in self._tables:
+            for number in self.whole_shards:
+                check_digest(self.folder / table / part_name(number))
+        of_arms = [f"{kind}/{arm}" for kind in ("time_courses", "meals") for arm in self.arms]
+        for table in (*of_arms, "population", "ranking"):
             for path in part_paths(self.folder / table):
                 check_digest(path)
 
@@ -154,8 +155,8 @@ class Results:
     def summary(self) -> dict[str, Any]:
         """summary.json: the headline numbers."""
         try:
-            found: dict[str, Any] = json.loads(read_plain(self.folder / "summary.json", LARGEST_RECORD))
-        except (OSError, ValueError, RecursionError):
+            found: dict[str, Any] = read_json(self.folder / "summary.json")
+        except (OSError, ValueError):
             why = "has no readable summary.json; `cohort report` makes it anew"
             raise StudyError([Problem("", why, str(self.folder))]) from None
         return found

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.errors import Problem, RunError, StudyError
+from cohort.errors import Problem, RunError, StudyError, one_line
 from cohort.quantities import REGIMES
 from cohort.report.chosen import Chosen, chosen
 from cohort.report.clinic import detection_lines, fasting_lines, people_lines, recruitment_lines, sampling_lines
@@ -123,7 +123,7 @@ def _failures(results: Results, arm: str) -> dict[str, int]:
     counts: dict[str, int] = {}
     for number in results.whole_shards:
         part = read_part(results.folder / "outcomes" / arm, number, ["failure"])
-        for word in part.column("failure").drop_null().to_pylist():
+        for word in map(one_line, part.column("failure").drop_null().to_pylist()):
             counts[word] = counts.get(word, 0) + 1
     return counts
 
