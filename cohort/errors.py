@@ -24,8 +24,8 @@ def unprintable(text: str) -> str:
 
 
 def one_line(text: str, longest: int = LONGEST_SHOWN) -> str:
-    """A text as one line: such characters as escapes, and what is too long cut."""
-    whole = text if len(text) <= longest else f"{text[:longest]}..."
+    """A text as one line: such characters as escapes, and what is too long cut in its middle."""
+    whole = text if len(text) <= longest else f"{text[: longest // 2]} ... {text[-longest // 2 :]}"
     return _NO_TEXT.sub(lambda c: ascii(c[0])[1:-1], whole)
 
 

@@ -81,9 +81,16 @@ def _name(tree: Tree, value: Mapping[str, Any], path: Path, taken: list[str], i:
     if not NAME.fullmatch(name):
         tree.problem((*path, "name"), f"{name[:60]!r} cannot name a folder; letters, digits, spaces and . _ + - within, at "
                      "most 60")  # fmt: skip
-    if name.lower() in [t.lower() for t in taken]:
-        tree.problem((*path, "name"), f"{name!r} is the name of another arm")
+    like = [t for t in taken if _folded(t) == _folded(name)]
+    if like:
+        alike = f"is too much like {like[0]!r}, the name" if like[0].lower() != name.lower() else "is the name"
+        tree.problem((*path, "name"), f"{name!r} {alike} of another arm")
     return str(name)
+
+
+def _folded(name: str) -> str:
+    """What a name comes to in the files of its figures."""
+    return re.sub(r"[^a-z0-9._]+", "-", name.lower())
 
 
 def _noted(tree: Tree, path: Path) -> bool:

@@ -177,10 +177,12 @@ def _weight(tree: Tree, values: Mapping[str, Any], path: Path, files: Files) -> 
 
 def _within(tree: Tree, path: Path, law: Law, low: float, high: float, unit: str) -> bool:
     shown = "" if unit == "1" else f" {unit}"
-    with np.errstate(all="ignore"):
-        inside, mass = cut(law, low, high)
-        marks = inside.quantile(_MARKS) if mass <= CUT_REFUSED else np.zeros(1)
-    if not (np.isfinite(mass) and np.isfinite(marks).all()):
+    try:
+        with np.errstate(all="raise", under="ignore"):
+            inside, mass = cut(law, low, high)
+            if mass <= CUT_REFUSED and not isinstance(law, Beta):  # solving a beta law takes its time
+                inside.quantile(_MARKS)
+    except (FloatingPointError, OverflowError, ZeroDivisionError):
         tree.problem(path, "the numbers of this law are too large or too small to compute with")
         return False
     if isinstance(law, Fixed):
