@@ -26,8 +26,8 @@ def counts(table: str) -> list[list[str]]:
 
 def test_a_short_run_finds_nothing(tmp_path: Path) -> None:
     found = {name: (int(cases.replace(",", "")), int(paths.replace(",", "")))
-             for name, cases, paths, _ in counts(fuzz(tmp_path, "--cases", "2500", "--seed", "3", "--only", *QUICK))}  # fmt: skip
-    assert set(found) == {*QUICK, "all"} and found["all"][0] > 2000
+             for name, cases, paths, _ in counts(fuzz(tmp_path, "--cases", "1800", "--seed", "3", "--only", *QUICK))}  # fmt: skip
+    assert set(found) == {*QUICK, "all"} and found["all"][0] > 1500
     assert found["study"][1] > 1000 and found["lines"][1] > 50
 
 
