@@ -20,6 +20,8 @@ from hypothesis import strategies as st
 from cohort.cli import main
 from cohort.errors import Problem, RunError, StudyError, nearest, one_line
 from cohort.execute.limits import free_bytes, lacking
+from cohort.observe.detector import Rule
+from cohort.observe.series import detect_series
 from cohort.observe.table import read_series
 from cohort.reading import UnreadableError, read_plain
 from cohort.study import describe, plan, study_from
@@ -96,6 +98,9 @@ NAMED: dict[str, tuple[str | bytes, str]] = {
     "samples every 1e-300 min": (sampled("every = 1e-300\nduration = 10"), "must be >="),
     "samples begun at 1e308 min": (sampled("every = 10\nduration = 1e308\nstart = 1e308"), "an arm lasts at most"),
     "samples for 1e308 min": (sampled("every = 10\nduration = 1e308"), "an arm lasts at most"),
+    "1,000 samples in a year": (
+        sampled(f"times = [{','.join(str(k + 500_000 * (k > 500)) for k in range(1000))}]").replace("10 h", "366 d"),
+        "at most 4,000 are searched"),
     "1,000 schedules": (
         SHORT + "[sampling]\n" + "[[sampling.schedules]]\n" * 1000, "1000 schedules; at most 100 are allowed"),
     "steps of 1,000,000 entries": (
@@ -383,6 +388,14 @@ def test_a_hostile_series_is_refused_in_words_and_soon(tmp_path: Path, data: byt
     with soon():
         found = series_of(tmp_path, data)
     assert expected in found
+
+
+def test_a_series_with_a_gap_of_a_century_is_not_searched(tmp_path: Path) -> None:
+    rows = [f"{10 * k + (5e7 if k >= 30 else 0)},a,{90 + k % 11}" for k in range(60)]
+    (tmp_path / "s.csv").write_text("time (min),subject,glucose (mg/dL)\n" + "\n".join(rows))
+    with soon():
+        found = detect_series(read_series(tmp_path / "s.csv"), Rule(), {"glucose": 0.02}, tmp_path)
+    assert "at most 66,666 are searched. Split the record" in found.refused[0]
 
 
 # ---- what cannot fit ---------------------------------------------------------------------------------------------
