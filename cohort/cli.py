@@ -6,6 +6,7 @@ from __future__ import annotations
 import argparse
 import io
 import json
+import re
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -241,7 +242,7 @@ def _parser() -> argparse.ArgumentParser:
     running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
     running.add_argument("--json", action="store_true", help="print summary.json instead of words")
     running.add_argument(
-        "--scheduler", metavar="ADDRESS", help="a dask.distributed cluster to do it on, tcp://host:8786"
+        "--scheduler", type=_address, metavar="ADDRESS", help="a dask.distributed cluster to do it on, tcp://host:8786"
     )
     running.add_argument("--mixed-machines", action="store_true", help="accept workers of other versions or processors")
     running.add_argument("--shards", type=_fraction, metavar="K/N", help="only the K-th of N shares, for job arrays")
@@ -288,6 +289,13 @@ def _share(text: str) -> float:
     if not 0.0 < share < 0.5:
         raise argparse.ArgumentTypeError(f"{text!r} is not a share above 0 and below 0.5")
     return share
+
+
+def _address(text: str) -> str:
+    """A scheduler's address; without a port its client would wait for long and end in a traceback of its own."""
+    if not re.fullmatch(r"(?:[a-z]+://)?(?:\[[0-9a-fA-F:]+\]|[^\s:/\[\]]+):[0-9]{1,5}", text):
+        raise argparse.ArgumentTypeError(f"{text[:60]!r} is no address such as tcp://host:8786")
+    return text
 
 
 def _fraction(text: str) -> tuple[int, int]:

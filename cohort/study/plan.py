@@ -41,8 +41,8 @@ BASE_MEMORY_MB = 230.0
 MEMORY_PER_WORKER_MB = 90.0
 MB_PER_PIECE = 0.125
 """Of an arm's inputs, for the 1,024 subjects that a worker has at a time."""
-MB_PER_SUBJECT_COUNTED = 64e-6
-"""Some columns of everyone at once, when results are counted."""
+MB_PER_SUBJECT_COUNTED, MB_PER_SUBJECT_AND_ARM = 64e-6, 16e-6
+"""Columns of everyone that are held at once when results are counted and drawn."""
 
 
 @dataclass(frozen=True)
@@ -116,7 +116,8 @@ def _memory_mb(study: Study, workers: int) -> float:
     most = max((sum(pieces(s, a.duration_min) for s in (*a.glucose, *a.insulin)) for a in study.arms), default=0)
     table = study.recipe.table
     columns = 0 if table is None else len(table.columns) + 3
-    counted = study.recipe.count * (MB_PER_SUBJECT_COUNTED + 8e-6 * columns)
+    each = MB_PER_SUBJECT_COUNTED + MB_PER_SUBJECT_AND_ARM * len(study.arms) + 8e-6 * columns
+    counted = study.recipe.count * each
     return BASE_MEMORY_MB + (MEMORY_PER_WORKER_MB + MB_PER_PIECE * most) * workers + counted
 
 

@@ -422,6 +422,13 @@ def test_a_result_folder_of_an_impossible_name_ends_in_words(
     assert "cannot be made" in capsys.readouterr().err
 
 
+@pytest.mark.parametrize("address", ["x", "tcp://", "tcp://host", "host:port", "a b:1", "tcp://host:1/x", "x" * 10_000])
+def test_an_address_without_a_port_is_no_address(address: str, capsys: pytest.CaptureFixture[str]) -> None:
+    with soon(), pytest.raises(SystemExit) as ended:
+        main(["run", "x.toml", "--scheduler", address])
+    assert ended.value.code == 2 and "is no address such as tcp://host:8786" in capsys.readouterr().err
+
+
 def test_a_letter_that_the_terminal_lacks_is_no_traceback(tmp_path: Path) -> None:
     (tmp_path / "x.toml").write_text("title = 'Wie viele schwingen? \u2026 \u03b1'\n" + SHORT, encoding="utf-8")
     done = subprocess.run([sys.executable, "-m", "cohort", "check", str(tmp_path / "x.toml")], capture_output=True, text=True,
