@@ -45,7 +45,9 @@ def read_plain(path: Path, most: int) -> bytes:
     with os.fdopen(opened, "rb") as file:
         if found.st_size > most:
             raise UnreadableError(f"has {found.st_size:,} bytes; at most {most:,} are allowed")
-        data = file.read(most + 1)
+        data = file.read(found.st_size + 1)  # no more is set aside than there is
+        if len(data) > found.st_size:
+            data += file.read(most + 1 - len(data))
     if len(data) > most:  # it grew, or the system does not say how large it is
         raise UnreadableError(f"has more than {most:,} bytes, which is the most allowed")
     return data
