@@ -59,7 +59,7 @@ def run(
         compare(folder)
         return open_results(folder / study.model)
     run_study(study, folder, workers, quiet=quiet)
-    return rebuild(folder)[0]
+    return rebuild(folder, verify=False)[0]
 
 
 def open_results(folder: str | os.PathLike[str]) -> Results:

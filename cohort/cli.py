@@ -4,7 +4,9 @@ could not finish (what is there is kept), 130 interrupted."""
 from __future__ import annotations
 
 import argparse
+import io
 import json
+import re
 import sys
 from collections.abc import Callable, Sequence
 from pathlib import Path
@@ -89,7 +91,7 @@ def run(words: argparse.Namespace) -> int:
             f"{done.simulated:,} runs in {done.seconds:.1f} s. When every share is done, run without --shards to finish"
         )
         return 0
-    _say(folder, words.json)
+    _say(folder, words.json, verify=False)
     if words.json:
         return 0
     kept = f", {done.kept:,} were there" if done.kept else ""
@@ -103,16 +105,16 @@ def report(words: argparse.Namespace) -> int:
     return 0
 
 
-def _say(folder: Path, as_json: bool) -> None:
-    """Rebuild a result folder's tables and page, and print what came out."""
+def _say(folder: Path, as_json: bool, verify: bool = True) -> None:
+    """Rebuild a result folder's tables and page, and print what came out; verify: as in `rebuild`."""
     from cohort.report import several
     from cohort.report.summary import closing_words, rebuild
 
     if several.is_several(folder):
-        summary = several.compare(folder)
+        summary = several.compare(folder, verify)
         text = several.words(summary)
     else:
-        _, summary = rebuild(folder)
+        _, summary = rebuild(folder, verify=verify)
         text = closing_words(summary)
     print(json.dumps(summary, indent=2) if as_json else text)
 
@@ -250,7 +252,7 @@ def _parser() -> argparse.ArgumentParser:
     running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
     running.add_argument("--json", action="store_true", help="print summary.json instead of words")
     running.add_argument(
-        "--scheduler", metavar="ADDRESS", help="a dask.distributed cluster to do it on, tcp://host:8786"
+        "--scheduler", type=_address, metavar="ADDRESS", help="a dask.distributed cluster to do it on, tcp://host:8786"
     )
     running.add_argument("--mixed-machines", action="store_true", help="accept workers of other versions or processors")
     running.add_argument("--shards", type=_fraction, metavar="K/N", help="only the K-th of N shares, for job arrays")
@@ -300,6 +302,13 @@ def _share(text: str) -> float:
     return share
 
 
+def _address(text: str) -> str:
+    """A scheduler's address; without a port its client would wait for long and end in a traceback of its own."""
+    if not re.fullmatch(r"(?:[a-z]+://)?(?:\[[0-9a-fA-F:]+\]|[^\s:/\[\]]+):[0-9]{1,5}", text):
+        raise argparse.ArgumentTypeError(f"{text[:60]!r} is no address such as tcp://host:8786")
+    return text
+
+
 def _fraction(text: str) -> tuple[int, int]:
     share, sign, shares = text.partition("/")
     if not (sign and share.isdigit() and shares.isdigit() and 1 <= int(share) <= int(shares) <= 100_000):
@@ -315,6 +324,9 @@ def _positive(text: str) -> int:
 
 def main(words: Sequence[str] | None = None) -> int:
     """Run one command and return its exit code; no traceback reaches a user."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")  # a terminal may not know a letter of a title
     parsed = _parser().parse_args(words)
     try:
         function: Callable[[argparse.Namespace], int] = parsed.function
@@ -326,6 +338,9 @@ def main(words: Sequence[str] | None = None) -> int:
     except CohortError as error:
         print(error, file=sys.stderr)
         return error.exit_code
+    except MemoryError:
+        print("there is not enough memory for this; what was finished is kept", file=sys.stderr)
+        return RunError.exit_code
     except KeyboardInterrupt:
         print("\ninterrupted; what was finished is kept, run again to carry on", file=sys.stderr)
         return INTERRUPTED

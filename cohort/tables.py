@@ -7,10 +7,12 @@ three are as expected. Missing numbers (NaN) and words (-1) become true nulls he
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import io
 import os
-from collections.abc import Mapping, Sequence
+import re
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -57,6 +59,7 @@ _TYPES = {
     "words": pa.string(),
 }
 FORMAT = b"cohort-part-1"
+PART = re.compile(r"part-[0-9-]{6,40}\.parquet")
 
 
 @dataclass(frozen=True)
@@ -239,8 +242,9 @@ def write_bytes(path: Path, data: bytes) -> None:
     """Write a file so that a crash leaves the old one or the new one: temporary, fsync, rename, fsync the folder."""
     path.parent.mkdir(parents=True, exist_ok=True)
     temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
+    temporary.unlink(missing_ok=True)  # what was planted there is not written through
     try:
-        with temporary.open("wb") as file:
+        with temporary.open("xb") as file:
             file.write(data)
             file.flush()
             os.fsync(file.fileno())
@@ -282,41 +286,90 @@ def part_name(number: int) -> str:
 
 
 def part_paths(folder: Path) -> list[Path]:
-    """The parts of a table, in order."""
-    return sorted(folder.glob("part-*.parquet"))
+    """The parts of a table, in order; other files there are none of ours."""
+    return sorted(path for path in folder.glob("part-*.parquet") if PART.fullmatch(path.name))
 
 
 def read_parts(folder: Path, columns: Sequence[str] | None = None) -> pa.Table:
-    """All parts of a table as one, in order; chosen columns or all. Raises FileNotFoundError where there is none."""
+    """All parts of a table as one, in order; chosen columns or all. Raises FileNotFoundError where there is none,
+    ValueError where one cannot be read."""
     paths = part_paths(folder)
     if not paths:
         raise FileNotFoundError(f"no parts in {folder}")
-    names = list(columns) if columns is not None else None
-    tables = [pq.read_table(path, columns=names, use_threads=False) for path in paths]
-    return pa.concat_tables([t.replace_schema_metadata(None) for t in tables])
+    tables = [read_file(path, columns) for path in paths]
+    try:
+        return pa.concat_tables([t.replace_schema_metadata(None) for t in tables])
+    except pa.ArrowException as error:
+        raise ValueError(f"{folder}: {_first_line(error)}") from None
 
 
 def read_part(folder: Path, number: int, columns: Sequence[str]) -> pa.Table:
     """One part of a table, with the chosen columns that it has. Raises ValueError where it cannot be read."""
     path = folder / part_name(number)
-    try:
-        known = set(pq.read_schema(path).names)
-    except (OSError, pa.ArrowException) as error:
-        raise ValueError(f"{path}: {str(error).splitlines()[0]}") from None
-    return read_file(path, [c for c in columns if c in known])
+    with _named(path):
+        file = _opened(path)
+        known = set(file.schema_arrow.names)
+        names = [c for c in columns if c in known]
+        return file.read(names, use_threads=False).select(names)
 
 
-def read_file(path: Path, columns: Sequence[str]) -> pa.Table:
-    """Columns of one Parquet file. Raises ValueError where it cannot be read or lacks one."""
+def read_file(path: Path, columns: Sequence[str] | None) -> pa.Table:
+    """Columns of one Parquet file, or all. Raises ValueError where it cannot be read or lacks one."""
+    with _named(path):
+        table = _opened(path).read(None if columns is None else list(columns), use_threads=False)
+        return table if columns is None else table.select(list(columns))
+
+
+def _opened(path: Path) -> pq.ParquetFile:
+    """A Parquet file, opened where it is a plain file: a pipe would hang us, a device never end."""
+    if not path.is_file():
+        raise ValueError("is no plain file")
+    return pq.ParquetFile(path)
+
+
+@contextlib.contextmanager
+def _named(path: Path) -> Iterator[None]:
+    """Whatever goes wrong with a file is a ValueError with its name."""
     try:
-        return pq.ParquetFile(path).read(list(columns), use_threads=False).select(list(columns))
-    except (OSError, pa.ArrowException, KeyError) as error:
-        raise ValueError(f"{path}: {str(error).splitlines()[0]}") from None
+        yield
+    except (OSError, pa.ArrowException, KeyError, ValueError, MemoryError) as error:
+        raise ValueError(f"{path}: {_first_line(error)}") from None
+
+
+def part_stamp(path: Path, schema: Schema, rows_each: int | None = 1, needed: Sequence[str] = ()) -> Stamp:
+    """What a part's footer says of it, from the footer alone. Raises ValueError where it is no part of such a table: another
+    format, other types, a needed column missing, other than `rows_each` rows a subject."""
+    with _named(path):
+        file = _opened(path)
+        marks, rows = file.schema_arrow.metadata or {}, file.metadata.num_rows
+        stamp = Stamp(
+            marks.get(b"identity", b"").decode(), int(marks.get(b"first", b"0")), int(marks.get(b"last", b"-1"))
+        )
+        if marks.get(b"format") != FORMAT or not 0 <= stamp.first < stamp.last:
+            raise ValueError("is no part of a run's table")
+        if rows_each is not None and rows != (stamp.last - stamp.first) * rows_each:
+            raise ValueError(f"holds {rows:,} rows for {stamp.last - stamp.first:,} subjects")
+        types = {c.name: _TYPES[c.kind] for c in schema.columns}
+        found = {f.name: f.type for f in file.schema_arrow}
+        odd = [n for n, kind in types.items() if (n in found or n in needed) and found.get(n) != kind]
+        if odd:
+            raise ValueError(f"column {odd[0]!r} is missing or of another kind")
+        return stamp
+
+
+def check_digest(path: Path) -> None:
+    """Raise ValueError where a part's values are not those it was written with."""
+    with _named(path):
+        table = _opened(path).read(use_threads=False)
+        marks = table.schema.metadata or {}
+        known = all(f.type in _TYPES.values() for f in table.schema)
+        if not known or marks.get(b"digest", b"").decode(errors="replace") != digest(table):
+            raise ValueError("its values are not those it was written with")
 
 
 def read_table(path: Path) -> pa.Table:
-    """One table file."""
-    return pq.read_table(path, use_threads=False)
+    """One table file. Raises ValueError where it cannot be read."""
+    return read_file(path, None)
 
 
 def row_digest(table: pa.Table, keys: Sequence[str]) -> str:
@@ -324,17 +377,51 @@ def row_digest(table: pa.Table, keys: Sequence[str]) -> str:
     return digest(table.sort_by([(key, "ascending") for key in keys]))
 
 
-def read_columns(path: Path) -> dict[str, list[object]]:
-    """The columns of any Parquet file as Python lists. Raises ValueError where it is none."""
+def count_cells(data: bytes) -> int:
+    """How many cells a Parquet file says it holds. Raises ValueError where it is none."""
     try:
-        table = pq.read_table(path, use_threads=False)
+        found = pq.read_metadata(pa.BufferReader(data))
+        return int(found.num_rows) * int(found.num_columns)
     except (OSError, pa.ArrowException) as error:
-        raise ValueError(str(error).splitlines()[0]) from None
-    return {name: table.column(name).to_pylist() for name in table.column_names}
+        raise ValueError(_first_line(error)) from None
+
+
+def read_columns(data: bytes) -> dict[str, list[object]]:
+    """The columns of any Parquet file of numbers, texts and truth values as Python lists. Raises ValueError where it is none.
+
+    Texts are read by their dictionary: a file of a few bytes may say one long text a million times.
+    """
+    try:
+        schema = pq.read_schema(pa.BufferReader(data))
+        odd = [f.name for f in schema if pa.types.is_nested(f.type) or isinstance(f.type, pa.BaseExtensionType)]
+        if odd or len(set(schema.names)) < len(schema.names):
+            raise ValueError(f"column {odd[0]!r} holds no plain values" if odd else "two columns have one name")
+        words = [f.name for f in schema if pa.types.is_string(f.type) or pa.types.is_large_string(f.type)]
+        table = pq.read_table(pa.BufferReader(data), use_threads=False, read_dictionary=words)
+        table.validate(full=True)
+        return {name: _cells(table.column(name)) for name in table.column_names}
+    except (OSError, pa.ArrowException) as error:
+        raise ValueError(_first_line(error)) from None
+
+
+def _cells(column: pa.ChunkedArray) -> list[object]:
+    if not pa.types.is_dictionary(column.type):
+        return list(column.to_pylist())
+    found: list[object] = []
+    for chunk in column.chunks:
+        words = chunk.dictionary.to_pylist()
+        found += [None if i is None else words[i] for i in chunk.indices.to_pylist()]
+    return found
+
+
+def _first_line(error: BaseException) -> str:
+    return (str(error).splitlines() or [type(error).__name__])[0]
 
 
 def numbers(table: pa.Table, name: str) -> NDArray[np.float64]:
-    """A numeric or boolean column as float64, NaN where null."""
+    """A numeric or boolean column as float64, NaN where null. Raises ValueError where it is missing."""
+    if name not in table.column_names:
+        raise ValueError(f"column {name!r} is missing")
     column = table.column(name).combine_chunks()
     if pa.types.is_boolean(column.type):
         column = column.cast(pa.int8())

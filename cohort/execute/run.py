@@ -33,6 +33,7 @@ from cohort.infer.facts import as_plain
 from cohort.infer.salib import load as load_salib
 from cohort.model.catalogue import MODELS
 from cohort.quantities import PARAMETERS
+from cohort.reading import Maybe, misfit, read_json
 from cohort.study import Study, plan
 from cohort.study.plan import SHARD
 from cohort.tables import write_bytes
@@ -273,18 +274,34 @@ def _terminable() -> Iterator[None]:
         signal.signal(signal.SIGTERM, before)
 
 
+def _text(value: Any) -> bool:
+    return isinstance(value, str)
+
+
+def _slot(value: Any) -> bool:
+    return isinstance(value, int) and 0 <= value < 1000
+
+
+_BEFORE = {
+    "settings": {None: _text}, "arms": [_text], "identities": {"subjects": _text, "outcomes": {None: _text}},
+    "slots": Maybe({None: _slot}), "study_texts": Maybe([_text]),
+}  # fmt: skip
+"""What a run reads of the record that is there."""
+
+
 def _check_folder(study: Study, out: Path) -> dict[str, Any]:
     """Refuse a folder that holds something else; returns the record that was there, or {}."""
     path = out / "run.json"
     if not path.exists():
         return {}
     try:
-        before: dict[str, Any] = json.loads(path.read_text())
-        settings, arms = before["settings"], set(before["arms"])
-        identities = before["identities"]
-    except (ValueError, KeyError, TypeError, OSError):
+        before: dict[str, Any] = read_json(path)
+        if misfit(before, _BEFORE):
+            raise ValueError("of another shape")
+        settings, identities = before["settings"], before["identities"]
+        changed = first_difference(settings, study.settings, set(before["arms"]), study.recipe.draw)
+    except (ValueError, SyntaxError, OSError, RecursionError, MemoryError):
         raise StudyError([Problem("", "is not a run's record; name another folder with --out", str(path))]) from None
-    changed = first_difference(settings, study.settings, arms, study.recipe.draw)
     if changed:
         raise StudyError([_refusal(changed, settings, study.settings, out)])
     if identities["subjects"] != subjects_identity(study) or any(

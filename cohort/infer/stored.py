@@ -91,7 +91,10 @@ class Reader:
         attempt = 1
         while (before is None or attempt < before) and (path := self.place.part("redraw", 0, attempt)).exists():
             table = _read(path, ("block", "position", *names))
-            factor = np.array([number[word] for word in table.column("block").to_pylist()], dtype=np.int64)
+            words = table.column("block").to_pylist()
+            if not set(words) <= set(number):
+                raise ValueError(f"{path}: holds redraws of factors that the design has not")
+            factor = np.array([number[word] for word in words], dtype=np.int64)
             yield factor, np.asarray(table.column("position")), {name: _numbers(table, name) for name in names}
             attempt += 1
 
@@ -149,6 +152,8 @@ def read_cohort(
     if chosen:
         table = read_file(folder / "weights.parquet", ["eligible", "weight"])
         weight = numbers(table, "weight")
+        if len(weight) != len(here):
+            raise ValueError(f"{folder}: {len(weight):,} weights for {len(here):,} subjects")
         chance = weight / weight.max() if chosen == "accepted" else (weight > 0.0).astype(float)
         here &= uniforms(seed, "accepted", "", 0, len(weight)) < chance
     found = {name: numbers(people, name)[here] for name in own}
@@ -156,10 +161,12 @@ def read_cohort(
         head, _, column = name.partition(".")
         if column:
             meals = read_parts(folder / "meals" / arm, ["meal", column])
-            which = np.asarray(meals.column("meal")) == int(head.removeprefix("meal_"))
-            found[name] = numbers(meals, column)[which][here]
+            values = numbers(meals, column)[numbers(meals, "meal") == int(head.removeprefix("meal_"))]
         else:
-            found[name] = numbers(read_parts(folder / "outcomes" / arm, [name]), name)[here]
+            values = numbers(read_parts(folder / "outcomes" / arm, [name]), name)
+        if len(values) != len(here):
+            raise ValueError(f"{folder}: {len(values):,} values of {name} in {arm} for {len(here):,} subjects")
+        found[name] = values[here]
     return found
 
 

@@ -21,6 +21,8 @@ CUT = 2.05
 """The shortest period that is searched, in sampling steps."""
 PER_RESOLUTION = 5
 """Frequencies a reciprocal of the record's length."""
+MOST_BASIS = 4_000_000
+"""Samples times frequencies: what is held of them, for every covariance of the grid, is 400 bytes each."""
 TAUS_MIN = (10.0, 20.0, 40.0, 80.0, 180.0)
 RHOS = (0.3, 0.5, 0.7, 0.85, 1.0)
 _SMALLEST_CORRELATION = 0.05
@@ -56,6 +58,12 @@ def searched_band(times_min: Array, band_min: tuple[float, float] = BAND_MIN) ->
             f"sampled every {step:g} min for {length:g} min, no period from {low:g} to {high:g} min can be seen: "
             f"it takes a step below {high / CUT:.3g} min and a record longer than {max(low, CUT * step):.3g} min"
         )
+    searched = frequency_count((short, long), length)
+    if searched * len(times_min) > MOST_BASIS:
+        raise ValueError(
+            f"{len(times_min)} samples within {length:g} min take {searched:,} periods from {short:.3g} to {long:g} min; at most "
+            f"{MOST_BASIS // len(times_min):,} are searched. Split the record where nothing was sampled"
+        )
     said = []
     if short > low:
         said.append(
@@ -66,6 +74,12 @@ def searched_band(times_min: Array, band_min: tuple[float, float] = BAND_MIN) ->
     if long < high:
         said.append(f"periods above the record's {long:g} min are not searched")
     return (short, long), "; ".join(said)
+
+
+def frequency_count(band_min: tuple[float, float], length_min: float) -> int:
+    """How many frequencies are searched from one period to another in a record of this length."""
+    short, long = band_min
+    return max(int(np.ceil((1.0 / short - 1.0 / long) * length_min * PER_RESOLUTION)), 8) + 1
 
 
 def _alias_words(low: float, step: float) -> str:
@@ -146,7 +160,7 @@ def make_design(times_min: Array, band_min: tuple[float, float] = BAND_MIN) -> D
 @functools.lru_cache(maxsize=8)
 def _prepared(raw: bytes, band: tuple[float, float], warning: str, key: str) -> Design:
     times = np.frombuffer(raw)
-    count = max(int(np.ceil((1.0 / band[0] - 1.0 / band[1]) * times[-1] * PER_RESOLUTION)), 8) + 1
+    count = frequency_count(band, float(times[-1]))
     frequencies = 1.0 / band[1] + (1.0 / band[0] - 1.0 / band[1]) * np.arange(count) / (count - 1)
     grid = covariances(typical_step(times))
     return Design(times, band, warning, frequencies, tuple(_background(times, frequencies, *c) for c in grid), key)

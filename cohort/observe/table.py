@@ -9,6 +9,7 @@ import csv
 import io
 import math
 import re
+from collections import Counter
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -16,8 +17,9 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.errors import Problem, StudyError, nearest
+from cohort.errors import Problem, StudyError, nearest, unprintable
 from cohort.quantities import GLUCOSE_MG_DL_PER_MMOL_L, INSULIN_PMOL_PER_MU
+from cohort.reading import UnreadableError, read_plain, why_unread
 
 Array = NDArray[np.float64]
 
@@ -35,7 +37,13 @@ _SUBJECT_NAMES = ("subject", "id", "person", "participant", "patient")
 _TIME_NAMES = ("time", "t", "minute", "minutes")
 _MISSING = {"", "na", "n/a", "nan", "null", "none", ".", "-", "missing"}
 _HEADER = re.compile(r"\s*(.*?)\s*[(\[]\s*([^)\]]*?)\s*[)\]]\s*")
-_SHOWN = 20
+_SHOWN, _COUNTED = 20, 100_000
+LONGEST_NAME = 100
+LARGEST_FILE = 50_000_000
+MOST_CELLS = 5_000_000
+MOST_SERIES = 2000
+LATEST_MIN = 1e9
+"""Later times, or earlier ones below 0, are no minutes of a study: samples must be told apart to a millionth of one."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,10 +70,20 @@ class _Reader:
 
     file: str
     problems: list[Problem] = field(default_factory=list)
+    more: int = 0
     found: dict[tuple[str, str], tuple[list[int], list[float], list[float]]] = field(default_factory=dict)
 
     def wrong(self, line: int | None, key: str, message: str) -> None:
-        self.problems.append(Problem(key, message, self.file, line))
+        if len(self.problems) < _SHOWN:
+            self.problems.append(Problem(key, message, self.file, line))
+        else:
+            self.more += 1
+        if self.more == _COUNTED:
+            _stop(self)
+
+    @property
+    def noted(self) -> int:
+        return len(self.problems) + self.more
 
     def number(self, text: str, line: int, key: str, comma: bool) -> float | None:
         """The cell's number; None where it is missing or (with a problem noted) no number."""
@@ -101,6 +119,9 @@ def read_series(path: Path, units: Mapping[str, str] | None = None) -> tuple[Ser
         _stop(reader)
     for line, cells in rows[1:]:
         _take(reader, line, cells, len(rows[0][1]), time, subject, columns, comma)
+    if len(reader.found) > MOST_SERIES:
+        reader.wrong(None, "", f"holds {len(reader.found):,} series; at most {MOST_SERIES:,} are allowed")
+        _stop(reader)
     series = tuple(_finish(reader, *key, samples) for key, samples in reader.found.items())
     if not series and not reader.problems:
         reader.wrong(None, "", "no samples in it")
@@ -109,9 +130,15 @@ def read_series(path: Path, units: Mapping[str, str] | None = None) -> tuple[Ser
 
 
 def _stop(reader: _Reader) -> None:
-    if len(reader.problems) > _SHOWN:
-        more = len(reader.problems) - _SHOWN
-        raise StudyError([*reader.problems[:_SHOWN], Problem("", f"and {more:,} more like these", reader.file)])
+    if reader.more:
+        raise StudyError(
+            [
+                *reader.problems,
+                Problem(
+                    "", f"and {'at least ' * (reader.more >= _COUNTED)}{reader.more:,} more like these", reader.file
+                ),
+            ]
+        )
     if reader.problems:
         raise StudyError(reader.problems)
 
@@ -119,15 +146,19 @@ def _stop(reader: _Reader) -> None:
 def _rows(path: Path, reader: _Reader) -> tuple[list[tuple[int, list[str]]], bool]:
     """Rows that are not empty with their line numbers, and whether a comma is the decimal mark."""
     try:
-        text = path.read_text(encoding="utf-8-sig")
-    except OSError as error:
-        reader.wrong(None, "", f"cannot be read: {error.strerror}")
+        text = read_plain(path, LARGEST_FILE).decode("utf-8-sig").replace("\r\n", "\n").replace("\r", "\n")
+    except (OSError, UnreadableError) as error:
+        reader.wrong(None, "", f"cannot be read: {why_unread(error)}")
         return [], False
     except UnicodeDecodeError:
         reader.wrong(None, "", "is not UTF-8 text; save the table as CSV in UTF-8")
         return [], False
-    header = next((line for line in text.splitlines() if line.strip()), "")
+    header = text.lstrip().split("\n", 1)[0]
     mark = max(",;\t", key=header.count)
+    cells = text.count(mark) + text.count("\n") + 1
+    if cells > MOST_CELLS:
+        reader.wrong(None, "", f"holds {cells:,} cells; at most {MOST_CELLS:,} are allowed")
+        return [], False
     lines = csv.reader(io.StringIO(text), delimiter=mark)
     try:
         rows = [(lines.line_num, row) for row in lines if any(cell.strip() for cell in row)]
@@ -166,10 +197,13 @@ def _columns(header: list[str], units: dict[str, str], reader: _Reader) -> tuple
             if not name:
                 reader.wrong(1, f"column {place + 1}", "has no name")
                 continue
+            if _no_name(name):
+                reader.wrong(1, f"column {place + 1}", f"{name[:LONGEST_NAME]!r} {_no_name(name)}")
+                continue
             stated = unit or units.get(analyte, "")
             columns.append(_Column(place, "" if long else name, analyte, _factor(reader, name, analyte, stated)))
-    labels = [(c.label, c.analyte) for c in columns]
-    for label, analyte in sorted({x for x in labels if labels.count(x) > 1}):
+    labels = Counter((c.label, c.analyte) for c in columns)
+    for label, analyte in sorted(x for x, times in labels.items() if times > 1):
         reader.wrong(1, label or analyte, "is there more than once")
     if time is None:
         found = ", ".join(name for name, _ in names[:8])
@@ -179,6 +213,13 @@ def _columns(header: list[str], units: dict[str, str], reader: _Reader) -> tuple
         reader.wrong(1, "header", "a subject column but none named glucose or insulin"
                      + "".join(nearest(name, UNITS) for name, _ in names))  # fmt: skip
     return time, subject, columns
+
+
+def _no_name(text: str) -> str:
+    """Why a text cannot name a subject in a line of words and in a figure, or an empty text."""
+    if len(text) > LONGEST_NAME:
+        return f"has {len(text):,} characters; a name has at most {LONGEST_NAME}"
+    return "holds a character that is no printable text" if unprintable(text) else ""
 
 
 def _analyte(unit: str, units: dict[str, str]) -> str:
@@ -210,13 +251,19 @@ def _take(
     if len(cells) != width:
         reader.wrong(line, "", f"{len(cells)} cells where the header has {width}")
         return
-    before = len(reader.problems)
+    before = reader.noted
     at = reader.number(cells[time.place], line, "time", comma)
     if at is None:
-        if len(reader.problems) == before:
+        if reader.noted == before:
             reader.wrong(line, "time", "is missing")
         return
+    if not abs(at * time.factor) <= LATEST_MIN:
+        reader.wrong(line, "time", f"{at:g} is beyond {LATEST_MIN:,.0f} min")
+        return
     who = cells[subject].strip() if subject is not None else ""
+    if _no_name(who):
+        reader.wrong(line, "subject", f"{who[:LONGEST_NAME]!r} {_no_name(who)}")
+        return
     if subject is not None and not who:
         reader.wrong(line, "subject", "is missing")
         return
@@ -232,8 +279,8 @@ def _take(
 def _finish(reader: _Reader, subject: str, analyte: str, samples: tuple[list[int], list[float], list[float]]) -> Series:
     lines, times, values = samples
     at, found = np.array(times), np.array(values)
-    for i in np.flatnonzero(np.diff(at) <= 0.0):
-        said = "is there twice" if at[i + 1] == at[i] else f"comes after {at[i]:g} min; sort each subject by time"
+    for i in np.flatnonzero(np.diff(np.round(at - at[0], 6)) <= 0.0):
+        said = "is there twice" if at[i + 1] >= at[i] else f"comes after {at[i]:g} min; sort each subject by time"
         reader.wrong(lines[i + 1], "time", f"subject {subject}: {at[i + 1]:g} min {said}")
     low, high = PLAUSIBLE[analyte]
     unit = next(iter(UNITS[analyte]))

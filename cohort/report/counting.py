@@ -135,6 +135,8 @@ def _tally(results: Results, who: Chosen | None, cells: Callable[[int], Codes], 
     for number in results.whole_shards:
         table = read_part(results.folder / "subjects", number, ["subject", "stratum"])
         stratum = _codes(table.column("stratum"), strata)
+        if (stratum < 0).any():
+            raise ValueError(f"{results.folder}: holds subjects of strata that run.json does not name")
         subject, cell = np.asarray(table.column("subject")), cells(number)
         here = slice(start, start + len(cell))
         counted = np.ones(len(cell), dtype=bool) if who is None else who.counted[here]

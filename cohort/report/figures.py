@@ -6,6 +6,7 @@ Colours and marks are told apart by colour-blind readers too; ink follows the pa
 from __future__ import annotations
 
 import io
+import warnings
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -52,12 +53,21 @@ def _drawn(width: float, height: float, rows: int = 1, columns: int = 1) -> Iter
         "font.size": 9, "svg.fonttype": "none", "svg.hashsalt": "cohort", "axes.edgecolor": PALE, "text.color": INK,
         "axes.labelcolor": INK, "xtick.color": INK, "ytick.color": INK, "figure.facecolor": "none",
         "axes.facecolor": "none", "savefig.facecolor": "none", "legend.frameon": False, "font.family": "sans-serif",
-        "axes.spines.top": False, "axes.spines.right": False, "path.simplify_threshold": 0.4,
+        "text.parse_math": False, "axes.spines.top": False, "axes.spines.right": False, "path.simplify_threshold": 0.4,
     }  # fmt: skip
-    with mpl.rc_context(style):
+    with mpl.rc_context(style), warnings.catch_warnings():
+        warnings.filterwarnings(
+            "ignore", "Glyph"
+        )  # text stays text in the SVG, and the reader's fonts know more letters
         canvas = Canvas(figsize=(width, height), layout="constrained")
         axes = canvas.subplots(rows, columns, squeeze=False)
         yield canvas, axes
+
+
+def _short(label: str, longest: int = 56) -> str:
+    """A label that leaves room for what it labels; a leading underscore would keep it out of the legend."""
+    whole = label if len(label) <= longest else f"{label[: longest - 1]}…"
+    return f" {whole}" if whole.startswith("_") else whole
 
 
 def as_svg(canvas: Any) -> str:
@@ -89,7 +99,7 @@ def intervals(
             colour = ARM_COLOURS[(groups[i] if groups else 0) % len(ARM_COLOURS)]
             ax.plot([low[i], high[i]], [i, i], color=colour, linewidth=2.0, solid_capstyle="butt")
             ax.plot([value[i]], [i], "o", color=colour, markersize=5)
-        ax.set_yticks(range(n), labels)
+        ax.set_yticks(range(n), [_short(label) for label in labels])
         ax.set_ylim(n - 0.5, -0.5)
         ax.set_xlabel(axis)
         if limits is not None:
@@ -109,7 +119,7 @@ def whiskers(labels: Sequence[str], marks: Array, axis: str) -> str:
             ax.plot([a, e], [i, i], color=OTHER, linewidth=1.2)
             ax.plot([b, d], [i, i], color=OTHER, linewidth=4.5, solid_capstyle="butt")
             ax.plot([c], [i], "|", color=INK, markersize=11, markeredgewidth=1.8)
-        ax.set_yticks(range(n), labels)
+        ax.set_yticks(range(n), [_short(label) for label in labels])
         ax.set_ylim(n - 0.5, -0.5)
         ax.set_xlabel(axis)
         ax.grid(axis="x", color=PALE, alpha=0.3, linewidth=0.6)
@@ -121,7 +131,7 @@ def distributions(names: Sequence[str], edges: Array, shares: Array, axis: str) 
     with _drawn(7.2, 2.7) as (canvas, axes):
         ax = axes[0, 0]
         for i, (name, share) in enumerate(zip(names, shares, strict=True)):
-            ax.stairs(100.0 * share, edges, color=ARM_COLOURS[i % len(ARM_COLOURS)], linewidth=1.6, label=name,
+            ax.stairs(100.0 * share, edges, color=ARM_COLOURS[i % len(ARM_COLOURS)], linewidth=1.6, label=_short(name),
                       linestyle=DASHES[i % len(DASHES)])  # fmt: skip
         ax.set_xlabel(axis)
         ax.set_ylabel("% of them")
@@ -181,7 +191,7 @@ def lines(series: Sequence[tuple[str, Array, Array]], axes_names: tuple[str, str
         ax = axes[0, 0]
         for i, (name, x, y) in enumerate(series):
             ax.plot(x, y, color=ARM_COLOURS[i % len(ARM_COLOURS)], linestyle=DASHES[(i // len(ARM_COLOURS)) % len(DASHES)],
-                    marker="o", markersize=2.6, linewidth=1.3, label=name)  # fmt: skip
+                    marker="o", markersize=2.6, linewidth=1.3, label=_short(name, 30))  # fmt: skip
         if level is not None:
             ax.axhline(level, color=PALE, linestyle=":", linewidth=1.0)
         if log_x:

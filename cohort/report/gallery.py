@@ -141,6 +141,8 @@ def _courses(results: Results, summary: dict[str, Any]) -> Iterator[tuple[str, F
         hours, glucose = numbers(table, "time_min") / 60.0, numbers(table, "glucose_mg_dl")
         first = {int(s): i for i, s in reversed(list(enumerate(subject)))}
         chosen = _some(first, why)
+        if not chosen:
+            continue
         panels = [(f"subject {s}, {why[first[s]]}", hours[subject == s], glucose[subject == s]) for s in chosen]
         settle = facts["hours"] - facts["window_hours"]
         rows = tuple(

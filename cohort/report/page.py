@@ -372,7 +372,7 @@ def _method(results: Results, summary: dict[str, Any]) -> str:
         counted += f"; effective sample size {people['effective']:,.0f}" if "effective" in people else ""
         counted += ".</p>"
     named = f"Model {escape(record['model'])}: {escape(model['title'])} {escape(model['source'])}."
-    return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]}.
+    return f"""<p>{named} {summary["subjects"]:,} virtual people, drawn by {escape(record["draw"])}, seed {record["seed"]:d}.
 Plasma glucose is within 1e-6 relative of a high-order reference; a subject's regime comes from the eigenvalues of its
 equilibrium under the arm's steady input and from a converged limit cycle, never from counting peaks. Intervals of
 shares are Monte Carlo error: what more virtual people would change. They do not say how far the model is from people.

@@ -20,6 +20,8 @@ from cohort.quantities import (
     WINDOW_OUTCOMES,
     Column,
 )
+from cohort.reading import misfit
+from cohort.report.record import RANKING
 from cohort.report.results import Results
 from cohort.tables import CONVERGENCE, SENSITIVITY, write_table
 
@@ -37,6 +39,8 @@ def rank(results: Results) -> dict[str, Any] | None:
     if not record or "strata" not in record:
         return None
     try:
+        if misfit(record, RANKING):
+            raise ValueError("of another shape")
         facts = from_plain(record)
     except (KeyError, TypeError, ValueError):
         raise ValueError(f"{results.folder / 'run.json'}: its ranking was recorded by another version") from None

@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
-import json
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-from cohort.errors import Problem, StudyError
+from cohort.errors import Problem, RunError, StudyError
+from cohort.reading import read_json
+from cohort.report.record import read_record
 
 if TYPE_CHECKING:
     import pyarrow as pa
 
     from cohort.report.figures import Figure
+
+_SHARD = re.compile(r"part-[0-9]{6}\.parquet")
 
 
 @dataclass(frozen=True)
@@ -29,13 +33,13 @@ class Results:
     @cached_property
     def record(self) -> dict[str, Any]:
         """run.json: identities, overrides, versions, plan, state."""
-        path = self.folder / "run.json"
         try:
-            found: dict[str, Any] = json.loads(path.read_text())
-            found["arms"], found["strata"], found["arm_facts"], found["shards"]
-        except (OSError, ValueError, KeyError, TypeError):
+            return read_record(self.folder)
+        except OSError:
             raise StudyError([Problem("", "is not a result folder (no readable run.json)", str(self.folder))]) from None
-        return found
+        except ValueError as error:
+            why = f"is not a result folder (no readable run.json: {error})"
+            raise StudyError([Problem("", why, str(self.folder))]) from None
 
     @property
     def arms(self) -> tuple[str, ...]:
@@ -49,11 +53,50 @@ class Results:
 
     @cached_property
     def whole_shards(self) -> tuple[int, ...]:
-        """Numbers of the shards of which every table has its part, outcomes last."""
+        """Numbers of the shards of which every table has its part, outcomes last. Raises RunError where the parts of one are
+        no parts, or not of the same subjects."""
+        names = [{path.name for path in (self.folder / table).glob("part-*.parquet")} for table in self._tables]
+        whole = sorted(name for name in set.intersection(*names) if _SHARD.fullmatch(name))
+        try:
+            for name in whole:
+                self._check_shard(name)
+        except ValueError as error:
+            raise RunError(f"{error}; run the study again to make it anew") from None
+        return tuple(int(name[5:11]) for name in whole)
+
+    @property
+    def _tables(self) -> list[str]:
         seen = [f"observations/{arm}/{schedule}" for arm in self.arms for schedule in self.schedules]
-        tables = ["subjects", *seen, *(f"outcomes/{arm}" for arm in self.arms)]
-        names = [{path.name for path in (self.folder / table).glob("part-*.parquet")} for table in tables]
-        return tuple(int(name[5:11]) for name in sorted(set.intersection(*names)))
+        return ["subjects", *seen, *(f"outcomes/{arm}" for arm in self.arms)]
+
+    def _check_shard(self, name: str) -> None:
+        from cohort.tables import OBSERVATIONS, outcomes_schema, part_stamp, subjects_schema
+
+        known = subjects_schema((), True, True), outcomes_schema(True)
+        ranges = set()
+        for table in self._tables:
+            path = self.folder / table / name
+            if table == "subjects":
+                stamp = part_stamp(path, known[0], 1, ("subject", "stratum"))
+            elif table.startswith("outcomes"):
+                stamp = part_stamp(path, known[1], 1, ("regime", "failure", "oscillates", "period_min"))
+            else:
+                stamp = part_stamp(path, OBSERVATIONS, 2, ("analyte", "detected", "period_min"))
+            ranges.add((stamp.first, stamp.last))
+        if len(ranges) > 1:
+            raise ValueError(f"{self.folder}: parts {name} of its tables are not of the same subjects")
+
+    def verify(self) -> None:
+        """Raise ValueError where a part's values are not those it was written with."""
+        from cohort.tables import check_digest, part_name, part_paths
+
+        for table in self._tables:
+            for number in self.whole_shards:
+                check_digest(self.folder / table / part_name(number))
+        of_arms = [f"{kind}/{arm}" for kind in ("time_courses", "meals") for arm in self.arms]
+        for table in (*of_arms, "population", "ranking"):
+            for path in part_paths(self.folder / table):
+                check_digest(path)
 
     def subjects(self, columns: Sequence[str] | None = None) -> pa.Table:
         """subjects/: a row a subject."""
@@ -117,7 +160,11 @@ class Results:
 
     def summary(self) -> dict[str, Any]:
         """summary.json: the headline numbers."""
-        found: dict[str, Any] = json.loads((self.folder / "summary.json").read_text())
+        try:
+            found: dict[str, Any] = read_json(self.folder / "summary.json")
+        except (OSError, ValueError):
+            why = "has no readable summary.json; `cohort report` makes it anew"
+            raise StudyError([Problem("", why, str(self.folder))]) from None
         return found
 
     def _parts(self, table: str, columns: Sequence[str] | None) -> pa.Table:

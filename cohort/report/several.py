@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 from html import escape
 from importlib.resources import files
 from pathlib import Path
@@ -11,8 +12,10 @@ from typing import Any
 import numpy as np
 
 from cohort.errors import Problem, StudyError
+from cohort.reading import misfit, read_json
 from cohort.report.counting import EVERYONE, OSCILLATES
 from cohort.report.page import table_html
+from cohort.report.record import is_name, is_text
 from cohort.report.summary import CAUTION, rebuild
 from cohort.tables import COMPARISON, write_bytes, write_table
 
@@ -25,19 +28,14 @@ SHOWN = {
 
 def is_several(folder: Path) -> bool:
     """Whether a folder holds one study in several models."""
-    return (folder / "models.json").is_file()
+    return os.path.isfile(folder / "models.json")  # noqa: PTH113 -- Path.is_file raises for names too long
 
 
-def compare(folder: Path) -> dict[str, Any]:
+def compare(folder: Path, verify: bool = True) -> dict[str, Any]:
     """Rebuild each model's folder and what compares them; returns the summary. Raises StudyError, RunError as `rebuild`."""
-    try:
-        record = json.loads((folder / "models.json").read_text())
-        names = [str(name) for name in record["models"]]
-    except (ValueError, KeyError, TypeError, OSError):
-        raise StudyError([Problem("", "is no list of models", str(folder / "models.json"))]) from None
-    if any("/" in name or name.startswith(".") for name in names):
-        raise StudyError([Problem("", "names a model that is no folder", str(folder / "models.json"))])
-    each = {name: rebuild(folder / name)[1] for name in names}
+    record = _record(folder / "models.json")
+    names = record["models"]
+    each = {name: rebuild(folder / name, verify=verify)[1] for name in names}
     rows = [row for name, summary in each.items() for row in _rows(name, summary)]
     write_table(folder / "comparison.parquet", COMPARISON, {
         c.name: np.array([np.nan if r[j] is None else r[j] for r in rows], float) if c.kind == "float64" else [r[j] for r in rows]
@@ -47,6 +45,20 @@ def compare(folder: Path) -> dict[str, Any]:
     write_bytes(folder / "summary.json", (json.dumps(summary, indent=2) + "\n").encode())
     write_bytes(folder / "report.html", _page(record, names, rows).encode())
     return summary
+
+
+def _record(path: Path) -> dict[str, Any]:
+    try:
+        found = read_json(path)
+        wrong = misfit(found, {"title": is_text, "models": [is_name], "lacks": {None: [is_text]}})
+    except (OSError, ValueError):
+        wrong = "it"
+    if wrong or not set(found["models"]) == set(found["lacks"]):
+        raise StudyError(
+            [Problem("", f"is no list of models: {wrong or 'lacks'} is not as a run writes it", str(path))]
+        )
+    record: dict[str, Any] = found
+    return record
 
 
 def _rows(name: str, summary: dict[str, Any]) -> list[tuple[Any, ...]]:

@@ -10,7 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.errors import Problem, RunError, StudyError
+from cohort.errors import Problem, RunError, StudyError, one_line
 from cohort.quantities import REGIMES
 from cohort.report.chosen import Chosen, chosen
 from cohort.report.clinic import detection_lines, fasting_lines, people_lines, recruitment_lines, sampling_lines
@@ -36,17 +36,20 @@ CAUTION = (
 )
 
 
-def rebuild(folder: Path, page: bool = True) -> tuple[Results, dict[str, Any]]:
+def rebuild(folder: Path, page: bool = True, verify: bool = True) -> tuple[Results, dict[str, Any]]:
     """Make every table but the parts, summary.json and (with `page`) report.html anew from the result files; returns
     (results, summary).
 
-    Only shards of which every table is there are counted, and the summary says how many of how many. Raises StudyError
+    With `verify` the values of every part are compared with its digest first (a run has just done so). Only shards of which
+    every table is there are counted, and the summary says how many of how many. Raises StudyError
     for a folder without results, RunError where a part cannot be read or the disk refuses.
     """
     results = Results(folder)
     if not results.whole_shards:
         raise StudyError([Problem("", "holds no finished shard; run the study again to carry on", str(folder))])
     try:
+        if verify:
+            results.verify()
         return results, _rebuild(folder, results, page)
     except (OSError, ValueError) as error:
         raise RunError(f"{error}; run the study again to make it anew") from None
@@ -120,7 +123,7 @@ def _failures(results: Results, arm: str) -> dict[str, int]:
     counts: dict[str, int] = {}
     for number in results.whole_shards:
         part = read_part(results.folder / "outcomes" / arm, number, ["failure"])
-        for word in part.column("failure").drop_null().to_pylist():
+        for word in map(one_line, part.column("failure").drop_null().to_pylist()):
             counts[word] = counts.get(word, 0) + 1
     return counts
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Callable, Mapping
 from itertools import pairwise
@@ -80,9 +81,16 @@ def _name(tree: Tree, value: Mapping[str, Any], path: Path, taken: list[str], i:
     if not NAME.fullmatch(name):
         tree.problem((*path, "name"), f"{name[:60]!r} cannot name a folder; letters, digits, spaces and . _ + - within, at "
                      "most 60")  # fmt: skip
-    if name.lower() in [t.lower() for t in taken]:
-        tree.problem((*path, "name"), f"{name!r} is the name of another arm")
+    like = [t for t in taken if _folded(t) == _folded(name)]
+    if like:
+        alike = f"is too much like {like[0]!r}, the name" if like[0].lower() != name.lower() else "is the name"
+        tree.problem((*path, "name"), f"{name!r} {alike} of another arm")
     return str(name)
+
+
+def _folded(name: str) -> str:
+    """What a name comes to in the files of its figures."""
+    return re.sub(r"[^a-z0-9._]+", "-", name.lower())
 
 
 def _noted(tree: Tree, path: Path) -> bool:
@@ -285,6 +293,17 @@ def has_steady_input(arm: Arm) -> bool:
     return not any(_unsteady(shape) for shape in (*arm.glucose, *arm.insulin))
 
 
+def pieces(shape: Shape, duration_min: float) -> int:
+    """How many pieces a shape is integrated as: steps, meals, times that it is on."""
+    if isinstance(shape, Steps):
+        return len(shape.times_min)
+    if isinstance(shape, Meal):
+        return 1 if shape.repeat_min is None else math.ceil((duration_min - shape.time_min) / shape.repeat_min)
+    if isinstance(shape, OnOff) and not isinstance(shape.period_min, Natural):
+        return math.ceil(duration_min / shape.period_min)
+    return 1
+
+
 def _unsteady(shape: Shape) -> bool:
     if isinstance(shape, OnOff | Sine):
         return not isinstance(shape.period_min, Natural) and shape.period_min > LONGEST_AVERAGED_PERIOD_MIN
@@ -292,6 +311,11 @@ def _unsteady(shape: Shape) -> bool:
 
 
 def _check(tree: Tree, arm: Arm, path: Path, weighed: bool) -> None:
+    made = sum(pieces(shape, arm.duration_min) for shape in (*arm.glucose, *arm.insulin))
+    if made > MOST_STOPS:
+        tree.problem(
+            path, f"its inputs make {made:,} steps, meals and cycles; at most {MOST_STOPS:,} an arm are allowed"
+        )
     if isinstance(arm.start, AtEquilibrium) and not has_steady_input(arm):
         tree.problem((*path, "start"), '"equilibrium" needs a steady input, which an arm with meals, boluses, slow waves or a '
                      'clamp does not have; give steady, or start = "fasting"')  # fmt: skip

@@ -5,6 +5,8 @@ from __future__ import annotations
 import csv
 import hashlib
 import io
+import os
+from collections import Counter
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -15,9 +17,12 @@ from cohort.errors import nearest
 from cohort.model.catalogue import ModelCard
 from cohort.population.recipe import WEIGHT_RANGE_KG, Table
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
+from cohort.reading import UnreadableError, names_in, read_plain, why_unread
 from cohort.study.tree import Tree
 
-LARGEST_FILE = 2_000_000_000
+LARGEST_FILE = 200_000_000
+MOST_CELLS = 5_000_000
+LONGEST_CELL = 200
 _OPTIONAL = ("id", "stratum", "body_weight_kg", "person")
 _SHOWN = 8
 
@@ -33,27 +38,29 @@ class Files:
     folder: Path
     outside: bool = False
     digests: dict[str, str] = field(default_factory=dict)
+    held: dict[str, dict[str, list[object]]] = field(default_factory=dict, repr=False)
 
     def read(self, name: str) -> dict[str, list[object]]:
         """Return a file's columns. Raises FileError."""
+        if name not in self.held:
+            self.held.clear()  # laws most often name one file several times in a row; two need not be held at once
+            self.held[name] = self._read(name)
+        return self.held[name]
+
+    def _read(self, name: str) -> dict[str, list[object]]:
         path = self.folder / name
         try:
-            inside = path.resolve().is_relative_to(self.folder.resolve())
+            inside = Path(os.path.realpath(path)).is_relative_to(os.path.realpath(self.folder))
             if not inside and not self.outside:
                 raise FileError(f"{name!r} lies outside the study's folder; data files must lie below it (--allow-outside "
                                 "accepts others)")  # fmt: skip
-            if path.stat().st_size > LARGEST_FILE:
-                raise FileError(f"{name!r} is larger than {LARGEST_FILE:,} bytes")
-            data = path.read_bytes()
+            data = read_plain(path, LARGEST_FILE)
         except FileNotFoundError:
-            near = nearest(path.name, [p.name for p in path.parent.glob("*")] if path.parent.is_dir() else [])
-            raise FileError(f"no file {name!r} beside the study{near}") from None
-        except (OSError, ValueError) as error:
-            raise FileError(
-                str(error) if isinstance(error, FileError) else f"{name!r} cannot be read: {error}"
-            ) from None
+            raise FileError(f"no file {name!r} beside the study{nearest(path.name, names_in(path.parent))}") from None
+        except (OSError, UnreadableError) as error:
+            raise FileError(f"{name!r} cannot be read: {why_unread(error)}") from None
         self.digests[name] = hashlib.sha256(data).hexdigest()
-        return _parquet(path) if path.suffix == ".parquet" else _csv(data)
+        return _parquet(path.name, data) if path.suffix == ".parquet" else _csv(data)
 
     def column(self, tree: Tree, path: tuple[str | int, ...], name: str, column: str) -> tuple[float, ...] | None:
         """Sorted numbers of one column, or None with the problem noted."""
@@ -139,6 +146,7 @@ def _csv(data: bytes) -> dict[str, list[object]]:
         raise FileError(f"is not UTF-8 text (line {data[: error.start].count(10) + 1})") from None
     if "\0" in text:
         raise FileError("is not a text file")
+    _check_cells(text.count(",") + text.count("\n") + 1)
     try:
         rows = list(csv.reader(io.StringIO(text)))
     except csv.Error as error:
@@ -147,22 +155,30 @@ def _csv(data: bytes) -> dict[str, list[object]]:
     if not rows:
         raise FileError("is empty")
     header = [cell.strip() for cell in rows[0]]
-    doubled = sorted({h for h in header if header.count(h) > 1})
+    doubled = sorted(h for h, times in Counter(header).items() if times > 1)
     if doubled:
-        raise FileError(f"has the column {doubled[0]!r} twice")
+        raise FileError(f"has the column {doubled[0][:LONGEST_CELL]!r} twice")
     for i, row in enumerate(rows[1:], 2):
         if len(row) != len(header):
             raise FileError(f"row {i} has {len(row)} cells, the header {len(header)}")
     return {h: [row[j].strip() for row in rows[1:]] for j, h in enumerate(header)}
 
 
-def _parquet(path: Path) -> dict[str, list[object]]:
-    from cohort.tables import read_columns
+def _check_cells(cells: int) -> None:
+    if cells > MOST_CELLS:
+        raise FileError(f"holds {cells:,} cells; at most {MOST_CELLS:,} are allowed")
+
+
+def _parquet(name: str, data: bytes) -> dict[str, list[object]]:
+    from cohort.tables import count_cells, read_columns
 
     try:
-        return read_columns(path)
+        _check_cells(count_cells(data))
+        return read_columns(data)
+    except FileError:
+        raise
     except ValueError as error:
-        raise FileError(f"{path.name!r} is not a Parquet file: {error}") from None
+        raise FileError(f"{name!r} is no Parquet file of plain columns: {error}") from None
 
 
 def _numbers(cells: list[object], column: str, low: float, high: float) -> NDArray[np.float64]:
@@ -172,11 +188,11 @@ def _numbers(cells: list[object], column: str, low: float, high: float) -> NDArr
     for i, cell in enumerate(cells):
         try:
             out[i] = float(cell)  # type: ignore[arg-type]
-        except (TypeError, ValueError):
+        except (TypeError, ValueError, OverflowError):
             bad.append(f"row {i + 1}: {str(cell)[:30]!r} is not a number")
             continue
         if not np.isfinite(out[i]):
-            bad.append(f"row {i + 1}: {cell!s} is not a finite number")
+            bad.append(f"row {i + 1}: {str(cell)[:30]} is not a finite number")
         elif not low <= out[i] <= high:
             bad.append(f"row {i + 1}: {out[i]:g} is outside the physical range {low:g} to {high:g}")
     if bad:

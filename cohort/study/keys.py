@@ -6,6 +6,7 @@ of texts, quantities or tables; `table` is a group of keys.
 
 from __future__ import annotations
 
+import functools
 from dataclasses import dataclass
 
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
@@ -309,8 +310,9 @@ def parameter_unit(symbol: str) -> str:
     return (PARAMETERS.get(symbol) or INPUT_PARAMETERS[symbol]).unit
 
 
-def children(pattern: str) -> list[str]:
+@functools.cache
+def children(pattern: str) -> tuple[str, ...]:
     """Names of the keys directly under a table's pattern; `*` where any name is allowed."""
     base = f"{pattern}." if pattern else ""
     rests = (path[len(base) :] for path in KEYS if path.startswith(base))
-    return list(dict.fromkeys(r for r in rests if r and "." not in r and "[]" not in r))
+    return tuple(dict.fromkeys(r for r in rests if r and "." not in r and "[]" not in r))

@@ -2,11 +2,23 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, field
 
 Path = tuple[str | int, ...]
 
 _DEEPEST = 60
+_BLANK = re.compile(r"(?:[ \t\r]++|#[^\n]*+)*+")
+_BLANKS = re.compile(r"(?:[ \t\r\n]++|#[^\n]*+)*+")
+_BARE = re.compile(r"[^ \t.=\]\r\n]*+")
+_NUMBERS = re.compile(r"(?:[\w.+-]++[ \t]*+,[ \t]*+)*+")
+_PLAIN = re.compile(r"[^,\]}#\n]*+")
+_INSIDE = {  # of a string after its opening mark
+    '"': re.compile(r'(?:[^"\\]++|\\.?)*+', re.DOTALL),
+    "'": re.compile(r"[^']*+"),
+    '"""': re.compile(r'(?:[^"\\]++|\\.?|"{1,2}+(?!"))*+', re.DOTALL),
+    "'''": re.compile(r"(?:[^']++|'{1,2}+(?!'))*+"),
+}
 
 
 @dataclass
@@ -25,49 +37,38 @@ class _Reader:
         self.line += self.text.count("\n", self.at, self.at + n)
         self.at += n
 
+    def skip(self, pattern: re.Pattern[str]) -> str:
+        """Step over what a pattern matches here (all of them match nothing too) and return it."""
+        found = pattern.match(self.text, self.at)
+        assert found is not None
+        self.line += found[0].count("\n")
+        self.at = found.end()
+        return found[0]
+
     def blank(self, newlines: bool) -> None:
         """Skip white space and comments."""
-        while self.at < len(self.text):
-            c = self.peek()
-            if c == "#":
-                end = self.text.find("\n", self.at)
-                self.step((len(self.text) if end < 0 else end) - self.at)
-            elif c in " \t\r" or (c == "\n" and newlines):
-                self.step()
-            else:
-                return
+        self.skip(_BLANKS if newlines else _BLANK)
 
     def quoted(self) -> str:
         """Read a string in any of the four quotings; escapes are left as they are."""
         quote = self.peek()
         mark = quote * 3 if self.text.startswith(quote * 3, self.at) else quote
         self.step(len(mark))
-        begin = self.at
-        while self.at < len(self.text):
-            if quote == '"' and self.peek() == "\\":
-                self.step(2)
-            elif self.text.startswith(mark, self.at):
-                while len(mark) == 3 and self.text.startswith(quote, self.at + 3):
-                    self.step()
-                inside = self.text[begin : self.at]
-                self.step(len(mark))
-                return inside
-            else:
-                self.step()
-        return self.text[begin:]
+        inside = self.skip(_INSIDE[mark])
+        self.step(len(mark))
+        while len(mark) == 3 and self.peek() == quote:  # up to two quotes may stand before the closing mark
+            inside += quote
+            self.step()
+        return inside
 
     def name(self) -> tuple[str, ...]:
         """Read a key, dotted or not."""
         parts: list[str] = []
         while True:
             self.blank(False)
-            if self.peek() in ("'", '"'):
-                parts.append(self.quoted())
-            else:
-                begin = self.at
-                while self.peek() and self.peek() not in " \t.=]\r\n":
-                    self.step()
-                parts.append(self.text[begin : self.at])
+            part = self.quoted() if self.peek() in ("'", '"') else self.skip(_BARE)
+            if len(parts) < _DEEPEST:
+                parts.append(part)
             self.blank(False)
             if self.peek() != ".":
                 return tuple(parts)
@@ -97,19 +98,23 @@ class _Reader:
         elif c == "{":
             self.inline(path, depth)
         else:
-            while self.peek() and self.peek() not in ",]}#\n":
-                self.step()
+            self.skip(_PLAIN)
 
     def array(self, path: Path, depth: int) -> None:
         self.step()
         index = 0
         while self.at < len(self.text):
             self.blank(True)
+            for _ in range(self.skip(_NUMBERS).count(",")):  # a list may hold a hundred thousand of them
+                self.lines[(*path, index)] = self.line
+                index += 1
             if self.peek() == "]":
                 self.step()
                 return
             if self.peek() == ",":
                 self.step()
+                continue
+            if self.peek() in "\n#":
                 continue
             begin = self.at
             self.lines[(*path, index)] = self.line

@@ -5,7 +5,6 @@ from __future__ import annotations
 import copy
 import json
 import os
-import tomllib
 from collections.abc import Iterator, Sequence
 from dataclasses import replace
 from pathlib import Path
@@ -13,6 +12,7 @@ from typing import Any
 
 from cohort.errors import Problem, StudyError, nearest
 from cohort.model.catalogue import MODELS
+from cohort.reading import UnreadableError, names_in, read_plain, why_unread
 from cohort.study import arms as arms_of
 from cohort.study import ranking as ranking_of
 from cohort.study import sampling as sampling_of
@@ -23,7 +23,7 @@ from cohort.study.maps import maps
 from cohort.study.oddities import oddities
 from cohort.study.selection import selection
 from cohort.study.spec import Output, Study
-from cohort.study.tree import Quantity, Tree, check, dotted, read_toml
+from cohort.study.tree import DEEPEST, LARGEST_TEXT, Quantity, Tree, check, dotted, parse_value, read_toml
 
 _NAMED_LISTS = ("arms", "strata", "schedules")
 MOST_MODELS = 12
@@ -37,15 +37,12 @@ def load_study(
     `model_code` its model may be a Python file, which is run. Raises StudyError with every problem found."""
     place = Path(path)
     try:
-        data = place.read_bytes()
-    except OSError as error:
-        folder = place.parent if place.parent.is_dir() else Path()
-        near = nearest(place.name, [p.name for p in folder.glob("*.toml")])
-        raise StudyError(
-            [Problem("", f"cannot be read: {(error.strerror or str(error)).lower()}{near}", str(path))]
-        ) from None
-    except ValueError as error:
-        raise StudyError([Problem("", f"cannot be read: {error}", str(path))]) from None
+        data = read_plain(place, LARGEST_TEXT)
+    except (OSError, UnreadableError) as error:
+        near = ""
+        if not os.path.exists(place):  # noqa: PTH110 -- Path.exists raises for names too long
+            near = nearest(place.name, [n for n in names_in(place.parent) if n.endswith(".toml")])
+        raise StudyError([Problem("", f"cannot be read: {why_unread(error)}{near}", str(path))]) from None
     return study_from(data, place, overrides, outside, model_code)
 
 
@@ -191,25 +188,18 @@ def _override(tree: dict[str, Any], overrides: Sequence[str]) -> tuple[dict[str,
             problems.append(Problem(word[:60], "is not KEY=VALUE, such as subjects.count=500", "--set"))
             continue
         try:
-            changed.add(_set(tree, key.strip(), _toml_value(text.strip())))
-        except KeyError as error:
+            changed.add(_set(tree, key.strip(), parse_value(text.strip())))
+        except (KeyError, ValueError) as error:
             problems.append(Problem(key.strip(), str(error.args[0]), "--set"))
     if problems:
         raise StudyError(problems)
     return tree, frozenset(changed)
 
 
-def _toml_value(text: str) -> Any:
-    """A value as TOML writes it; anything else is a text as it stands."""
-    try:
-        found = tomllib.loads(f"x = {text}")
-    except (tomllib.TOMLDecodeError, RecursionError, ValueError):
-        return text
-    return found["x"] if list(found) == ["x"] else text
-
-
 def _set(tree: dict[str, Any], key: str, value: Any) -> KeyPath:
-    """Put `value` at a dotted key; entries of arms, strata and schedules go by name."""
+    """Put `value` at a dotted key; entries of arms, strata and schedules go by name. Raises KeyError where they do not."""
+    if key.count(".") > DEEPEST:
+        raise KeyError(f"has {key.count('.') + 1:,} parts; at most {DEEPEST} are allowed")
     node: Any = tree
     path: KeyPath = ()
     rest = key

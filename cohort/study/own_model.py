@@ -6,6 +6,7 @@ import contextlib
 from pathlib import Path
 
 from cohort.model.own import LARGEST_CODE, OwnModelError, register
+from cohort.reading import UnreadableError, read_plain, why_unread
 from cohort.study.tree import Tree
 
 OTHERWISE = "hepatic-lag"
@@ -21,14 +22,15 @@ def own_model(tree: Tree, name: str, folder: Path, allowed: bool) -> tuple[str, 
     try:
         code = _text(name, folder)
         return register(code, Path(name).stem), code
-    except (OSError, UnicodeDecodeError, OwnModelError) as error:
-        tree.problem(("model",), f"{name}: {error}")
+    except (OSError, UnreadableError, UnicodeDecodeError, OwnModelError) as error:
+        why = why_unread(error) if isinstance(error, OSError | UnreadableError) else error
+        tree.problem(("model",), f"{name}: {why}")
         return OTHERWISE, ""
 
 
 def known(name: str, folder: Path) -> None:
     """Register a model file where it can be; what is wrong with it is said by `own_model`."""
-    with contextlib.suppress(OSError, UnicodeDecodeError, OwnModelError):
+    with contextlib.suppress(OSError, UnreadableError, UnicodeDecodeError, OwnModelError):
         register(_text(name, folder), Path(name).stem)
 
 
@@ -36,9 +38,4 @@ def _text(name: str, folder: Path) -> str:
     path = folder / name
     if not path.resolve().is_relative_to(folder.resolve()):
         raise OwnModelError("lies outside the study's folder")
-    if not path.is_file():
-        raise OwnModelError("no such file beside the study")
-    data = path.read_bytes()
-    if len(data) > LARGEST_CODE:
-        raise OwnModelError(f"is larger than {LARGEST_CODE:,} bytes")
-    return data.decode()
+    return read_plain(path, LARGEST_CODE).decode()

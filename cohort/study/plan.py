@@ -14,7 +14,7 @@ from cohort.model.protocol import Arm, Meal, OnOff, Sine
 from cohort.population.laws import Fixed
 from cohort.population.recipe import WEIGHT, Stratum
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
-from cohort.study.arms import has_steady_input
+from cohort.study.arms import has_steady_input, pieces
 from cohort.study.oddities import published_growth
 from cohort.study.ranking import ranked_runs
 from cohort.study.sampling import Sampling
@@ -35,8 +35,14 @@ STATES_TIMED = 6
 SECONDS_AT_START = 1.2
 BYTES_PER_OUTCOME = 4.4
 OUTCOME_COLUMNS = 48
+MEAL_COLUMNS = 9
+SEEN_COLUMNS = 22
 BASE_MEMORY_MB = 230.0
 MEMORY_PER_WORKER_MB = 90.0
+MB_PER_PIECE = 0.125
+"""Of an arm's inputs, for the 1,024 subjects that a worker has at a time."""
+MB_PER_SUBJECT_COUNTED, MB_PER_SUBJECT_AND_ARM = 64e-6, 16e-6
+"""Columns of everyone that are held at once when results are counted and drawn."""
 
 
 @dataclass(frozen=True)
@@ -94,13 +100,25 @@ def plan(study: Study, workers: int | None = None) -> Plan:
     core *= 1.0 + (ranked + drawn) / (n * len(arms))
     subject_columns = len(study.recipe.varied) + 3
     rows_mb = n * (len(arms) * OUTCOME_COLUMNS + subject_columns) * BYTES_PER_OUTCOME / 1e6
+    meals = sum(pieces(s, a.duration_min) for a in study.arms for s in a.glucose if isinstance(s, Meal))
+    series = 2 * len(study.arms) * len(study.sampling.schedules) if study.sampling else 0
+    more_mb = n * (meals * MEAL_COLUMNS + series * SEEN_COLUMNS) * BYTES_PER_OUTCOME / 1e6
     points = sum(a.duration_min / study.output.every_min + 1 for a in study.arms)
     rows_mb *= 1.0 + ranked / (n * len(arms))
-    disk = rows_mb + points * study.output.time_courses * 6 * BYTES_PER_OUTCOME / 1e6
+    disk = rows_mb + more_mb + points * study.output.time_courses * 6 * BYTES_PER_OUTCOME / 1e6
     return Plan(
         n, -(-n // SHARD), n * len(arms), workers, arms, SECONDS_AT_START + core / max(min(workers, n / 256), 1.0),
-        BASE_MEMORY_MB + MEMORY_PER_WORKER_MB * workers, disk, _laws(study), ranked, drawn,
+        _memory_mb(study, workers), disk, _laws(study), ranked, drawn,
     )  # fmt: skip
+
+
+def _memory_mb(study: Study, workers: int) -> float:
+    most = max((sum(pieces(s, a.duration_min) for s in (*a.glucose, *a.insulin)) for a in study.arms), default=0)
+    table = study.recipe.table
+    columns = 0 if table is None else len(table.columns) + 3
+    each = MB_PER_SUBJECT_COUNTED + MB_PER_SUBJECT_AND_ARM * len(study.arms) + 8e-6 * columns
+    counted = study.recipe.count * each
+    return BASE_MEMORY_MB + (MEMORY_PER_WORKER_MB + MB_PER_PIECE * most) * workers + counted
 
 
 def _arm(study: Study, arm: Arm) -> ArmPlan:

@@ -17,8 +17,9 @@ from cohort.study.tree import Tree
 
 _OF_SOBOL = ("base", "replicates", "tolerance", "max_runs", "second_order")
 _OF_MORRIS = ("trajectories", "levels")
-_MEAL = re.compile(r"meal_([1-9][0-9]*)\.(\w+)")
+_MEAL = re.compile(r"meal_([1-9][0-9]{0,5})\.(\w+)")
 
+MOST_OUTCOMES = 100
 RANKABLE = (
     "oscillates",
     *(c.name for c in (*CYCLE_OUTCOMES, *WINDOW_OUTCOMES, *CLAMP_OUTCOMES) if c.kind == "float64"),
@@ -65,6 +66,9 @@ def _check_numbers(tree: Tree, values: dict[str, Any]) -> None:
 
 def _outcomes(tree: Tree, values: dict[str, Any], arms: Sequence[Arm]) -> tuple[str, ...]:
     names = values.get("outcomes", [])
+    if len(names) > MOST_OUTCOMES:
+        tree.problem(("ranking", "outcomes"), f"{len(names):,} outcomes; at most {MOST_OUTCOMES} are allowed")
+        return ()
     if not names and not any(p.key.startswith("ranking.outcomes") for p in tree.problems):
         tree.problem(("ranking",), "outcomes is missing: which outcomes to rank for")
     for i, name in enumerate(names):

@@ -13,12 +13,15 @@ from cohort.observe.detector import Rule
 from cohort.observe.sampling import Reading, Schedule
 from cohort.quantities import ANALYTES
 from cohort.study.arms import NAME
+from cohort.study.keys import YEAR_MIN
 from cohort.study.tree import Quantity, Tree
 
 USUAL_CV = {"glucose": 0.02, "insulin": 0.06}
 USUAL_SD = {"glucose": 0.03, "insulin": 0.06}
 USUAL_TIME_MIN = 30.0
 MOST_RECRUITS = 5000
+MOST_SIZES = 100
+MOST_SCHEDULES = 100
 
 
 @dataclass(frozen=True)
@@ -62,6 +65,9 @@ def sampling(tree: Tree, arms: Sequence[Arm]) -> Sampling | None:
     listed = values.get("schedules", [])
     if not listed and not any(p.key.startswith("sampling.schedules") for p in tree.problems):
         tree.problem(("sampling",), "schedules is missing: when samples are taken")
+    if len(listed) > MOST_SCHEDULES:
+        tree.problem(("sampling", "schedules"), f"{len(listed)} schedules; at most {MOST_SCHEDULES} are allowed")
+        return None
     for i, value in enumerate(listed):
         made = _schedule(tree, value, i, [s.name for s in schedules])
         if made is None:
@@ -115,6 +121,9 @@ def _times(tree: Tree, value: dict[str, Any], path: tuple[str | int, ...]) -> tu
             if key in value:
                 tree.problem((*path, key), "not allowed beside times")
         times = tuple(q.number for q in value["times"])
+        if not times:
+            tree.problem((*path, "times"), "is empty; it says when samples are taken")
+            return None
         if any(b <= a for a, b in pairwise(times)):
             tree.problem((*path, "times"), "sampling times must rise")
             return None
@@ -123,6 +132,9 @@ def _times(tree: Tree, value: dict[str, Any], path: tuple[str | int, ...]) -> tu
         tree.problem(path, "every and duration are needed (or times)")
         return None
     step, begin, length = number("every", 1.0), number("start", 0.0), number("duration", 1.0)
+    if begin + length > YEAR_MIN:
+        tree.problem(path, f"ends {begin + length:g} min after settling; an arm lasts at most {YEAR_MIN:,.0f} min")
+        return None
     count = int(min(length / step, 1e6) + 1e-9) + 1
     return tuple(begin + step * k for k in range(min(count, MOST_SAMPLES + 1)))
 
@@ -147,6 +159,9 @@ def recruitment(tree: Tree) -> Recruitment | None:
         return None
     values = tree.values["recruitment"]
     sizes = values.get("sizes", [])
+    if len(sizes) > MOST_SIZES:
+        tree.problem(("recruitment", "sizes"), f"{len(sizes):,} sizes; at most {MOST_SIZES} are allowed")
+        return None
     for i, size in enumerate(sizes):
         if size != int(size) or not 1 <= size <= MOST_RECRUITS:
             tree.problem(

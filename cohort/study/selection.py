@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
@@ -81,13 +82,15 @@ def selection(tree: Tree, recipe: Recipe, arms: Sequence[Arm]) -> Selection:
 
 
 def _target(tree: Tree, path: Path, value: dict[str, Any], found: tuple[str, Column]) -> Target | None:
-    numbers = {}
+    numbers: dict[str, float] = {}
     for key in ("mean", "sd"):
         if key not in value:
             tree.problem(path, f"{key} is missing")
         else:
             number = _number(tree, (*path, key), value[key], found[1])
-            if number is not None:
+            if number is not None and not math.isfinite(number):
+                tree.problem((*path, key), f"{number:g} is not a finite number")
+            elif number is not None:
                 numbers[key] = number
     if len(numbers) < 2:
         return None

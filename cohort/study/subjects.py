@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
 
-from cohort.errors import nearest
+from cohort.errors import StudyError, nearest
 from cohort.model.catalogue import ModelCard
 from cohort.population.copula import is_possible, latent_matrix, nearest_correlation
 from cohort.population.laws import (
@@ -31,6 +32,12 @@ CUT_SHOWN = 1e-6
 CUT_REFUSED = 0.01
 LAWS = ("lognormal", "normal", "uniform", "loguniform", "triangular", "beta", "empirical")
 LARGEST_HYPERCUBE = 2**22
+MOST_STRATA = 100
+LONGEST_STRATUM = 60
+MOST_BETA = 30
+MOST_BETA_WORK = 200.0
+"""Of all beta laws, sqrt(alpha + beta) added up: solving one takes up to 0.01 s times that."""
+_MARKS = np.array([2.0**-40, 0.05, 0.5, 0.95, 1.0 - 2.0**-40])
 
 _NEEDED = {
     "lognormal": ("median", "cv"),
@@ -48,6 +55,7 @@ Path = tuple[str | int, ...]
 def recipe(tree: Tree, card: ModelCard, seed: int, files: Files) -> Recipe:
     """Build the recipe, noting every problem in `tree`; what is wrong is left out of it."""
     values = tree.values.get("subjects", {})
+    _check_amount(tree, values)
     laws = _laws(tree, values.get("parameters", {}), ("subjects", "parameters"), card, files)
     size = values.get("size", {})
     weight = _weight(tree, size, ("subjects", "size"), files)
@@ -66,6 +74,29 @@ def recipe(tree: Tree, card: ModelCard, seed: int, files: Files) -> Recipe:
     if table is not None and (made.drawn or size):
         _table_alone(tree, values, made)
     return made
+
+
+def _check_amount(tree: Tree, values: Mapping[str, Any]) -> None:
+    """Raise StudyError where strata or laws are more than can be looked at in a second or two."""
+    n = len(values.get("strata", []))
+    shapes = set(_beta_shapes(values))
+    work = sum(math.sqrt(a + b) for a, b in shapes)
+    message = ""
+    if n > MOST_STRATA:
+        message = f"{n} strata; at most {MOST_STRATA} are allowed"
+    elif len(shapes) > MOST_BETA or (work > MOST_BETA_WORK and len(shapes) > 1):
+        message = (f"{len(shapes)} beta laws whose sqrt(alpha + beta) add to {work:.0f} take too long to solve; at most "
+                   f"{MOST_BETA} laws and {MOST_BETA_WORK:g} are allowed")  # fmt: skip
+    if message:
+        raise StudyError([*tree.problems, tree.place(("subjects",), message)])
+
+
+def _beta_shapes(values: Mapping[str, Any]) -> Iterator[tuple[float, float]]:
+    blocks = [values, values.get("size", {}), *values.get("strata", [])]
+    for law in (law for block in blocks for law in (*block.get("parameters", {}).values(), block.get("weight"))):
+        shape = law.get("beta") if isinstance(law, dict) else None
+        if isinstance(shape, dict) and "alpha" in shape and "beta" in shape:
+            yield float(shape["alpha"]), float(shape["beta"])
 
 
 def _count(tree: Tree, values: Mapping[str, Any]) -> tuple[int, str]:
@@ -148,8 +179,15 @@ def _weight(tree: Tree, values: Mapping[str, Any], path: Path, files: Files) -> 
 
 
 def _within(tree: Tree, path: Path, law: Law, low: float, high: float, unit: str) -> bool:
-    _, mass = cut(law, low, high)
     shown = "" if unit == "1" else f" {unit}"
+    try:
+        with np.errstate(all="raise", under="ignore"):
+            inside, mass = cut(law, low, high)
+            if mass <= CUT_REFUSED and not isinstance(law, Beta):  # solving a beta law takes its time
+                inside.quantile(_MARKS)
+    except (FloatingPointError, OverflowError, ZeroDivisionError):
+        tree.problem(path, "the numbers of this law are too large or too small to compute with")
+        return False
     if isinstance(law, Fixed):
         if mass:
             tree.problem(
@@ -239,6 +277,8 @@ def _strata(
         if name is None or not isinstance(name, str) or not name.strip():
             tree.problem(path, "name is missing")
             name = f"stratum {i + 1}"
+        if len(name) > LONGEST_STRATUM:
+            tree.problem((*path, "name"), f"{len(name):,} characters; at most {LONGEST_STRATUM} are allowed")
         if name in [s.name for s in strata]:
             tree.problem((*path, "name"), f"{name!r} is the name of another stratum")
         if "share" not in value:

@@ -2,19 +2,28 @@
 
 from __future__ import annotations
 
+import re
 import tomllib
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
-from cohort.errors import Problem, StudyError, nearest
+from cohort.errors import Problem, StudyError, nearest, unprintable
 from cohort.quantities import INPUT_PARAMETERS, PARAMETERS
 from cohort.study.keys import KEYS, Key, children, parameter_unit
 from cohort.study.lines import Path, locate
 from cohort.study.units import UnitError, parse
 
-LARGEST_TEXT = 2_000_000
+LARGEST_TEXT = 1_000_000
+LONGEST_TEXT = 1000
+DEEPEST = 40
+MOST_PROBLEMS = 100
+_WHOLE = 2**63
+_DOTTED = re.compile(  # possessive, and never begun within a word: linear in the text
+    r"""(?<![\w-])(?:(?:[\w-]++|"[^"\n]*+"|'[^'\n]*+')[ \t]*+\.[ \t]*+){40}"""
+)
 _ANY = "*"
+_TOO_DEEP = f"is nested too deeply; at most {DEEPEST} names or lists within each other are allowed"
 
 
 @dataclass(frozen=True)
@@ -42,8 +51,11 @@ class Tree:
     elsewhere: frozenset[str] = frozenset()
 
     def problem(self, path: Sequence[str | int], message: str) -> None:
-        """Note a problem at a path."""
+        """Note a problem at a path. Raises StudyError where there are too many to go on."""
         self.problems.append(self.place(path, message))
+        if len(self.problems) >= MOST_PROBLEMS:
+            more = f"has more problems than these {MOST_PROBLEMS}; it was read no further"
+            raise StudyError([*self.problems, Problem("", more, self.file)])
 
     def place(self, path: Sequence[str | int], message: str) -> Problem:
         """A problem at a path, with the line of the nearest key above it that stands in the file."""
@@ -65,16 +77,22 @@ def dotted(path: Sequence[str | int]) -> str:
 
 
 def read_toml(data: bytes, file: str) -> tuple[dict[str, Any], str]:
-    """Return (tree, text). Raises StudyError where the bytes are no TOML, or too many."""
+    """Return (tree, text). Raises StudyError where the bytes are no TOML, too many, nested too deeply, or hold a number
+    beyond TOML's."""
     if len(data) > LARGEST_TEXT:
-        raise StudyError([Problem("", f"is larger than a study file may be ({LARGEST_TEXT:,} bytes)", file)])
+        raise StudyError(
+            [Problem("", f"is larger than a study file may be: {len(data):,} bytes, at most {LARGEST_TEXT:,}", file)]
+        )
     try:
         text = data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         line = data[: error.start].count(b"\n") + 1
         raise StudyError([Problem("", "is not UTF-8 text", file, line)]) from None
+    dots = _DOTTED.search(text)
+    if dots:
+        raise StudyError([Problem("", _TOO_DEEP, file, text.count("\n", 0, dots.start()) + 1)])
     try:
-        return tomllib.loads(text.replace("\r\n", "\n")), text
+        tree = tomllib.loads(text.replace("\r\n", "\n"))
     except tomllib.TOMLDecodeError as error:
         message, _, place = str(error).partition(" (at ")
         found = place.removeprefix("line ").split(",")[0]
@@ -83,6 +101,45 @@ def read_toml(data: bytes, file: str) -> tuple[dict[str, Any], str]:
     except (RecursionError, ValueError) as error:
         why = "is nested too deeply" if isinstance(error, RecursionError) else f"is not TOML: {error}"
         raise StudyError([Problem("", why, file)]) from None
+    wrong = fault(tree)
+    if wrong:
+        path, why = wrong
+        raise StudyError([Problem(dotted(path), why, file, locate(text).get(path))])
+    return tree, text
+
+
+def parse_value(text: str) -> Any:
+    """A value as TOML writes it; anything else is a text as it stands. Raises ValueError for what no study may hold."""
+    if unprintable(text):
+        raise ValueError(f"its value holds the character {unprintable(text)!a}, which is no printable text")
+    if _DOTTED.search(text):
+        raise ValueError(_TOO_DEEP)
+    try:
+        found = tomllib.loads(f"x = {text}")
+    except (tomllib.TOMLDecodeError, RecursionError, ValueError):
+        return text
+    if list(found) != ["x"]:
+        return text
+    wrong = fault(found)
+    if wrong:
+        raise ValueError(wrong[1])
+    return found["x"]
+
+
+def fault(tree: dict[str, Any]) -> tuple[Path, str] | None:
+    """The first place of a TOML tree that is too deep or a whole number of more than 64 bits, and what is wrong."""
+    left: list[tuple[Any, Path]] = [(tree, ())]
+    while left:
+        node, path = left.pop()
+        if len(path) > DEEPEST:
+            return path[:DEEPEST], _TOO_DEEP
+        entries: Iterable[tuple[str | int, Any]] = node.items() if isinstance(node, dict) else enumerate(node)
+        for name, value in entries:
+            if isinstance(value, dict | list):
+                left.append((value, (*path, name)))
+            elif isinstance(value, int) and not -_WHOLE <= value < _WHOLE:
+                return (*path, name), "a whole number of more than 64 bits is not allowed"
+    return None
 
 
 def check(tree: dict[str, Any], text: str, file: str, overridden: frozenset[Path]) -> Tree:
@@ -111,6 +168,12 @@ def _table(out: Tree, table: dict[str, Any], path: Path, pattern: str) -> dict[s
             out.problem(here, f"no such key{near}{listed}")
             continue
         key = KEYS[found]
+        if found.endswith(_ANY) and (unprintable(name) or len(name) > LONGEST_TEXT):
+            out.problem(
+                here,
+                f"{_shown(name)} cannot be a name; printable text of at most {LONGEST_TEXT:,} characters is wanted",
+            )
+            continue
         good = _value(out, value, here, key)
         if good is not None:
             converted[name] = good
@@ -172,13 +235,26 @@ def _leaf(out: Tree, value: Any, path: Path, key: Key) -> Any:
         wanted = {"whole": "a whole number", "number": "a number", "yes/no": "true or false"}.get(kind, "a text")
         out.problem(path, f"{_shown(value)} is not allowed; {wanted} is wanted: {key.meaning}")
         return None
+    if kind in ("text", "word") and not _is_text(out, value, path):
+        return None
     if kind == "word" and key.words and value not in key.words:
         near = nearest(value, key.words)
         out.problem(path, f"{value[:60]!r} is not allowed{near}; one of {', '.join(key.words)}")
         return None
-    if kind in ("whole", "number") and not _in_range(out, float(min(max(value, -1e300), 1e300)), value, path, key, ""):
+    if kind in ("whole", "number") and not _in_range(out, float(value), value, path, key, ""):
         return None
     return value
+
+
+def _is_text(out: Tree, value: str, path: Path) -> bool:
+    """Whether it can stand in a line of a terminal, a page and a figure."""
+    odd = unprintable(value)
+    if odd:
+        out.problem(path, f"{_shown(value)} holds the character {odd!a}, which is no printable text")
+    elif len(value) > LONGEST_TEXT:
+        out.problem(path, f"{len(value):,} characters; at most {LONGEST_TEXT:,} are allowed")
+        return False
+    return not odd
 
 
 def _quantity(out: Tree, value: Any, path: Path, key: Key) -> Quantity | str | None:

@@ -100,7 +100,7 @@ def parse(value: object, *units: str) -> tuple[float, str]:
             DIMENSIONS[kept] = Dimension(f"a quantity in {kept}", kept, {plain: 1.0})
     wanted = DIMENSIONS[units[0]].meaning
     if isinstance(value, bool) or not isinstance(value, int | float | str):
-        raise UnitError(f'{value!r} is not {wanted}; write a number or a text such as "1 {units[0]}"')
+        raise UnitError(f'{str(value)[:60]} is not {wanted}; write a number or a text such as "1 {units[0]}"')
     if not isinstance(value, str):
         return _number(value), units[0]
     found = _QUANTITY.fullmatch(value) if len(value) < 100 else None
@@ -112,7 +112,7 @@ def parse(value: object, *units: str) -> tuple[float, str]:
         return number, units[0]
     for kept in units:
         if unit in DIMENSIONS[kept].factors:
-            return number * DIMENSIONS[kept].factors[unit], kept
+            return _number(number * DIMENSIONS[kept].factors[unit]), kept
     others = [d.meaning for d in DIMENSIONS.values() if unit in d.factors]
     if others:
         raise UnitError(f"{value!r} is {others[0]}; {wanted} is wanted: {_allowed(units)}")
@@ -123,8 +123,8 @@ def parse(value: object, *units: str) -> tuple[float, str]:
 def _number(value: float) -> float:
     try:
         number = float(value)
-    except OverflowError:
-        number = float("inf")
+    except OverflowError:  # its digits may be too many to print
+        raise UnitError("so large a whole number is not a finite number") from None
     if number != number or number in (float("inf"), float("-inf")):
         raise UnitError(f"{value!r} is not a finite number")
     return number

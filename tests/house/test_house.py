@@ -12,22 +12,23 @@ import pytest
 ROOT = Path(__file__).resolve().parents[2]
 PACKAGE = ROOT / "cohort"
 
-FOUNDATION = {"errors", "quantities", "program", "compiled", "tables"}
+FOUNDATION = {"errors", "quantities", "program", "compiled", "reading", "tables"}
 MAY_IMPORT: dict[str, set[str]] = {
     "errors": set(),
     "quantities": set(),
     "program": set(),
     "compiled": {"program"},
-    "tables": {"errors", "quantities"},
+    "reading": set(),
+    "tables": {"errors", "quantities", "reading"},
     "model": {"errors", "quantities", "program", "compiled"},
     "simulate": {"errors", "quantities", "program", "compiled", "model"},
     "measure": {"errors", "quantities", "program", "compiled", "model", "simulate"},
     "population": {"errors", "quantities"},
-    "observe": {"errors", "quantities", "compiled", "measure", "population"},
+    "observe": {"errors", "quantities", "reading", "compiled", "measure", "population"},
     "infer": {"errors", "quantities", "population", "tables"},
-    "study": {"errors", "quantities", "program", "model", "population", "infer", "observe", "tables"},
+    "study": {"errors", "quantities", "reading", "program", "model", "population", "infer", "observe", "tables"},
     "execute": {*FOUNDATION, "model", "simulate", "measure", "observe", "population", "infer", "study"},
-    "report": {"errors", "quantities", "tables", "infer", "population", "observe", "model"},
+    "report": {"errors", "quantities", "reading", "tables", "infer", "population", "observe", "model"},
     "cli": {"errors", "study", "execute", "report", "observe"},
     "__init__": {"errors", "simulate", "study", "execute", "report"},
     "__main__": {"cli"},
