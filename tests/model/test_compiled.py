@@ -1,6 +1,8 @@
 """Compiled code in memory and on disk: many threads, private folders, hostile ones, none at all."""
 
+import ctypes
 import os
+import platform
 import stat
 import subprocess
 import sys
@@ -11,7 +13,8 @@ import numpy as np
 import pytest
 
 from cohort import compiled
-from cohort.program import Builder
+from cohort.model.body import body
+from cohort.program import Builder, run
 
 ROOT = Path(__file__).resolve().parents[2]
 CODE = (
@@ -88,3 +91,28 @@ def test_another_version_of_a_kernel_has_another_folder(monkeypatch: pytest.Monk
     there = compiled.cache_folder()
     compiled.cache_folder.cache_clear()
     assert here != there
+
+
+def test_a_processor_without_fused_multiply_add_gives_the_same_bits(monkeypatch: pytest.MonkeyPatch) -> None:
+    """There fma is a call of the C library's, which rounds once too."""
+    found = body("hepatic-lag")
+    stepper = found.stepper(("glucose_mg_dl", "insulin_mu_l"), True)
+    rng = np.random.default_rng(3)
+    program = stepper.step
+    parameters = [*found.card.nominal.values(), 1.0]
+    constants = run(stepper.hoisted, parameters)
+    usual, without = np.empty((2, len(program.outputs)))
+    monkeypatch.setattr(compiled, "_cpu", lambda: ("x86-64", "-fma,-avx,-avx2,-avx512f"))
+    monkeypatch.setattr(compiled, "cache_folder", lambda: None)
+    if platform.machine() != "x86_64":
+        monkeypatch.setattr(compiled, "_cpu", lambda: ("generic", ""))
+    address, kept = compiled._load(program, 1, None)
+    plain = ctypes.CFUNCTYPE(None, ctypes.c_void_p, ctypes.c_void_p)(address)
+    for _ in range(50):
+        x = np.array(list(found.card.typical.values())) * np.exp(0.2 * rng.normal(size=6))
+        scale = [1.0 / s for s in found.card.typical.values()]
+        source = np.array([*x, *scale, 60.0, 216.0, 0.0, *constants])
+        compiled.run_compiled(program, source, usual)
+        plain(source.ctypes.data, without.ctypes.data)
+        np.testing.assert_array_equal(usual, without)
+    assert kept is not None
