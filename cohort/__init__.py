@@ -18,6 +18,7 @@ from typing import TYPE_CHECKING
 
 from cohort import simulate as simulate
 from cohort.errors import CohortError, Problem, RunError, StudyError
+from cohort.stores import place
 
 if TYPE_CHECKING:
     from cohort.report.results import Results
@@ -53,7 +54,7 @@ def run(
     from cohort.report.several import compare
     from cohort.report.summary import rebuild
 
-    folder = Path(out) if out is not None else Path("results") / study.path.stem
+    folder = place(out) if out is not None else Path("results") / study.path.stem
     if study.others:
         run_several(study, folder, workers=workers, quiet=quiet)
         compare(folder)
@@ -66,4 +67,4 @@ def open_results(folder: str | os.PathLike[str]) -> Results:
     """Open a result folder."""
     from cohort.report.results import Results
 
-    return Results(Path(folder))
+    return Results(place(folder))

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from cohort.errors import CohortError, Problem, RunError, StudyError
+from cohort.stores import place
 
 if TYPE_CHECKING:
     from cohort.observe.detector import Rule
@@ -81,11 +82,11 @@ def run(words: argparse.Namespace) -> int:
     study = load_study(words.study, words.set, words.allow_outside, words.allow_model_code)
     for one in (study, *study.others):
         _warn(one.warnings)
-    folder = Path(words.out) if words.out else Path("results") / study.path.stem
+    folder = place(words.out) if words.out else Path("results") / study.path.stem
     _fits(study, plan(study, words.workers), folder)
     running = run_several if study.others else run_study
     done = running(study, folder, workers=words.workers, log=Path(words.log) if words.log else None,
-                   scheduler=words.scheduler, mixed=words.mixed_machines, only=words.shards)  # fmt: skip
+                   scheduler=words.scheduler, mixed=words.mixed_machines, only=words.shards, lock=not words.no_lock)  # fmt: skip
     if words.shards:
         print(
             f"{done.simulated:,} runs in {done.seconds:.1f} s. When every share is done, run without --shards to finish"
@@ -101,7 +102,7 @@ def run(words: argparse.Namespace) -> int:
 
 def report(words: argparse.Namespace) -> int:
     """Rebuild tables and summary from the result files."""
-    _say(Path(words.folder), words.json)
+    _say(place(words.folder), words.json)
     return 0
 
 
@@ -248,7 +249,8 @@ def _parser() -> argparse.ArgumentParser:
     checking.add_argument("--workers", type=_positive, metavar="N", help="workers to plan for (default: the cores)")
     running = command("run", run, "run a study, or carry on where it stopped")
     with_study(running)
-    running.add_argument("--out", metavar="DIR", help="result folder (default: results/<study>)")
+    running.add_argument("--out", metavar="DIR", help="result folder (default: results/<study>), or s3://bucket/prefix")
+    running.add_argument("--no-lock", action="store_true", help="do not hold the folder against other runs")
     running.add_argument("--workers", type=_positive, metavar="N", help="how many at once (default: the cores)")
     running.add_argument("--json", action="store_true", help="print summary.json instead of words")
     running.add_argument(

@@ -34,6 +34,10 @@ class UnreadableError(ValueError):
 def read_plain(path: Path, most: int) -> bytes:
     """Return a plain file's bytes. Raises UnreadableError for pipes, devices and folders and for more than `most` bytes,
     FileNotFoundError where there is none, OSError where it cannot be opened."""
+    if not isinstance(path, Path):  # in a store there are objects only
+        if (size := path.stat().st_size) > most:
+            raise UnreadableError(f"has {size:,} bytes; at most {most:,} are allowed")
+        return bytes(path.read_bytes())
     try:
         opened = os.open(path, os.O_RDONLY | os.O_NONBLOCK)  # a pipe that nobody writes to does not hold us up
     except ValueError:

@@ -48,6 +48,7 @@ from cohort.quantities import (
     WINDOW_OUTCOMES,
     Column,
 )
+from cohort.stores import is_remote, put
 
 Values = Mapping[str, NDArray[Any] | Sequence[str] | Sequence[str | None] | str]
 
@@ -239,7 +240,11 @@ def _parquet(table: pa.Table) -> bytes:
 
 
 def write_bytes(path: Path, data: bytes) -> None:
-    """Write a file so that a crash leaves the old one or the new one: temporary, fsync, rename, fsync the folder."""
+    """Write a file so that a crash leaves the old one or the new one: temporary, fsync, rename, fsync the folder; in a store,
+    one PUT, read back."""
+    if is_remote(path):
+        put(path, data)
+        return
     path.parent.mkdir(parents=True, exist_ok=True)
     temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
     temporary.unlink(missing_ok=True)  # what was planted there is not written through
@@ -324,7 +329,7 @@ def _opened(path: Path) -> pq.ParquetFile:
     """A Parquet file, opened where it is a plain file: a pipe would hang us, a device never end."""
     if not path.is_file():
         raise ValueError("is no plain file")
-    return pq.ParquetFile(path)
+    return pq.ParquetFile(pa.BufferReader(path.read_bytes()) if is_remote(path) else path)
 
 
 @contextlib.contextmanager

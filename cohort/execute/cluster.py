@@ -20,6 +20,7 @@ from typing import Any
 from cohort.errors import RunError
 from cohort.execute.progress import Progress
 from cohort.execute.tasks import Job, Narrower
+from cohort.stores import is_remote
 
 IN_FLIGHT_PER_THREAD = 2
 """Tasks handed out for each thread of a worker: enough to keep it busy, few enough to lose little with it."""
@@ -55,13 +56,17 @@ def reached(address: str, out: Path, mixed: bool) -> Iterator[Cluster]:
         token = out / f".seen-{os.getpid()}"
         token.write_text(hashlib.blake2b(str(out).encode()).hexdigest())
         try:
-            found = client.run(_look, str(token.resolve()), token.read_text())
+            found = client.run(_look, _absolute(token), token.read_text())
         finally:
             token.unlink(missing_ok=True)
         if not found:
             raise RunError(f"{address}: the scheduler has no workers; start some with `dask worker {address}`")
         _agree(found, mixed)
-        yield Cluster(client, sum(client.nthreads().values()), str(out.resolve()))
+        yield Cluster(client, sum(client.nthreads().values()), str(_absolute(out)))
+
+
+def _absolute(path: Path) -> Path:
+    return path if is_remote(path) else path.resolve()
 
 
 def traits() -> dict[str, str]:
@@ -73,10 +78,10 @@ def traits() -> dict[str, str]:
     return {**found, "kernels": kernel_identity() + detector_identity(), "processor": cpu_name()}
 
 
-def _look(token: str, wanted: str) -> dict[str, str]:
+def _look(token: Path, wanted: str) -> dict[str, str]:
     """On a worker: its traits, and whether it sees the run's folder."""
     try:
-        sees = Path(token).read_text() == wanted
+        sees = token.read_text() == wanted
     except OSError:
         sees = False
     return {**traits(), "sees": "yes" if sees else f"no (host {os.uname().nodename})"}

@@ -8,6 +8,7 @@ import shutil
 from pathlib import Path
 
 from cohort.errors import RunError
+from cohort.stores import is_remote
 from cohort.study import Plan
 from cohort.study.plan import size
 
@@ -16,7 +17,9 @@ RESERVE_BYTES = 200_000_000
 
 
 def free_bytes(out: Path) -> int:
-    """Free disk where a folder is, or will be."""
+    """Free disk where a folder is, or will be; without end in a store."""
+    if is_remote(out):
+        return 10**18
     place = out.absolute()
     while not os.path.exists(place):  # noqa: PTH110 -- Path.exists raises where a name is too long or a folder closed
         place = place.parent

@@ -34,6 +34,7 @@ from cohort.infer.salib import load as load_salib
 from cohort.model.catalogue import MODELS
 from cohort.quantities import PARAMETERS
 from cohort.reading import Maybe, misfit, read_json
+from cohort.stores import as_os_error, beating, holder_of, is_remote, myself, note, store_lock, watched_alive
 from cohort.study import Study, plan
 from cohort.study.plan import SHARD
 from cohort.tables import write_bytes
@@ -59,22 +60,21 @@ def run_study(
     scheduler: str | None = None,
     mixed: bool = False,
     only: tuple[int, int] | None = None,
+    lock: bool = True,
 ) -> Finished:
     """Simulate what is missing in `out` and write it there; what happens, and when, is added to `log`.
 
     scheduler: address of a dask.distributed cluster to do it on, whose workers may differ from this process where `mixed`;
-    only: (k, n), the k-th of n shares of the cohort's shards and nothing else, for job arrays, several at once.
+    only: (k, n), the k-th of n shares of the cohort's shards and nothing else, for job arrays, several at once;
+    lock: whether the folder is held against other runs (a store that cannot do it is refused otherwise).
     Raises StudyError where the folder holds another study, RunError where it cannot finish, KeyboardInterrupt when
     interrupted (also by SIGTERM); what is done stays."""
     workers = workers or os.cpu_count() or 1
     began = time.monotonic()
-    try:
-        out.mkdir(parents=True, exist_ok=True)
-    except OSError as error:
-        raise RunError(f"{out}: cannot be made: {_why(error)}") from None
+    _make(out)
     if only is not None:
         return _run_share(study, out, workers, shard_size, quiet, log, only, began)
-    with _locked(out), _terminable(), _hands(workers, scheduler, out, mixed) as hands:
+    with _locked(out, lock), _terminable(), _hands(workers, scheduler, out, mixed) as hands:
         before = _check_folder(study, out)
         record = _record(study, workers, shard_size, before)
         with _recorded(out, record):
@@ -87,6 +87,18 @@ def run_study(
             record["timings"] = {"seconds": round(seconds, 3), "runs": done}
             _write_record(out, record, "done")
     return Finished(out, done, kept, seconds)
+
+
+def _make(out: Path) -> None:
+    """The result folder; a store has none to make, and is asked whether it answers."""
+    try:
+        if is_remote(out):
+            with as_os_error():
+                out.fs.info(out.drive or out.path)  # type: ignore[attr-defined]
+        else:
+            out.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise RunError(f"{out}: cannot be made: {_why(error)}") from None
 
 
 def _run_share(
@@ -225,7 +237,7 @@ def _compile(study: Study) -> None:
 
 def _refuse_foreign(out: Path) -> None:
     """Before anything is written: a folder with other things in it and no record is somebody else's."""
-    other = [p.name for p in out.iterdir() if not p.name.startswith(".")]
+    other = [p.name for p in (out.iterdir() if out.exists() else ()) if not p.name.startswith(".")]
     if other and not (out / "run.json").exists():
         raise StudyError(
             [Problem("", f"holds {other[0]!r} and no run.json; name an empty folder with --out", str(out))]
@@ -233,28 +245,54 @@ def _refuse_foreign(out: Path) -> None:
 
 
 @contextlib.contextmanager
-def _locked(out: Path) -> Iterator[None]:
-    """Hold the folder for this process; the kernel lets go of it if the process dies. Raises RunError where another
-    run holds it."""
+def _locked(out: Path, lock: bool) -> Iterator[None]:
+    """Hold the folder for this process. Raises RunError where another run holds it.
+
+    On this host the kernel lets go of a lock if its process dies. On a disk that hosts share a lock of another host is watched:
+    one that counts on is alive.
+    """
+    _refuse_foreign(out)
+    if not lock:
+        yield
+    elif is_remote(out):
+        with store_lock(out):
+            yield
+    else:
+        with _flocked(out / ".lock", out):
+            yield
+
+
+@contextlib.contextmanager
+def _flocked(path: Path, out: Path) -> Iterator[None]:
     import fcntl
 
-    _refuse_foreign(out)
     try:
-        opened = (out / ".lock").open("a+")
+        opened = path.open("ab+")
     except OSError as error:
         raise RunError(f"{out}: {_why(error)}") from None
-    with opened as file:
+
+    def read() -> bytes:
+        opened.seek(0)
+        return opened.read()
+
+    def write(data: bytes) -> None:
+        opened.truncate(0)
+        opened.write(data)
+        opened.flush()
+
+    with opened:
         try:
-            fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+            fcntl.flock(opened, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except OSError:
-            file.seek(0)
-            holder = file.read().strip() or "another run"
-            raise RunError(f"{out}: {holder} is running in this folder") from None
-        file.truncate(0)
-        file.write(f"process {os.getpid()} on {platform.node()}")
-        file.flush()
-        yield
-        file.truncate(0)
+            raise RunError(f"{out}: {holder_of(read())} is running in this folder") from None
+        before = read()
+        elsewhere = before and not holder_of(before).endswith(f" on {platform.node()}")
+        if elsewhere and watched_alive(lambda: path.read_bytes(), before):
+            raise RunError(f"{out}: {holder_of(before)} is running in this folder")
+        write(note(myself(), 0))
+        with beating(write):
+            yield
+        opened.truncate(0)
 
 
 @contextlib.contextmanager

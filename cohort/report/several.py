@@ -17,6 +17,7 @@ from cohort.report.counting import EVERYONE, OSCILLATES
 from cohort.report.page import table_html
 from cohort.report.record import is_name, is_text
 from cohort.report.summary import CAUTION, rebuild
+from cohort.stores import is_remote
 from cohort.tables import COMPARISON, write_bytes, write_table
 
 SHOWN = {
@@ -28,6 +29,8 @@ SHOWN = {
 
 def is_several(folder: Path) -> bool:
     """Whether a folder holds one study in several models."""
+    if is_remote(folder):
+        return (folder / "models.json").exists()
     return os.path.isfile(folder / "models.json")  # noqa: PTH113 -- Path.is_file raises for names too long
 
 

@@ -12,14 +12,15 @@ import pytest
 ROOT = Path(__file__).resolve().parents[2]
 PACKAGE = ROOT / "cohort"
 
-FOUNDATION = {"errors", "quantities", "program", "compiled", "reading", "tables"}
+FOUNDATION = {"errors", "quantities", "program", "compiled", "reading", "stores", "tables"}
 MAY_IMPORT: dict[str, set[str]] = {
     "errors": set(),
     "quantities": set(),
     "program": set(),
     "compiled": {"program"},
     "reading": set(),
-    "tables": {"errors", "quantities", "reading"},
+    "stores": {"errors"},
+    "tables": {"errors", "quantities", "reading", "stores"},
     "model": {"errors", "quantities", "program", "compiled"},
     "simulate": {"errors", "quantities", "program", "compiled", "model"},
     "measure": {"errors", "quantities", "program", "compiled", "model", "simulate"},
@@ -28,9 +29,9 @@ MAY_IMPORT: dict[str, set[str]] = {
     "infer": {"errors", "quantities", "population", "tables"},
     "study": {"errors", "quantities", "reading", "program", "model", "population", "infer", "observe", "tables"},
     "execute": {*FOUNDATION, "model", "simulate", "measure", "observe", "population", "infer", "study"},
-    "report": {"errors", "quantities", "reading", "tables", "infer", "population", "observe", "model"},
-    "cli": {"errors", "study", "execute", "report", "observe"},
-    "__init__": {"errors", "simulate", "study", "execute", "report"},
+    "report": {"errors", "quantities", "reading", "stores", "tables", "infer", "population", "observe", "model"},
+    "cli": {"errors", "stores", "study", "execute", "report", "observe"},
+    "__init__": {"errors", "stores", "simulate", "study", "execute", "report"},
     "__main__": {"cli"},
 }
 ONLY_IN = {
