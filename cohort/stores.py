@@ -18,7 +18,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any, cast
 
-from cohort.errors import Problem, RunError, StudyError
+from cohort.errors import CohortError, Problem, RunError, StudyError
 
 BEAT_EVERY_S = 3.0
 STALE_AFTER_S = 15.0
@@ -62,7 +62,7 @@ def as_os_error() -> Iterator[None]:
     """What a store's client raises is an OSError with one line of words."""
     try:
         yield
-    except OSError:
+    except (OSError, CohortError):
         raise
     except Exception as error:
         raise OSError(f"{type(error).__name__}: {(str(error).splitlines() or [''])[0][:200]}") from None
@@ -82,7 +82,7 @@ class _Beat:
     def _run(self) -> None:
         while not self._over.wait(BEAT_EVERY_S):
             self._count += 1
-            with contextlib.suppress(OSError):
+            with contextlib.suppress(Exception):  # the next one may go through
                 self._write(note(self._holder, self._count))
 
     def __enter__(self) -> None:
