@@ -10,6 +10,7 @@ from __future__ import annotations
 import hashlib
 import io
 import os
+import secrets
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -225,7 +226,9 @@ def _parquet(table: pa.Table) -> bytes:
 def write_bytes(path: Path, data: bytes) -> None:
     """Write a file so that a crash leaves the old one or the new one: temporary, fsync, rename, fsync the folder."""
     path.parent.mkdir(parents=True, exist_ok=True)
-    temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
+    temporary = path.with_name(
+        f".{path.name}.{secrets.token_hex(4)}.tmp"
+    )  # two hosts may both have this process number
     try:
         with temporary.open("wb") as file:
             file.write(data)
