@@ -17,7 +17,7 @@ import platform
 import stat
 import sys
 import tempfile
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
 
@@ -43,20 +43,34 @@ _ROUNDER = 6755399441055744.0
 # ---- where compiled code is kept ---------------------------------------------------------------------------------
 
 
-def _digest_of(rooms: tuple[str, ...]) -> str:
-    digest = hashlib.blake2b(digest_size=16)
+KERNELS = ("program.py", "compiled.py", "model", "simulate", "measure", "population")
+"""Sources that a subject's numbers can depend on."""
+
+
+def _sources(rooms: tuple[str, ...]) -> Iterator[tuple[str, bytes]]:
     root = Path(__file__).parent
     for room in rooms:
         place = root / room
         for path in sorted(place.rglob("*.py")) if place.is_dir() else [place]:
-            digest.update(path.relative_to(root).as_posix().encode() + b"\0" + path.read_bytes())
+            yield path.relative_to(root).as_posix(), path.read_bytes()
+
+
+def _digest_of(rooms: tuple[str, ...]) -> str:
+    digest = hashlib.blake2b(digest_size=16)
+    for name, data in _sources(rooms):
+        digest.update(name.encode() + b"\0" + data)
     return digest.hexdigest()
 
 
 @functools.cache
 def kernel_identity() -> str:
     """A digest of every source that a subject's numbers can depend on."""
-    return _digest_of(("program.py", "compiled.py", "model", "simulate", "measure", "population"))
+    return _digest_of(KERNELS)
+
+
+def kernel_sources() -> dict[str, str]:
+    """A digest of each of those sources by name, so that a change can be named."""
+    return {name: hashlib.blake2b(data, digest_size=4).hexdigest() for name, data in _sources(KERNELS)}
 
 
 @functools.cache

@@ -12,6 +12,7 @@ import hashlib
 import io
 import os
 import re
+import secrets
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -246,8 +247,8 @@ def write_bytes(path: Path, data: bytes) -> None:
         put(path, data)
         return
     path.parent.mkdir(parents=True, exist_ok=True)
-    temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
-    temporary.unlink(missing_ok=True)  # what was planted there is not written through
+    # two hosts may both have this process number
+    temporary = path.with_name(f".{path.name}.{secrets.token_hex(4)}.tmp")
     try:
         with temporary.open("xb") as file:
             file.write(data)

@@ -9,6 +9,7 @@ from __future__ import annotations
 import contextlib
 import hashlib
 import os
+import secrets
 import sys
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
@@ -30,8 +31,8 @@ PACKAGES = ("numpy", "numba", "llvmlite", "pyarrow", "scipy", "dask", "distribut
 
 @dataclass(frozen=True)
 class Cluster:
-    """A scheduler that was reached, and whose workers agreed with this process; scope: the folder that its tasks write
-    into, part of their keys, since a scheduler takes tasks of one key for one task."""
+    """A scheduler that was reached, and whose workers agreed with this process; scope: this connection's own word, part of
+    its tasks' keys, since a scheduler takes tasks of one key for one task (those of a run that was cut off, too)."""
 
     client: Any
     threads: int
@@ -53,7 +54,7 @@ def reached(address: str, out: Path, mixed: bool) -> Iterator[Cluster]:
         why = str(error).splitlines()[0] if str(error) else type(error).__name__
         raise RunError(f"{address}: no scheduler could be reached there ({why})") from None
     with client:
-        token = out / f".seen-{os.getpid()}"
+        token = out / f".seen-{secrets.token_hex(4)}.tmp"
         token.write_text(hashlib.blake2b(str(out).encode()).hexdigest())
         try:
             found = client.run(_look, _absolute(token), token.read_text())
@@ -62,7 +63,7 @@ def reached(address: str, out: Path, mixed: bool) -> Iterator[Cluster]:
         if not found:
             raise RunError(f"{address}: the scheduler has no workers; start some with `dask worker {address}`")
         _agree(found, mixed)
-        yield Cluster(client, sum(client.nthreads().values()), str(_absolute(out)))
+        yield Cluster(client, sum(client.nthreads().values()), secrets.token_hex(8))
 
 
 def _absolute(path: Path) -> Path:
@@ -107,35 +108,35 @@ def _agree(found: dict[str, dict[str, str]], mixed: bool) -> None:
 
 
 def run_on(cluster: Cluster, jobs: Iterable[Job], progress: Progress | None) -> None:
-    """Do all jobs there, a window of them at a time. What a job raises ends the run; what is under way is cancelled."""
+    """Do all jobs there, a window of them at a time. What a job raises ends the run; what is under way is cancelled. Jobs
+    with which workers died are narrowed when all others are home: whoever dies then died of his own task."""
     from distributed import KilledWorker, as_completed
 
     left = iter(jobs)
-    names: dict[str, int] = {}
     sent: dict[str, Job] = {}
     waiting = as_completed([], loop=cluster.client.loop)
+    add = progress.add if progress else (lambda _: None)
 
     def send(number: int) -> None:
         for job in _taken(left, number):
             key = f"cohort-{hashlib.blake2b(f'{cluster.scope} {job.name}'.encode(), digest_size=12).hexdigest()}"
-            names[key], sent[key] = sum(piece.runs for piece in job.pieces), job
+            sent[key] = job
             waiting.add(cluster.client.submit(do_job, job, key=key, pure=False, retries=2))
 
-    futures: list[Any] = []
+    deadly: list[Job] = []
     try:
         send(IN_FLIGHT_PER_THREAD * max(cluster.threads, 1))
         for future in waiting:
-            futures.append(future)
+            job = sent.pop(future.key)
             try:
-                future.result()
+                add(future.result())
             except KilledWorker:
-                _narrowed(cluster, sent.pop(future.key))
-            sent.pop(future.key, None)
-            if progress:
-                progress.add(names.pop(future.key))
-            futures.remove(future)
+                deadly.append(job)
             future.release()
             send(1)
+        for job in deadly:
+            _narrowed(cluster, job)
+            add(runs_of(job))
     except BaseException:
         cluster.client.cancel(list(waiting.futures), force=True)
         raise
@@ -172,4 +173,9 @@ def _survivors(cluster: Cluster, narrower: Narrower, start: int, stop: int) -> A
 def do_job(job: Job) -> int:
     """One whole job in this process: every sub-batch, then the part. Returns its runs."""
     job.write([piece.make() for piece in job.pieces])
+    return runs_of(job)
+
+
+def runs_of(job: Job) -> int:
+    """How many runs a job makes."""
     return sum(piece.runs for piece in job.pieces)

@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 from numpy.typing import NDArray
 
-from cohort.execute.identity import arm_identity
+from cohort.execute.identity import courses_identity
 from cohort.execute.stages import times
 from cohort.measure.outcomes import with_own_periods
 from cohort.model.body import body
@@ -16,7 +16,7 @@ from cohort.model.protocol import Arm
 from cohort.population import draw
 from cohort.simulate.people import simulate_values
 from cohort.study import Study
-from cohort.tables import TIME_COURSES, Stamp, numbers, part_name, read_parts, write_part
+from cohort.tables import TIME_COURSES, Stamp, numbers, part_name, read_parts, verify_part, write_part
 
 SEEN = ("glucose_mg_dl", "insulin_mu_l", "secretion_mu_per_min", "release_mg_per_min")
 TYPICAL, BORDERLINE, EXTREME = range(3)
@@ -58,7 +58,7 @@ def choose(
 
 
 def keep_courses(study: Study, out: Path) -> None:
-    """Write time_courses/ of every arm; with none wanted, write nothing."""
+    """Write time_courses/ of every arm, where they are not there; with none wanted, write nothing."""
     if not study.output.time_courses:
         return
     for arm in study.arms:
@@ -74,23 +74,30 @@ def keep_courses(study: Study, out: Path) -> None:
 def _write(study: Study, out: Path, arm: Arm, rows: NDArray[np.int64], why: NDArray[np.int8]) -> None:
     if not len(rows):
         return
+    grid = times(arm.duration_min, study.output.every_min)
+    path = out / "time_courses" / arm.name / part_name(0)
+    stamp = Stamp(courses_identity(study, arm, rows, why, grid), 0, study.recipe.count)
+    if verify_part(path, TIME_COURSES, stamp):
+        return
+    sampled = _sampled(study, arm, rows, grid)
+    n = len(grid)
+    write_part(
+        path,
+        TIME_COURSES,
+        {
+            "subject": np.repeat(rows, n), "arm": arm.name, "why": np.repeat(why, n),
+            "time_min": np.tile(grid, len(rows)), **{name: sampled[:, i].ravel() for i, name in enumerate(SEEN)},
+        },
+        stamp,
+    )  # fmt: skip
+
+
+def _sampled(study: Study, arm: Arm, rows: NDArray[np.int64], grid: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Courses of the named subjects: float64[subjects, SEEN, grid]."""
     found = body(study.model)
     people = [draw(study.recipe, int(r), int(r) + 1) for r in rows]
     values = np.concatenate([p.values for p in people])
     own = np.ascontiguousarray(values[:, : len(found.card.parameters)])
     weight = np.concatenate([p.body_weight_kg for p in people])
-    grid = times(arm.duration_min, study.output.every_min)
     who = with_own_periods(found, own, People(weight, values[:, -2], values[:, -1], np.full(len(rows), np.nan)), arm)
-    course = simulate_values(found, own, who, arm, SEEN)
-    sampled = course.sample(grid)
-    n = len(grid)
-    columns = {name: sampled[:, i].ravel() for i, name in enumerate(SEEN)}
-    write_part(
-        out / "time_courses" / arm.name / part_name(0),
-        TIME_COURSES,
-        {
-            "subject": np.repeat(rows, n), "arm": arm.name, "why": np.repeat(why, n),
-            "time_min": np.tile(grid, len(rows)), **columns,
-        },
-        Stamp(arm_identity(study, arm, "time_courses"), 0, study.recipe.count),
-    )  # fmt: skip
+    return simulate_values(found, own, who, arm, SEEN).sample(grid)

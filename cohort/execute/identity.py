@@ -10,8 +10,9 @@ from dataclasses import fields, is_dataclass, replace
 from typing import Any
 
 import numpy as np
+from numpy.typing import NDArray
 
-from cohort.compiled import detector_identity, kernel_identity
+from cohort.compiled import detector_identity, kernel_identity, kernel_sources
 from cohort.infer.ranking import Design, Ranking
 from cohort.model.protocol import Arm
 from cohort.model.taylor import ORDER, TOLERANCE
@@ -78,6 +79,11 @@ def arm_identity(study: Study, arm: Arm, table: str) -> str:
     return _digest([table, subjects_identity(study), plain(arm), ORDER, TOLERANCE, plain(COLUMNS)])
 
 
+def courses_identity(study: Study, arm: Arm, *chosen: NDArray[Any]) -> str:
+    """Of an arm's kept courses: the arm's own identity, and who was chosen, why, and at which times."""
+    return _digest([arm_identity(study, arm, "time_courses"), plain(chosen)])
+
+
 def seen_identity(study: Study, arm: str, schedule: Schedule) -> str:
     """Of an arm's observations through one schedule: the arm's own identity, the schedule, errors and the rule."""
     assert study.sampling is not None
@@ -131,6 +137,23 @@ def first_difference(before: Mapping[str, str], now: Mapping[str, str], arms: se
             continue
         return key
     return None
+
+
+def changed_files(before: Mapping[str, Any], study: Study) -> str:
+    """In words, which of the study's data files and of the package's sources differ from those in a run's record. Raises
+    what a record of another shape raises."""
+    data = _unlike(before["files"], dict(study.files))
+    sources = _unlike(before.get("sources", {}), kernel_sources())
+    if data:
+        return f"another {', another '.join(data)}"
+    made = dict(before["versions"]).get("cohort", "?")
+    more = f" and {len(sources) - 3} more" if len(sources) > 3 else ""
+    unlike = f"another {', '.join(sources[:3])}{more}" if sources else "other defaults or columns"
+    return f"a version of this package (cohort {made}) with {unlike}"
+
+
+def _unlike(before: Mapping[str, str], now: Mapping[str, str]) -> list[str]:
+    return [name for name in sorted({*before, *now}) if before.get(name) != now.get(name)]
 
 
 def _schedules(settings: Mapping[str, str]) -> set[str]:

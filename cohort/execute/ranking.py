@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import functools
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -304,8 +304,3 @@ def _keys(stratum: RankedStratum, kind: str, doubling: int, replicate: Ints, blo
         "stratum": np.full(n, stratum.design.stratum, dtype=object), "kind": np.full(n, kind, dtype=object),
         "doubling": np.full(n, doubling, np.int64), "replicate": replicate, "block": block, "position": position,
     }  # fmt: skip
-
-
-def strays_of(out: Path) -> Iterator[Path]:
-    """Temporaries of a process that died."""
-    yield from (out / "ranking").glob(".*.tmp")

@@ -17,15 +17,16 @@ from importlib import metadata
 from pathlib import Path
 from typing import Any
 
+from cohort.compiled import kernel_sources
 from cohort.errors import CohortError, Problem, RunError, StudyError
 from cohort.execute.courses import keep_courses
 from cohort.execute.facts import arm_facts, fasting_facts, sampling_facts
-from cohort.execute.identity import arm_identity, first_difference, subjects_identity
+from cohort.execute.identity import arm_identity, changed_files, first_difference, subjects_identity
 from cohort.execute.limits import watch_disk
 from cohort.execute.maps import run_maps
 from cohort.execute.population import run_population
 from cohort.execute.progress import Progress
-from cohort.execute.ranking import run_ranking, slots_of, strays_of
+from cohort.execute.ranking import run_ranking, slots_of
 from cohort.execute.shards import Work, commit, missing, shards, strays
 from cohort.execute.stages import lost_rows, rows, warm
 from cohort.execute.tasks import Hands, Job, Narrower, Piece
@@ -79,8 +80,8 @@ def run_study(
         record = _record(study, workers, shard_size, before)
         with _recorded(out, record):
             _write_record(out, record, "running")
-            for path in (*strays(study, out, shard_size), *strays_of(out)):
-                path.unlink()
+            for path in strays(study, out, shard_size):
+                path.unlink(missing_ok=True)  # a worker of a run that died may still be at work on it
             with _progress(quiet, log) as progress:
                 done, kept = _all_runs(study, out, hands, shard_size, progress, record)
             seconds = time.monotonic() - began
@@ -337,18 +338,19 @@ def _check_folder(study: Study, out: Path) -> dict[str, Any]:
         if misfit(before, _BEFORE):
             raise ValueError("of another shape")
         settings, identities = before["settings"], before["identities"]
-        changed = first_difference(settings, study.settings, set(before["arms"]), study.recipe.draw)
-    except (ValueError, SyntaxError, OSError, RecursionError, MemoryError):
+        key = first_difference(settings, study.settings, set(before["arms"]), study.recipe.draw)
+        changed = changed_files(before, study)
+    except (ValueError, KeyError, TypeError, SyntaxError, OSError, RecursionError, MemoryError):
         raise StudyError([Problem("", "is not a run's record; name another folder with --out", str(path))]) from None
-    if changed:
-        raise StudyError([_refusal(changed, settings, study.settings, out)])
+    if key:
+        raise StudyError([_refusal(key, settings, study.settings, out)])
     if identities["subjects"] != subjects_identity(study) or any(
         identities["outcomes"].get(arm.name, now) != now
         for arm in study.arms
         for now in [arm_identity(study, arm, "outcomes")]
     ):
-        why = "holds results of other data files or of another version of this package"
-        raise StudyError([Problem("", f"{why}; name another folder with --out", str(out))])
+        raise StudyError([Problem("", f"holds results of {changed}; name another folder with --out, or go on with "
+                                      "what made them", str(out))])  # fmt: skip
     return before
 
 
@@ -391,6 +393,7 @@ def _record(study: Study, workers: int, shard_size: int, before: Mapping[str, An
         "study_texts": [*texts, study.text.decode("utf-8", "replace")],
         "files": dict(study.files),
         "versions": _versions(),
+        "sources": kernel_sources(),
         "plan": {"runs": found.runs, "shards": found.shards, "workers": workers},
     }
 

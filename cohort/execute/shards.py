@@ -81,11 +81,7 @@ def commit(study: Study, out: Path, work: Work, pieces: Sequence[dict[str, Value
 
 
 def strays(study: Study, out: Path, size: int = SHARD) -> list[Path]:
-    """Parts beyond the study's last shard, and temporaries of a process that died."""
+    """Parts beyond the study's last shard, and temporaries that a process which died left anywhere in the folder."""
     last = len(shards(study.recipe.count, size))
-    found = []
-    for table in tables(study):
-        folder = out / table.folder
-        found += [p for p in part_paths(folder) if p.name >= part_name(last)]
-        found += list(folder.glob(".*.tmp"))
-    return found
+    found = [p for table in tables(study) for p in part_paths(out / table.folder) if p.name >= part_name(last)]
+    return [*found, *out.rglob(".*.tmp")]
