@@ -105,11 +105,11 @@ def crossings(setting: Setting, name: str, low: float, high: float) -> Array:
     def at(x: float) -> float:
         return float(setting.growth((name,), np.array([[x]]))[0])
 
-    found = []
-    for i in np.flatnonzero(np.isfinite(growth[:-1] * growth[1:]) & (growth[:-1] * growth[1:] < 0.0)):
-        found.append(
-            brentq(at, scan[i], scan[i + 1], xtol=1e-13 * (high - low) if low <= 0.0 else 1e-13 * scan[i], rtol=1e-14)
-        )
+    changes = growth[:-1] * growth[1:]
+    found = [
+        brentq(at, scan[i], scan[i + 1], xtol=1e-13 * (high - low) if low <= 0.0 else 1e-13 * scan[i], rtol=1e-14)
+        for i in np.flatnonzero(np.isfinite(changes) & (changes < 0.0))
+    ]
     return np.array(found)
 
 
@@ -313,5 +313,5 @@ def _multilinear(form: Callable[..., Array], *vectors: Complex) -> Complex:
     total = np.zeros(len(vectors[0]), complex)
     for choice in range(2 ** len(vectors)):
         parts = [(v.imag if choice >> i & 1 else v.real) for i, v in enumerate(vectors)]
-        total = total + 1j ** bin(choice).count("1") * form(*parts)
+        total = total + 1j ** choice.bit_count() * form(*parts)
     return total

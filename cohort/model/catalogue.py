@@ -114,7 +114,7 @@ MODELS: dict[str, ModelCard] = {
                 *_LIMITS,
                 "Glucose leaves by its second way even where there is none: extreme bodies can run out of it (then "
                 "the row fails).",
-            ),  # fmt: skip
+            ),
         ),
     )
 }

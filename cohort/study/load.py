@@ -25,7 +25,6 @@ from cohort.study.selection import selection
 from cohort.study.spec import Output, Study
 from cohort.study.tree import DEEPEST, LARGEST_TEXT, Quantity, Tree, check, dotted, parse_value, read_toml
 
-_NAMED_LISTS = ("arms", "strata", "schedules")
 MOST_MODELS = 12
 MOST_COURSE_POINTS = 2_000_000_000
 

@@ -325,7 +325,10 @@ def test_foreign_folders_and_records_are_refused(tmp_path: Path) -> None:
 
 def test_a_second_run_in_the_folder_is_refused(tmp_path: Path) -> None:
     (tmp_path / "out").mkdir()
-    with running._locked(tmp_path / "out", True), pytest.raises(RunError, match=f"process {os.getpid()} on .* is running"):
+    with (
+        running._locked(tmp_path / "out", True),
+        pytest.raises(RunError, match=f"process {os.getpid()} on .* is running"),
+    ):
         run_study(study(tmp_path), tmp_path / "out", quiet=True)
 
 
