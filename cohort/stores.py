@@ -64,7 +64,7 @@ def as_os_error() -> Iterator[None]:
         yield
     except (OSError, CohortError):
         raise
-    except Exception as error:
+    except Exception as error:  # noqa: BLE001 - each client has kinds of its own
         raise OSError(f"{type(error).__name__}: {(str(error).splitlines() or [''])[0][:200]}") from None
 
 

@@ -11,7 +11,7 @@ runs of 10^6 and 2 x 10^6 subjects too (half an hour). FOLDER gets bench.json an
 from __future__ import annotations
 
 import argparse
-import datetime
+import datetime as dt
 import json
 import os
 import platform
@@ -129,7 +129,7 @@ def main() -> int:
     asked.add_argument("--full", action="store_true")
     asked.add_argument("--out", type=Path)
     options = asked.parse_args()
-    found: dict[str, Any] = {"date": datetime.date.today().isoformat(), "machine": machine()}
+    found: dict[str, Any] = {"date": dt.date.today().isoformat(), "machine": machine()}
     print(f"{found['date']}, {found['machine']}")
     w = Workload(400 if options.quick else 2000, SPREADS[0])
     found["rows"] = engine_rows(w) + other_rows(w)
@@ -306,7 +306,7 @@ def growth(options: argparse.Namespace) -> dict[str, Any]:
     """Seconds and peak memory of growing cohorts with two workers, and the line through them."""
     import numpy as np
 
-    counts = [1_000, 10_000] + [] if options.quick else [1_000, 10_000, 100_000] + [1_000_000] * options.full
+    counts = [1_000, 10_000] if options.quick else [1_000, 10_000, 100_000] + [1_000_000] * options.full
     measured = []
     with tempfile.TemporaryDirectory() as folder:
         path = one_arm(Path(folder))

@@ -54,7 +54,7 @@ def register(code: str, name: str) -> str:
             _check_names(found, card)
             made = bodies.make_body(card, found["equations"], found.get("at_rest"))
             _check(made)
-        except Exception as error:
+        except Exception as error:  # noqa: BLE001 - a user's code may raise anything
             for symbol in added:
                 PARAMETERS.pop(symbol)
             raise error if isinstance(error, OwnModelError) else OwnModelError(_said(error, code, name)) from None
@@ -67,7 +67,7 @@ def _run(code: str, name: str) -> dict[str, Any]:
     found: dict[str, Any] = {"exp": exp, "log": log, "__name__": name}
     try:
         exec(compile(code, name, "exec"), found)  # noqa: S102 - what --allow-model-code is for
-    except Exception as error:
+    except Exception as error:  # noqa: BLE001 - a user's code may raise anything
         raise OwnModelError(_said(error, code, name)) from None
     missing = [word for word in WANTED if word not in found]
     if missing:

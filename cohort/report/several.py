@@ -77,12 +77,12 @@ def _rows(name: str, summary: dict[str, Any]) -> list[tuple[Any, ...]]:
 def words(summary: dict[str, Any]) -> str:
     """The comparison for a terminal."""
     lines = [summary["title"], ""]
-    for name, one in summary["models"].items():
-        for row in _rows(name, one):
-            if row[1] == EVERYONE:
-                lines.append(
-                    f"{row[0]}, {name}: {100 * row[3]:.1f} % oscillate ({100 * row[4]:.1f} % to {100 * row[5]:.1f} %)"
-                )
+    lines += [
+        f"{arm}, {name}: {100 * share:.1f} % oscillate ({100 * low:.1f} % to {100 * high:.1f} %)"
+        for name, one in summary["models"].items()
+        for arm, who, _, share, low, high, *_ in _rows(name, one)
+        if who == EVERYONE
+    ]
     for name, lacking in summary["lacks"].items():
         if lacking:
             lines.append(f"{name} has no {', '.join(lacking)}: its people do not differ in that")

@@ -53,12 +53,13 @@ def server() -> Iterator[str]:
         os.environ.update(keys)
         import s3fs
 
-        for _ in range(150):
-            try:
-                s3fs.S3FileSystem(skip_instance_cache=True).mkdir(BUCKET)
-                break
-            except Exception:
-                time.sleep(0.2)
+        until = time.monotonic() + 60
+        while time.monotonic() < until:
+            with socket.socket() as asking:
+                if not asking.connect_ex(("127.0.0.1", port)):
+                    break
+            time.sleep(0.1)
+        s3fs.S3FileSystem(skip_instance_cache=True).mkdir(BUCKET)
         yield at
         running.terminate()
         for key, value in before.items():
