@@ -143,7 +143,9 @@ def test_workers_that_do_not_see_the_folder_are_told_apart_at_once(
     address: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     real = clusters._look
-    monkeypatch.setattr(clusters, "_look", lambda token, wanted: real(token + "-elsewhere", wanted))
+    monkeypatch.setattr(
+        clusters, "_look", lambda token, wanted: real(token.with_name(f"{token.name}-elsewhere"), wanted)
+    )
     with pytest.raises(RunError, match="do not see the result folder; --out must lie on a disk they share"):
         run_study(study(tmp_path), tmp_path / "out", quiet=True, scheduler=address)
     assert not list((tmp_path / "out").rglob("part-*"))

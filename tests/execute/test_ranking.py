@@ -165,10 +165,10 @@ def test_an_extension_reruns_nothing_and_equals_a_run_of_that_size(
     run(tmp_path)
     runs = 0
 
-    def counting(model, values, weight, arm):  # type: ignore[no-untyped-def]
+    def counting(model, values, weight, arm, responses):  # type: ignore[no-untyped-def]
         nonlocal runs
         runs += len(values)
-        return outcomes(model, values, weight, arm)
+        return outcomes(model, values, weight, arm, responses=responses)
 
     with monkeypatch.context() as patch:
         patch.setattr(ranking_room, "outcomes", counting)
@@ -229,8 +229,8 @@ def test_unresolved_runs_count_once_as_no_and_once_as_yes_and_many_refuse(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     def with_unresolved(every: int):  # type: ignore[no-untyped-def]
-        def made(model, values, weight, arm):  # type: ignore[no-untyped-def]
-            found = outcomes(model, values, weight, arm)
+        def made(model, values, weight, arm, responses):  # type: ignore[no-untyped-def]
+            found = outcomes(model, values, weight, arm, responses=responses)
             mark = (values[:, 6] * 1e6).astype(np.int64) % every == 0
             for name, code in (("oscillates", -1), ("regime", 4)):
                 column = found.outcomes[name]
@@ -258,8 +258,8 @@ def test_unresolved_runs_count_once_as_no_and_once_as_yes_and_many_refuse(
 def test_a_failed_run_refuses_and_says_where_it_lies(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """One missing output among thousands gives SALib's and SciPy's indices of exactly 0 without a word."""
 
-    def failing(model, values, weight, arm):  # type: ignore[no-untyped-def]
-        found = outcomes(model, values, weight, arm)
+    def failing(model, values, weight, arm, responses):  # type: ignore[no-untyped-def]
+        found = outcomes(model, values, weight, arm, responses=responses)
         mark = values[:, 6] == values[:, 6].max() if len(values) == 640 else np.zeros(len(values), bool)
         for name, code in (("regime", 5), ("oscillates", -1), ("failure", 0)):
             column = found.outcomes[name]
