@@ -141,7 +141,7 @@ def store_lock(out: Path) -> Iterator[None]:
     def read() -> bytes:
         try:
             return key.read_bytes()
-        except OSError:
+        except FileNotFoundError:
             return b""
 
     with as_os_error():
