@@ -120,12 +120,13 @@ def beating(write: Any) -> Iterator[None]:
 
 def watched_alive(read: Any, first: bytes) -> bool:
     """Whether the count in a lock moves within STALE_AFTER_S; read: a function that returns what it holds, b"" for none."""
-    until = time.monotonic() + STALE_AFTER_S
-    while time.monotonic() < until:
+    until, empty = time.monotonic() + STALE_AFTER_S, 0
+    while time.monotonic() < until and empty < 4:  # once it may be empty in the middle of being written
         time.sleep(BEAT_EVERY_S / 3)
         now = read()
-        if now != first:
-            return bool(now)
+        if now not in (first, b""):
+            return True
+        empty = 0 if now else empty + 1
     return False
 
 
